@@ -1,0 +1,1 @@
+"""Online: HTTP, access, the standing of each source, the store, metrics."""

@@ -1,0 +1,1 @@
+"""Offline: history in, survey, counts, tables, tree, levels, reports, the invented plant."""
