@@ -16,6 +16,8 @@ from training.history.cells import CellFile
 from training.history.columnar import ColumnarFile
 from training.history.delimited import DelimitedFile
 from training.history.files import find_files, is_parquet
+from training.history.long import LongReader
+from training.history.long_cells import is_long
 from training.history.options import BadHistory, HistoryOptions
 from training.history.tally import NO_OFFSET, Tally
 from training.history.wide import WideReader
@@ -40,21 +42,37 @@ def read_history(
     options: HistoryOptions,
     tally: Tally,
     progress: Advances | None = None,
+    *,
+    every_channel: bool = True,
 ) -> Iterator[HistoryBatch]:
     """Yield every row of a history as records, in the order of files and rows.
 
     Bad rows keep their place in the batches and are counted in the tally; whether there
     are too many is the caller's question (Tally.refuse_if_mostly_bad).
     progress: advanced by the bytes read on disk; history_n_bytes gives the total.
+    every_channel: refuse a long history in which a channel of the table never reports; a
+        wide file must always have a column for each.
     Raises BadHistory for files that cannot be read as a history of this channel table.
     """
     sources = SourceRegister()
+    long_reader = LongReader(table, options, sources, tally)
+    any_long = False
     for path in find_files(paths):
         file = open_cells(path, options)
         refuse_missing_time(file, options)
+        if is_long(file, options, table):
+            any_long = True
+            yield from _read_long(file, long_reader, progress)
+            continue
         refuse_missing_channels(file, [c.name for c in table.instruments])
         reader = WideReader(file, table.instruments, options, sources, tally)
         yield from _read_wide(file, reader, progress)
+    if any_long:
+        batch = long_reader.finish()
+        if batch is not None:
+            yield batch
+        if every_channel:
+            long_reader.refuse_absent()
 
 
 def _read_wide(
@@ -70,6 +88,20 @@ def _read_wide(
             yield batch
         if progress is not None:
             progress.advance(cells.n_bytes)
+
+
+def _read_long(
+    file: CellFile, reader: LongReader, progress: Advances | None
+) -> Iterator[HistoryBatch]:
+    first = True
+    for batch, problems, n_bytes in reader.read_file(file):
+        if first:
+            refuse_local_times(problems.reason, str(file.path))
+        first = False
+        if batch is not None:
+            yield batch
+        if progress is not None:
+            progress.advance(n_bytes)
 
 
 def open_cells(path: Path, options: HistoryOptions) -> CellFile:

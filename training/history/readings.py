@@ -15,6 +15,7 @@ Mask = NDArray[np.bool_]
 
 # What pyarrow's own parser takes, here for the cells of a column that it refuses as a whole.
 _NUMBER = r"^[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?$|^[+-]?(?i:nan|inf|infinity)$"
+_POINT_NUMBER = r"^[+-]?\d*\.\d+([eE][+-]?\d+)?$"
 _COMMA_NUMBER = r"^[+-]?\d*,\d+([eE][+-]?\d+)?$"
 
 
@@ -94,7 +95,7 @@ def _find_decimal(column: Any) -> str | None:
     """Return the decimal mark that most cells with one use, None if no cell has one."""
     cells = pc.utf8_trim_whitespace(column)
     n_commas = pc.sum(pc.match_substring_regex(cells, _COMMA_NUMBER)).as_py() or 0
-    n_points = pc.sum(pc.match_substring_regex(cells, r"^[+-]?\d*\.\d+")).as_py() or 0
+    n_points = pc.sum(pc.match_substring_regex(cells, _POINT_NUMBER)).as_py() or 0
     if n_commas == n_points:
         return None
     return "," if n_commas > n_points else "."

@@ -69,6 +69,7 @@ class WideReader:
             problems.add(*bad)
         values = self._read_values(cells, problems)
         values[problems.reason != ""] = np.nan
+        self._note_unusual(values)
         text = cells.columns[self._options.time] if self._options.keep_time_text else None
         return HistoryBatch(
             file=cells.file,
@@ -93,9 +94,7 @@ class WideReader:
         values = np.empty((len(cells.lines), len(self._instruments)))
         for i, channel in enumerate(self._instruments):
             if channel.is_state:
-                values[:, i], n_unknown = read_words(cells.columns[channel.name], channel.words)
-                if n_unknown:
-                    self._tally.unknown_words[channel.name] += n_unknown
+                values[:, i], _ = read_words(cells.columns[channel.name], channel.words)
             else:
                 values[:, i] = self._read_measurement(channel, cells, problems)
         return values
@@ -113,10 +112,18 @@ class WideReader:
                 problems.add(
                     int(row), reason, f"{channel.name!r} reads {column[int(row)].as_py()!r}"
                 )
-        n_outside = blank_outside_span(channel, numbers.values)
-        if n_outside:
-            self._tally.outside_span[channel.name] += n_outside
         return numbers.values
+
+    def _note_unusual(self, values: NDArray[np.float64]) -> None:
+        """Blank what is outside its span, and count it and the words not listed."""
+        for i, channel in enumerate(self._instruments):
+            n_outside = blank_outside_span(channel, values[:, i])
+            if n_outside:
+                self._tally.outside_span[channel.name] += n_outside
+            if channel.is_state:
+                n_unknown = np.count_nonzero(values[:, i] == len(channel.words))
+                if n_unknown:
+                    self._tally.unknown_words[channel.name] += int(n_unknown)
 
 
 def number_reader(file: CellFile, options: HistoryOptions) -> NumberReader:
