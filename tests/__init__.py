@@ -1,0 +1,1 @@
+"""Tests: one file per source file, and checks of the whole against things outside."""
