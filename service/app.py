@@ -1,0 +1,97 @@
+"""The application factory: routes, handlers, layers and lifespan, put together here."""
+
+from __future__ import annotations
+
+from collections.abc import AsyncIterator
+from contextlib import asynccontextmanager
+from importlib.metadata import PackageNotFoundError, version
+from typing import Any
+
+from fastapi import FastAPI
+from fastapi.exceptions import RequestValidationError
+from starlette.exceptions import HTTPException
+from starlette.requests import Request
+from starlette.responses import Response
+from starlette.types import ASGIApp
+
+from service.front import Front
+from service.openapi import describe
+from service.page import page_router
+from service.problems import Problem
+from service.routes_health import health_router
+from service.routes_read import read_router
+from service.routes_records import RecordsEndpoint
+from service.running import Service
+
+_KIND_OF_STATUS = {404: "not-found", 405: "bad-method"}
+
+
+def create_app(service: Service) -> ASGIApp:
+    """Return the ASGI app over an opened service; its lifespan starts and stops it."""
+
+    @asynccontextmanager
+    async def lifespan(_app: FastAPI) -> AsyncIterator[None]:
+        await service.start()
+        yield
+        await service.stop()
+
+    app = FastAPI(
+        title="oddbranch",
+        version=_version(),
+        lifespan=lifespan,
+        docs_url=None,
+        redoc_url=None,
+        openapi_url=None,
+    )
+    app.include_router(page_router(service))
+    app.include_router(read_router(service))
+    app.include_router(health_router(service))
+    _add_documents(app, service)
+    _add_handlers(app)
+    records = RecordsEndpoint(service)
+    return Front(app, service, {("POST", "/records"): records})
+
+
+def _version() -> str:
+    try:
+        return version("oddbranch")
+    except PackageNotFoundError:
+        return "0"
+
+
+def _add_documents(app: FastAPI, service: Service) -> None:
+    @app.get("/openapi.json", include_in_schema=False)
+    async def openapi() -> dict[str, Any]:
+        """Answer the description; it names the channels of the model in use."""
+        return describe(app, service)
+
+
+def _add_handlers(app: FastAPI) -> None:
+    @app.exception_handler(Problem)
+    async def on_problem(_request: Request, problem: Exception) -> Response:
+        assert isinstance(problem, Problem)
+        return _response(problem)
+
+    @app.exception_handler(Exception)
+    async def on_fault(_request: Request, _error: Exception) -> Response:
+        # The framework raises it again after this answer, and the front logs it.
+        return _response(Problem("internal", "the request could not be answered"))
+
+    @app.exception_handler(RequestValidationError)
+    async def on_bad_query(_request: Request, error: Exception) -> Response:
+        assert isinstance(error, RequestValidationError)
+        first = error.errors()[0]
+        name = str(first["loc"][-1])
+        return _response(Problem("bad-query", f"{name}: {first['msg']}"))
+
+    @app.exception_handler(HTTPException)
+    async def on_http(_request: Request, error: Exception) -> Response:
+        assert isinstance(error, HTTPException)
+        kind = _KIND_OF_STATUS.get(error.status_code, "bad-header")
+        response = _response(Problem(kind, str(error.detail)))
+        response.headers.update(error.headers or {})
+        return response
+
+
+def _response(problem: Problem) -> Response:
+    return Response(problem.as_bytes(), status_code=problem.status, headers=problem.headers())

@@ -1,0 +1,373 @@
+"""Numbers for Prometheus, one registry per app.
+
+The hot path adds to plain integers and arrays, a group at a time; a collector reads
+them when scraped. Names: prefix, noun, base unit; labels only where their number is
+bounded. The model's name is in one info metric only.
+"""
+
+from __future__ import annotations
+
+import threading
+import time
+from collections import Counter
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+from prometheus_client.core import (
+    CounterMetricFamily,
+    GaugeMetricFamily,
+    HistogramMetricFamily,
+    InfoMetricFamily,
+    Metric,
+)
+from prometheus_client.registry import CollectorRegistry
+
+from service.engine import ALERT_WORDS, Engine
+from service.pipeline import CONFLICT, KNOWN, NO_ROOM, STORED, Job, Outcome
+from service.store.tables import FLAG_AHEAD, FLAG_LATE, FLAG_NOT_JUDGED
+
+# Edges around what a request should take: a single one some ms, a batch some ten.
+_SECONDS = (0.001, 0.0025, 0.005, 0.01, 0.025, 0.05, 0.1, 0.25, 0.5, 1.0, 2.5, 5.0, 10.0)
+_RECORDS = (1.0, 2.0, 5.0, 10.0, 25.0, 50.0, 100.0, 250.0, 500.0, 1000.0, 2500.0, 10000.0)
+# Excess rests near zero; levels usually lie between 5 and 50 nats.
+_NATS = (-5.0, -2.0, 0.0, 2.0, 5.0, 10.0, 15.0, 20.0, 30.0, 50.0, 100.0, 200.0)
+# Unknown paths would each be a label value of their own.
+OTHER_ROUTE = "other"
+
+
+class Histogram:
+    """Counts between fixed edges; `add` takes one value, `add_many` an array."""
+
+    def __init__(self, edges: Sequence[float]) -> None:
+        self.edges = np.array(edges)
+        self._edge_list = list(edges)
+        self.counts = [0] * (len(edges) + 1)
+        self.sum = 0.0
+
+    def add(self, value: float) -> None:
+        """Count one value."""
+        place = 0
+        for edge in self._edge_list:
+            if value <= edge:
+                break
+            place += 1
+        self.counts[place] += 1
+        self.sum += value
+
+    def add_many(self, values: NDArray[np.float64]) -> None:
+        """Count finite values."""
+        places = np.searchsorted(self.edges, values, side="left")
+        counted = np.bincount(places, minlength=len(self.counts)).tolist()
+        self.counts = [old + new for old, new in zip(self.counts, counted, strict=True)]
+        self.sum += float(values.sum())
+
+    def buckets(self) -> list[tuple[str, float]]:
+        """Return cumulative counts by upper edge, as the text format wants them."""
+        total, found = 0, []
+        for edge, count in zip([*self._edge_list, float("inf")], self.counts, strict=True):
+            total += count
+            found.append(("+Inf" if edge == float("inf") else repr(edge), float(total)))
+        return found
+
+
+class SourceTally:
+    """What is kept of one source for the scrape."""
+
+    __slots__ = ("last_ns", "n_over_level", "sustained")
+
+    def __init__(self) -> None:
+        self.last_ns, self.n_over_level, self.sustained = 0, 0, float("nan")
+
+
+class Metrics:
+    """All numbers of one app.
+
+    per_source: whether a source is a label. n_sources_max: above this many sources
+    the per-source numbers are summed under the label "all".
+    """
+
+    def __init__(self, *, per_source: bool = True, n_sources_max: int = 1000) -> None:
+        self.per_source, self.n_sources_max = per_source, n_sources_max
+        self.registry = CollectorRegistry()
+        self.registry.register(_Collector(self))
+        self._lock = threading.Lock()
+        self.outcomes: Counter[str] = Counter()
+        self.requests: Counter[tuple[str, str, str]] = Counter()
+        self.request_seconds: dict[str, Histogram] = {}
+        self.scoring_seconds = Histogram(_SECONDS)
+        self.commit_seconds = Histogram(_SECONDS)
+        self.batch_records = Histogram(_RECORDS)
+        self.group_records = Histogram(_RECORDS)
+        self.excess = Histogram(_NATS)
+        self.over_level: Counter[str] = Counter()
+        self.suspects: Counter[str] = Counter()
+        self.n_readings, self.missing = 0, Counter[str]()
+        self.sources: dict[str, SourceTally] = {}
+        self.store_failures = 0
+        self.reloads: Counter[str] = Counter()
+        # Read when scraped; filled in by the app.
+        self.gauges: Callable[[], Mapping[str, float]] = dict
+        self.engine: Callable[[], Engine | None] = lambda: None
+        self.alerts: Callable[[], Mapping[tuple[str, str], int]] = dict
+
+    def request_done(self, route: str, method: str, status: int, seconds: float) -> None:
+        """Count one answered request; called on the loop."""
+        self.requests[route, method, str(status)] += 1
+        histogram = self.request_seconds.get(route)
+        if histogram is None:
+            histogram = self.request_seconds[route] = Histogram(_SECONDS)
+        histogram.add(seconds)
+
+    def refused(self, n_records: int) -> None:
+        """Count items that could not be read; called on the loop."""
+        with self._lock:
+            self.outcomes["refused"] += n_records
+
+    def group_done(
+        self, jobs: Sequence[Job], outcomes: Sequence[Outcome], scoring_s: float, commit_s: float
+    ) -> None:
+        """Count one stored group; called by the writer."""
+        with self._lock:
+            self.scoring_seconds.add(scoring_s)
+            self.commit_seconds.add(commit_s)
+            n_records = 0
+            for job, outcome in zip(jobs, outcomes, strict=True):
+                n_records += len(outcome.status)
+                self._count(job, outcome)
+            self.group_records.add(float(n_records))
+
+    def _count(self, job: Job, outcome: Outcome) -> None:
+        batch, scored = job.batch, outcome.scored
+        self.batch_records.add(float(batch.n_items))
+        stored = outcome.status == STORED
+        n_stored = int(np.count_nonzero(stored))
+        if n_stored < len(stored):
+            for status, word in ((KNOWN, "known"), (CONFLICT, "conflict"), (NO_ROOM, "no_room")):
+                self.outcomes[word] += int(np.count_nonzero(outcome.status == status))
+        if not n_stored:
+            return
+        late = int(np.count_nonzero(stored & (outcome.flags & FLAG_LATE > 0)))
+        ahead = int(np.count_nonzero(stored & (outcome.flags & FLAG_AHEAD > 0)))
+        unjudged = int(np.count_nonzero(stored & (outcome.flags & FLAG_NOT_JUDGED > 0)))
+        self.outcomes["late"] += late
+        self.outcomes["ahead"] += ahead
+        self.outcomes["stored"] += n_stored - late - ahead
+        self.outcomes["not_judged"] += unjudged
+        if n_stored < len(stored):
+            excess, values = scored.excess[stored], batch.values[stored]
+        else:
+            excess, values = scored.excess, batch.values
+        judged = excess[~np.isnan(excess)]
+        if len(judged) == 1:
+            self.excess.add(float(judged[0]))
+        elif len(judged):
+            self.excess.add_many(judged)
+        self._count_missing(values, batch.layout.names)
+        self._count_alerts(batch.sources, batch.layout.names, outcome, stored)
+        self._count_sources(batch.sources, batch.times_ns, outcome, stored)
+
+    def _count_missing(self, values: NDArray[np.float64], names: Sequence[str]) -> None:
+        self.n_readings += values.size
+        absent = np.isnan(values)
+        if absent.any():
+            by_column = np.count_nonzero(absent, axis=0).tolist()
+            for name, n_absent in zip(names, by_column, strict=True):
+                if n_absent:
+                    self.missing[name] += n_absent
+
+    def _count_alerts(
+        self,
+        sources: Sequence[str],
+        names: Sequence[str],
+        outcome: Outcome,
+        stored: NDArray[np.bool_],
+    ) -> None:
+        over = np.flatnonzero((outcome.scored.alert > 0) & stored)
+        for row in over.tolist():
+            self.over_level[str(ALERT_WORDS[int(outcome.scored.alert[row])])] += 1
+            self.source(sources[row]).n_over_level += 1
+            column = int(outcome.scored.suspect[row])
+            if column >= 0:
+                self.suspects[names[column]] += 1
+
+    def _count_sources(
+        self,
+        sources: Sequence[str],
+        times_ns: NDArray[np.int64],
+        outcome: Outcome,
+        stored: NDArray[np.bool_],
+    ) -> None:
+        still = outcome.flags & (FLAG_LATE | FLAG_AHEAD) > 0
+        if still.any() or not stored.all():
+            moved: Iterable[int] = np.flatnonzero(stored & ~still).tolist()
+        else:
+            moved = range(len(sources))
+        # The last row of each source is what the scrape shows.
+        last = {sources[row]: row for row in moved}
+        for name, row in last.items():
+            tally = self.source(name)
+            tally.last_ns = max(tally.last_ns, int(times_ns[row]))
+            tally.sustained = float(outcome.scored.sustained[row])
+
+    def source(self, name: str) -> SourceTally:
+        """Return the tally of one source."""
+        tally = self.sources.get(name)
+        if tally is None:
+            tally = self.sources[name] = SourceTally()
+        return tally
+
+
+class _Collector:
+    """Turns the tallies into metric families when scraped."""
+
+    def __init__(self, metrics: Metrics) -> None:
+        self.metrics = metrics
+
+    def describe(self) -> list[Metric]:
+        """Return nothing, so that registering does not collect."""
+        return []
+
+    def collect(self) -> Iterator[Metric]:
+        """Yield every family."""
+        m = self.metrics
+        yield from self._records(m)
+        yield from self._times(m)
+        yield from self._sources(m)
+        yield from self._model(m)
+        for name, value in m.gauges().items():
+            yield GaugeMetricFamily(f"oddbranch_{name}", _GAUGE_HELP[name], value=value)
+
+    @staticmethod
+    def _records(m: Metrics) -> Iterator[Metric]:
+        yield _counter("records", "Records by what became of them.", "outcome", m.outcomes)
+        yield _counter(
+            "records_over_level", "Records over a level, by the level's kind.", "kind", m.over_level
+        )
+        yield _counter("suspects", "Records over a level by their suspect.", "channel", m.suspects)
+        yield _counter("missing_readings", "Readings that were absent.", "channel", m.missing)
+        yield CounterMetricFamily(
+            "oddbranch_readings", "Readings that could have come.", value=m.n_readings
+        )
+        yield _histogram("excess_nats", "Excess of judged records.", m.excess)
+        yield _histogram(
+            "batch_records", "Items in a body or a piece of a stream.", m.batch_records
+        )
+        yield _histogram("group_records", "Records stored by one commit.", m.group_records)
+        alerts = GaugeMetricFamily(
+            "oddbranch_alerts", "Alerts by state and kind.", labels=["state", "kind"]
+        )
+        for (state, kind), n_alerts in sorted(m.alerts().items()):
+            alerts.add_metric([state, kind], n_alerts)
+        yield alerts
+
+    @staticmethod
+    def _times(m: Metrics) -> Iterator[Metric]:
+        requests = CounterMetricFamily(
+            "oddbranch_requests", "Answered requests.", labels=["route", "method", "status"]
+        )
+        for labels, n_requests in sorted(m.requests.items()):
+            requests.add_metric(list(labels), n_requests)
+        yield requests
+        seconds = HistogramMetricFamily(
+            "oddbranch_request_seconds", "Time from a request to its answer.", labels=["route"]
+        )
+        for route, histogram in sorted(m.request_seconds.items()):
+            seconds.add_metric([route], histogram.buckets(), histogram.sum)
+        yield seconds
+        yield _histogram("scoring_seconds", "Time to score and insert a group.", m.scoring_seconds)
+        yield _histogram("commit_seconds", "Time to make a group durable.", m.commit_seconds)
+        yield CounterMetricFamily(
+            "oddbranch_store_failures", "Groups that could not be stored.", value=m.store_failures
+        )
+        yield _counter("model_reloads", "Models picked up or refused.", "outcome", m.reloads)
+
+    @staticmethod
+    def _sources(m: Metrics) -> Iterator[Metric]:
+        over = CounterMetricFamily(
+            "oddbranch_source_records_over_level", "Records over a level.", labels=["source"]
+        )
+        last = GaugeMetricFamily(
+            "oddbranch_source_last_record_timestamp_seconds",
+            "Time of the newest record in the standing.",
+            labels=["source"],
+        )
+        sustained = GaugeMetricFamily(
+            "oddbranch_source_sustained_nats", "Sustained excess.", labels=["source"]
+        )
+        tallies = dict(m.sources)
+        if m.per_source and len(tallies) <= m.n_sources_max:
+            for name, tally in tallies.items():
+                over.add_metric([name], tally.n_over_level)
+                if tally.last_ns:
+                    last.add_metric([name], tally.last_ns / 1e9)
+                    sustained.add_metric([name], tally.sustained)
+        elif tallies:
+            over.add_metric(["all"], sum(tally.n_over_level for tally in tallies.values()))
+            last.add_metric(["all"], max(tally.last_ns for tally in tallies.values()) / 1e9)
+        yield over
+        yield last
+        yield sustained
+        yield GaugeMetricFamily("oddbranch_sources", "Sources known.", value=len(tallies))
+
+    @staticmethod
+    def _model(m: Metrics) -> Iterator[Metric]:
+        engine = m.engine()
+        level = GaugeMetricFamily(
+            "oddbranch_level_nats", "Value from which an alert is raised.", labels=["kind"]
+        )
+        info = InfoMetricFamily("oddbranch_model", "The model in use.")
+        if engine is not None:
+            for kind, value in engine.levels.items():
+                level.add_metric([kind], value)
+            info.add_metric([], {"model": engine.name})
+        yield level
+        yield info
+        if engine is None:
+            return
+        for key, help_text in _ABOUT_HELP.items():
+            figure = _figure(engine.about, key)
+            if figure is not None:
+                yield GaugeMetricFamily(f"oddbranch_{key}", help_text, value=figure)
+
+
+_GAUGE_HELP = {
+    "store_size_bytes": "Size of the store on disk.",
+    "store_free_bytes": "Free space on the store's disk.",
+    "queue_records": "Records that wait for their commit.",
+    "body_memory_bytes": "Bodies held in memory.",
+    "start_timestamp_seconds": "When the service started.",
+}
+# Figures that a model may carry about itself, by the name of their metric.
+_ABOUT_HELP = {
+    "model_created_timestamp_seconds": "When the model was learned.",
+    "model_held_out_density_nats": "Held-out log density per record and unit.",
+    "alarm_budget_alerts_per_day": "Alerts a day that the crew can follow up.",
+    "model_expected_alerts_per_day": "Alerts a day that the model expects.",
+}
+
+
+def _figure(about: Mapping[str, Any], key: str) -> float | None:
+    value = about.get(key.removeprefix("model_"), about.get(key))
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        return None
+    return float(value)
+
+
+def _counter(name: str, help_text: str, label: str, counts: Mapping[str, int]) -> Metric:
+    family = CounterMetricFamily(f"oddbranch_{name}", help_text, labels=[label])
+    for value, count in sorted(dict(counts).items()):
+        family.add_metric([value], count)
+    return family
+
+
+def _histogram(name: str, help_text: str, histogram: Histogram) -> Metric:
+    return HistogramMetricFamily(
+        f"oddbranch_{name}", help_text, buckets=histogram.buckets(), sum_value=histogram.sum
+    )
+
+
+def now_s() -> float:
+    """Return the wall clock in seconds."""
+    return time.time()

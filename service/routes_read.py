@@ -1,0 +1,270 @@
+"""The pages: records, alerts, sources, the model, what was pruned."""
+
+# No postponed annotations here: the framework reads them, and they hold values of this app.
+
+import asyncio
+import base64
+import binascii
+from collections.abc import AsyncIterator, Callable
+from functools import partial
+from typing import Annotated, Any, TypeVar
+
+import orjson
+import sqlalchemy as sa
+from fastapi import APIRouter, Header, Query, Response
+from starlette.responses import StreamingResponse
+
+from service.answers import stored_answer
+from service.engine import ALERT_WORDS
+from service.problems import Problem
+from service.running import Service
+from service.schemas import (
+    ADVICE,
+    TIME_EXAMPLE,
+    AlertsPage,
+    ModelPage,
+    PrunedPage,
+    RecordsPage,
+    SourcesPage,
+)
+from service.store import pages
+from service.store.states import StoredRecord
+from service.times import format_time, parse_time
+
+T = TypeVar("T")
+
+SourceQuery = Annotated[
+    str | None,
+    Query(
+        description="name of the source, no unit",
+        examples=["mill-lane-2"],
+        min_length=1,
+        max_length=200,
+    ),
+]
+FromQuery = Annotated[
+    str | None,
+    Query(alias="from", description="first time, RFC 3339 with offset", examples=[TIME_EXAMPLE]),
+]
+ToQuery = Annotated[
+    str | None,
+    Query(
+        alias="to",
+        description="time after the last, RFC 3339 with offset",
+        examples=["2026-12-02T00:00:00Z"],
+    ),
+]
+AfterQuery = Annotated[
+    str | None,
+    Query(description="`next` of the page before, no unit", max_length=2000),
+]
+
+
+def read_router(service: Service) -> APIRouter:
+    """Return the routes that read the store and the model."""
+    router = APIRouter()
+    n_page = service.settings.limits.n_page
+    limit_query = Query(description="items at most, count", ge=1, le=n_page, examples=[100])
+    layouts = _Layouts()
+
+    async def in_thread(read: Callable[[sa.Connection], T]) -> T:
+        def run() -> T:
+            with service.database.read.connect() as connection:
+                return read(connection)
+
+        return await asyncio.to_thread(run)
+
+    @router.get(
+        "/records",
+        responses=_page(RecordsPage) | {200: {
+            "model": RecordsPage,
+            "content": {"application/x-ndjson": {"schema": {"type": "string"}}},
+        }},
+        summary="Stored records by source and time",
+    )  # fmt: skip
+    async def records(
+        source: SourceQuery = None,
+        from_: FromQuery = None,
+        to: ToQuery = None,
+        limit: Annotated[int, limit_query] = 100,
+        after: AfterQuery = None,
+        newest: Annotated[
+            bool, Query(description="newest first, no unit", examples=[True])
+        ] = False,
+        accept: Annotated[str | None, Header(include_in_schema=False)] = None,
+    ) -> Response:
+        """Answer stored records with their readings and scores.
+
+        With `Accept: application/x-ndjson` all of them come, a line each, and `limit`
+        is how many are read at a time.
+        """
+        bounds = _time("from", from_), _time("to", to)
+
+        def read(
+            connection: sa.Connection, *, at: tuple[int, int] | None
+        ) -> tuple[list[dict[str, Any]], tuple[int, int] | None]:
+            found, following = pages.records_page(
+                connection, source=source, from_ns=bounds[0], to_ns=bounds[1],
+                newest_first=newest, limit=limit, after=at,
+            )  # fmt: skip
+            return layouts.answers(connection, found), following
+
+        at = _pair(after)
+        if accept is not None and "application/x-ndjson" in accept:
+
+            async def lines() -> AsyncIterator[bytes]:
+                place = at
+                while True:
+                    items, place = await in_thread(partial(read, at=place))
+                    yield b"".join(
+                        orjson.dumps(item, option=orjson.OPT_APPEND_NEWLINE) for item in items
+                    )
+                    if place is None:
+                        return
+
+            return StreamingResponse(lines(), media_type="application/x-ndjson")
+        items, following = await in_thread(partial(read, at=at))
+        return _answer({"items": items, "next": _cursor(following)})
+
+    @router.get(
+        "/alerts", responses=_page(AlertsPage), summary="Records over a level, newest first"
+    )
+    async def alerts(
+        source: SourceQuery = None,
+        from_: FromQuery = None,
+        to: ToQuery = None,
+        limit: Annotated[int, limit_query] = 100,
+        after: AfterQuery = None,
+    ) -> Response:
+        """Answer records that passed a level."""
+        bounds, at = (_time("from", from_), _time("to", to)), _pair(after)
+
+        def read(
+            connection: sa.Connection,
+        ) -> tuple[list[dict[str, Any]], tuple[int, int] | None]:
+            found, following = pages.alerts_page(
+                connection, source=source, from_ns=bounds[0], to_ns=bounds[1], limit=limit, after=at
+            )
+            return layouts.answers(connection, found), following
+
+        items, following = await in_thread(read)
+        return _answer({"items": items, "next": _cursor(following), "advice": ADVICE})
+
+    @router.get("/sources", responses=_page(SourcesPage), summary="Sources and their standing")
+    async def sources(
+        limit: Annotated[int, limit_query] = 100, after: AfterQuery = None
+    ) -> Response:
+        """Answer every source by name."""
+        at = _name(after)
+        rows, following = await in_thread(lambda c: pages.sources_page(c, limit=limit, after=at))
+        items = [source_item(row, service) for row in rows]
+        return _answer({"items": items, "next": _cursor(following)})
+
+    @router.get("/model", responses=_page(ModelPage), summary="The model in use")
+    async def model(source: SourceQuery = None) -> Response:
+        """Answer the model as it is for one source, or for the fleet."""
+        return _answer({"items": [service.engine.describe(source)], "next": None})
+
+    @router.get("/pruned", responses=_page(PrunedPage), summary="What retention took out")
+    async def pruned(
+        limit: Annotated[int, limit_query] = 100, after: AfterQuery = None
+    ) -> Response:
+        """Answer when, why and how many records went."""
+        at = _pair(after)
+        rows, following = await in_thread(
+            lambda c: pages.pruned_page(c, limit=limit, after=at[0] if at else None)
+        )
+        items = [
+            {"at": format_time(row["at_ns"]), "reason": row["reason"],
+             "before": format_time(row["before_ns"]), "records": row["n_records"]}
+            for row in rows
+        ]  # fmt: skip
+        return _answer(
+            {"items": items, "next": _cursor(None if following is None else (following, 0))}
+        )
+
+    return router
+
+
+def source_item(row: dict[str, Any], service: Service) -> dict[str, Any]:
+    """Return a source's row as its page shows it."""
+    return {
+        "source": row["name"],
+        "records": row["n_records"],
+        "over_level": row["n_over_level"],
+        "last": format_time(row["last_ns"]) if row["last_ns"] >= 0 else None,
+        "model": row["model"],
+        "member": service.engine.member(row["name"]),
+        "excess": row["excess"],
+        "sustained": row["sustained"],
+        "alert": ALERT_WORDS[row["alert"]],
+    }
+
+
+class _Layouts:
+    """Stored layouts by id; they never change once written."""
+
+    def __init__(self) -> None:
+        self._known: dict[int, tuple[str, list[dict[str, Any]]]] = {}
+
+    def answers(
+        self, connection: sa.Connection, records: list[StoredRecord]
+    ) -> list[dict[str, Any]]:
+        found = []
+        for record in records:
+            if record.layout_id not in self._known:
+                model, channels = pages.layout_of(connection, record.layout_id)
+                self._known[record.layout_id] = model, orjson.loads(channels)
+            model, channels_ = self._known[record.layout_id]
+            found.append(stored_answer(record, channels_, model))
+        return found
+
+
+def _page(model: type[Any]) -> dict[int | str, dict[str, Any]]:
+    return {200: {"model": model}}
+
+
+def _answer(body: dict[str, Any]) -> Response:
+    return Response(orjson.dumps(body), media_type="application/json")
+
+
+def _time(name: str, text: str | None) -> int | None:
+    if text is None:
+        return None
+    try:
+        # A plus sign in a query is read as a space.
+        return parse_time(text[:19] + text[19:].replace(" ", "+"))
+    except ValueError as error:
+        raise Problem("bad-query", f"{name} = {text[:60]!r} {error}") from None
+
+
+def _cursor(place: tuple[int, int] | str | None) -> str | None:
+    if place is None:
+        return None
+    return base64.urlsafe_b64encode(orjson.dumps(place)).decode().rstrip("=")
+
+
+def _place(after: str) -> Any:
+    try:
+        return orjson.loads(base64.urlsafe_b64decode(after + "=" * (-len(after) % 4)))
+    except (ValueError, binascii.Error):
+        raise Problem("bad-query", "after is not the `next` of a page before") from None
+
+
+def _pair(after: str | None) -> tuple[int, int] | None:
+    if after is None:
+        return None
+    place = _place(after)
+    whole = isinstance(place, list) and len(place) == 2
+    if not whole or not all(type(n) is int and abs(n) < 2**63 for n in place):
+        raise Problem("bad-query", "after is not the `next` of a page before")
+    return place[0], place[1]
+
+
+def _name(after: str | None) -> str | None:
+    if after is None:
+        return None
+    place = _place(after)
+    if not isinstance(place, str) or "\x00" in place:
+        raise Problem("bad-query", "after is not the `next` of a page before")
+    return place

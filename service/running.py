@@ -1,0 +1,137 @@
+"""What lives as long as the service: store, writer, model, tokens, background work."""
+
+from __future__ import annotations
+
+import asyncio
+import shutil
+import time
+from collections.abc import Callable, Coroutine
+from pathlib import Path
+from typing import Any
+
+from service.access import Tokens, is_loopback
+from service.engine import Engine
+from service.logs import log_event
+from service.metrics import Metrics
+from service.pipeline import AlertSink, NoAlerts
+from service.reload import ModelWatch
+from service.retention import Retention
+from service.settings import Settings
+from service.store.database import Database
+from service.writer import Writer
+
+# A token made or ended is in force after this long at most.
+_TOKEN_REFRESH_S = 2.0
+
+
+class Service:
+    """Everything that routes need. Open it, start it on a loop, stop it.
+
+    load: turns a model directory into an engine. clock_ns: wall clock, for tests.
+    """
+
+    def __init__(
+        self,
+        settings: Settings,
+        load: Callable[[Path], Engine],
+        *,
+        sink: AlertSink | None = None,
+        clock_ns: Callable[[], int] = time.time_ns,
+    ) -> None:
+        self.settings = settings
+        self.clock_ns = clock_ns
+        self.started_s = time.time()
+        store = settings.store
+        self.database = Database(
+            store.data, store.url.get_secret_value(), max_pages=store.max_pages
+        )
+        self.metrics = Metrics(
+            per_source=settings.metrics.per_source, n_sources_max=settings.metrics.n_sources
+        )
+        self.tokens = Tokens(open_without=is_loopback(settings.server.host))
+        self.models = ModelWatch(settings.model.path, load, self.metrics)
+        self.writer = Writer(
+            self.database,
+            self.metrics,
+            sink or NoAlerts(),
+            n_waiting_max=settings.limits.n_waiting,
+            n_sources_max=settings.limits.n_sources,
+            clock_ns=clock_ns,
+        )
+        self.retention = Retention(self.database, self.writer, settings.store, clock_ns)
+        self.n_body_bytes = 0
+        self._tasks: list[asyncio.Task[None]] = []
+
+    @property
+    def engine(self) -> Engine:
+        """The model in use."""
+        return self.models.engine
+
+    def open(self) -> None:
+        """Take the store and load the model; raises OddbranchError with the reason."""
+        self.database.lock()
+        try:
+            self.database.migrate()
+            self.database.load_states()
+            with self.database.read.connect() as connection:
+                self.tokens.read(connection)
+            self.models.load_first()
+        except BaseException:
+            self.database.close()
+            raise
+        for name, last_ns, n_over_level, sustained in self.database.loaded_sources():
+            tally = self.metrics.source(name)
+            tally.last_ns, tally.n_over_level, tally.sustained = last_ns, n_over_level, sustained
+        self.metrics.gauges = self._gauges
+        self.metrics.engine = lambda: self.models.engine
+
+    async def start(self) -> None:
+        """Start the writer and the background work on the running loop."""
+        self.writer.start(asyncio.get_running_loop())
+        self._every(self.settings.model.reload_s, self.models.look)
+        self._every(self.settings.store.prune_s, self.retention.prune)
+        self._every(_TOKEN_REFRESH_S, self._read_tokens)
+        log_event("started", store=self.database.where, model=self.engine.name)
+
+    async def stop(self) -> None:
+        """Store what waits, then close everything."""
+        for task in self._tasks:
+            task.cancel()
+        await asyncio.gather(*self._tasks, return_exceptions=True)
+        await asyncio.to_thread(self.writer.stop)
+        self.database.close()
+        log_event("stopped")
+
+    def _every(self, seconds: float, work: Callable[[], Coroutine[Any, Any, None]]) -> None:
+        async def forever() -> None:
+            while True:
+                await asyncio.sleep(seconds)
+                try:
+                    await work()
+                except Exception as error:  # noqa: BLE001 - the next turn may succeed
+                    log_event(
+                        "background_failed", error=type(error).__name__, detail=str(error)[:300]
+                    )
+
+        self._tasks.append(asyncio.get_running_loop().create_task(forever()))
+
+    async def _read_tokens(self) -> None:
+        def read() -> None:
+            with self.database.read.connect() as connection:
+                self.tokens.read(connection)
+
+        await asyncio.to_thread(read)
+
+    def _gauges(self) -> dict[str, float]:
+        gauges = {
+            "queue_records": float(self.writer.n_waiting),
+            "body_memory_bytes": float(self.n_body_bytes),
+            "start_timestamp_seconds": self.started_s,
+        }
+        size = self.database.n_bytes()
+        if size is not None:
+            gauges["store_size_bytes"] = float(size)
+        if self.database.is_sqlite:
+            free = shutil.disk_usage(self.settings.store.data).free
+            gauges["store_free_bytes"] = float(free)
+        return gauges

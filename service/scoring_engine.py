@@ -1,0 +1,173 @@
+"""An `Engine` over `scoring`: the only module here that knows how a record is scored."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping, Sequence
+from functools import cached_property, lru_cache
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scoring.artefact import read_model
+from scoring.model import Member, Model
+from scoring.scorer import Scorer, Scores
+from scoring.standing import BadStanding, Standing
+from service.engine import Floats, Scored
+from service.layout import Layout
+
+# Neighbours are asked for with every answer and cost a walk over the tree.
+_N_CACHED_NEIGHBOURS = 4096
+
+
+class ScoringEngine:
+    """One loaded model with its kernels compiled."""
+
+    def __init__(self, model: Model) -> None:
+        self.model = model
+        self.name = model.name
+        self.layout = Layout(tuple(model.table.instruments))
+        self.levels: Mapping[str, float] = {
+            "record": model.levels.record,
+            "sustained": model.levels.sustained,
+        }
+        self.about: Mapping[str, Any] = model.about
+        self._scorer = Scorer(model)
+        self._scorer.warm()
+        self._neighbours = lru_cache(maxsize=_N_CACHED_NEIGHBOURS)(self._find_neighbours)
+
+    def score(
+        self,
+        source: str,
+        times_ns: NDArray[np.int64],
+        values: Floats,
+        live: Standing | None,
+        bad: NDArray[np.bool_] | None,
+        channels: bool,
+    ) -> tuple[Scored, Standing]:
+        """Score records of one source in order; see `Engine`."""
+        used = values if bad is None else np.where(bad, np.nan, values)
+        scores, standing = self._scorer.score(source, times_ns, used, live)
+        scored = Scored(
+            surprise=scores.surprise,
+            excess=scores.excess,
+            sustained=scores.sustained,
+            suspect=scores.suspect,
+            suspect_surprise=scores.suspect_surprise,
+            low=_or_open(scores.expected_low),
+            high=_or_open(scores.expected_high),
+            best=scores.expected_best,
+            alert=scores.alert,
+            judged=scores.judged,
+        )
+        if self.layout.states:
+            self._add_words(source, scores, scored)
+        if channels:
+            for row in range(len(times_ns)):
+                scored.every[row] = self._every_channel(source, scores, row)
+        return scored, standing
+
+    def _add_words(self, source: str, scores: Scores, scored: Scored) -> None:
+        for row in np.flatnonzero(np.isin(scores.suspect, self._state_columns)).tolist():
+            expected = self._scorer.expected(source, scores.rows[row], int(scores.suspect[row]))
+            scored.words[row] = _rounded(expected.words or {})
+
+    @cached_property
+    def _state_columns(self) -> list[int]:
+        return list(self.layout.states)
+
+    def _every_channel(self, source: str, scores: Scores, row: int) -> list[dict[str, Any]]:
+        found = []
+        for column, name in enumerate(self.layout.names):
+            expected = self._scorer.expected(source, scores.rows[row], column)
+            surprise = float(scores.channel_surprise[row, column])
+            entry: dict[str, Any] = {
+                "channel": name,
+                "surprise": None if math.isnan(surprise) else round(surprise, 4),
+            }
+            if expected.words is not None:
+                entry["expected"] = {"words": _rounded(expected.words)}
+            else:
+                entry["expected"] = {
+                    "low": _finite_or_none(expected.low),
+                    "high": _finite_or_none(expected.high),
+                    "best": _finite_or_none(expected.best),
+                }
+            found.append(entry)
+        return found
+
+    def standing_from(self, stored: bytes | None) -> Standing | None:
+        """Return a stored standing where it belongs to this model and can be read."""
+        if not stored:
+            return None
+        try:
+            standing = Standing.from_bytes(stored)
+        except BadStanding:
+            return None
+        return standing if standing.model == self.name else None
+
+    def standing_bytes(self, live: Standing) -> bytes:
+        """Return a standing as the store keeps it."""
+        return live.to_bytes()
+
+    def neighbours(self, source: str, column: int) -> Sequence[str]:
+        """Return the names of the channels that share an edge with one."""
+        return self._neighbours(source if source in self.model.members else "", column)
+
+    def _find_neighbours(self, member: str, column: int) -> tuple[str, ...]:
+        names = self.model.table.names
+        near: dict[str, None] = {}
+        for part in self.model.member(member).parts:
+            near.update((names[node], None) for node in part.tree.neighbours(column))
+        return tuple(near)
+
+    def member(self, source: str) -> str:
+        """Return `own` where the model has a member for the source, else `fleet`."""
+        return "own" if source in self.model.members else "fleet"
+
+    def describe(self, source: str | None) -> dict[str, Any]:
+        """Return the model as its page shows it."""
+        member = self.model.member(source) if source is not None else self.model.fleet
+        levels = self.model.levels
+        return {
+            "model": self.name,
+            "source": source,
+            "member": "own" if source in self.model.members else "fleet",
+            "members": sorted(self.model.members),
+            "levels": dict(self.levels),
+            "least_readings": levels.least_readings,
+            "tau_s": levels.tau_s,
+            "step_s": levels.step_s,
+            "channels": self.layout.as_json(),
+            "edges": _edges(self.model, member),
+            "about": {**self.model.about, **member.about},
+        }
+
+
+def load_engine(path: Path) -> ScoringEngine:
+    """Return the model of a directory, ready to score; raises BadArtefact."""
+    return ScoringEngine(read_model(path))
+
+
+def _edges(model: Model, member: Member) -> list[dict[str, Any]]:
+    names = model.table.names
+    return [
+        {"left": names[int(left)], "right": names[int(right)], "nats": round(float(nats), 4)}
+        for part in member.parts
+        for (left, right), nats in zip(part.tree.edges, part.tree.nats, strict=True)
+    ]
+
+
+def _or_open(bounds: Floats) -> Floats:
+    """Return bounds with an open side as NaN, which JSON answers as null."""
+    return np.where(np.isinf(bounds), np.nan, bounds)
+
+
+def _finite_or_none(value: float) -> float | None:
+    return value if math.isfinite(value) else None
+
+
+def _rounded(words: Mapping[str, float]) -> dict[str, float]:
+    return {word: round(probability, 4) for word, probability in words.items()}

@@ -1,0 +1,1 @@
+"""Ordered changes of the tables, shipped with the package."""

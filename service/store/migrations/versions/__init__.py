@@ -1,0 +1,1 @@
+"""One file per change, never edited after a release."""

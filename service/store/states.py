@@ -1,0 +1,56 @@
+"""What the store remembers of a source between records."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import Any
+
+# Before any time that a record can have.
+NEVER_NS = -1
+
+
+@dataclass(slots=True)
+class SourceState:
+    """One source's row. `live` is the standing as an object, opaque here.
+
+    standing: its bytes as stored; newest_ns: newest time of any stored record; last_ns:
+    newest time in the standing. excess, sustained (nats), alert: of the record at last_ns.
+    """
+
+    id: int
+    name: str
+    newest_ns: int = NEVER_NS
+    last_ns: int = NEVER_NS
+    n_records: int = 0
+    n_over_level: int = 0
+    model: str = ""
+    excess: float | None = None
+    sustained: float | None = None
+    alert: int = 0
+    standing: bytes | None = None
+    live: Any = None
+
+    def copy(self) -> SourceState:
+        """Return a copy to work on, so that a failed commit leaves this one as it was."""
+        return replace(self)
+
+
+@dataclass(frozen=True, slots=True)
+class StoredRecord:
+    """One record as the store has it; the columns are described in `tables`."""
+
+    id: int
+    source: str
+    time_ns: int
+    received_ns: int
+    request: str
+    layout_id: int
+    surprise: float | None
+    excess: float | None
+    sustained: float | None
+    suspect: int
+    alert: int
+    flags: int
+    suspect_detail: bytes | None
+    readings: bytes
+    extra: bytes | None
