@@ -59,7 +59,7 @@ class Tally:
                 raise BadHistory(
                     str(rejected_path), f"cannot be written: {error.strerror}"
                 ) from None
-            self._list = csv.writer(self._file)
+            self._list = csv.writer(self._file, lineterminator="\n")
             self._list.writerow(["file", "line", "reason", "detail"])
 
     @property

@@ -99,7 +99,8 @@ class TimeReader:
             texts.to_pandas().str.strip(), format=self._format, errors="coerce", utc=zoned
         )
         micros = np.array(parsed.dt.tz_localize(None).astype("datetime64[us]").astype("int64"))
-        times = np.where(np.abs(micros) < 2**63 // 1000, micros * 1000, NO_TIME)
+        in_reach = (micros > NO_TIME // 1000) & (micros < -(NO_TIME // 1000))
+        times = np.where(in_reach, micros * 1000, NO_TIME)
         return self._finish(times, np.full(len(times), not zoned), texts, codes)
 
     def _read_mixed(self, texts: Any, codes: NDArray[np.int32]) -> tuple[Int64, list[BadTime]]:
