@@ -10,7 +10,7 @@ import csv
 from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any, Final, Literal
+from typing import Any, Final
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -23,6 +23,7 @@ from numpy.typing import NDArray
 
 from training.plant.channels import INSTRUMENTS, NAMES, PUMP_WORDS
 from training.plant.incidents import Incident
+from training.plant.records import rfc3339
 from training.plant.simulate import Chunk
 from training.plant.utility import BadPlant
 
@@ -106,7 +107,7 @@ def write_incidents(incidents: Iterable[Incident], path: Path) -> None:
         for incident in incidents:
             times = np.array([incident.start_ns, incident.end_ns])
             size = "" if incident.size is None else f"{incident.size:.3f}"
-            row = [incident.source, *_rfc3339(times), incident.kind, size]
+            row = [incident.source, *rfc3339(times), incident.kind, size]
             rows.writerow([*row, "|".join(incident.channels)])
 
 
@@ -119,7 +120,7 @@ def _write_csv(
     n_records = 0
     with path.open("wb") as file:
         for chunk in chunks:
-            times = _rfc3339(chunk.times_ns) if form.zone is None else _local(chunk, form.zone)
+            times = rfc3339(chunk.times_ns) if form.zone is None else _local(chunk, form.zone)
             table = _texts(to_table(chunk, pa.array(times), form), form.decimal)
             # Nothing of ours holds a separator, a quote or a line break.
             options = pa_csv.WriteOptions(
@@ -179,13 +180,6 @@ def _texts(table: Any, decimal: str) -> Any:
             text = pc.replace_substring(pc.cast(column, pa.string()), ".", decimal)
             table = table.set_column(number, name, text)
     return table
-
-
-def _rfc3339(times_ns: NDArray[np.int64]) -> list[str]:
-    unit: Literal["s", "ms"] = "s" if not np.any(times_ns % 1_000_000_000) else "ms"
-    moments: NDArray[np.datetime64] = times_ns.astype("datetime64[ns]")
-    texts = np.datetime_as_string(moments, unit=unit)
-    return [f"{text}Z" for text in texts]
 
 
 def _local(chunk: Chunk, zone: str) -> list[str]:
