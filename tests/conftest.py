@@ -7,6 +7,11 @@ import shutil
 from pathlib import Path
 
 import pytest
+from hypothesis import settings
+
+# The same examples on every machine; no deadline, because a kernel's first call compiles it.
+settings.register_profile("oddbranch", deadline=None, derandomize=True, database=None)
+settings.load_profile("oddbranch")
 
 ROOT = Path(__file__).resolve().parent.parent
 

@@ -38,12 +38,11 @@ def align_readings(
     out_times_ns: Int64,
     out_lines: Int64,
     out_values: Floats,
-    early: NDArray[np.bool_],
 ) -> int:
     """Write the records that the readings of one source complete; return how many.
 
-    times_ns, channels, values, lines: (n,), in the order of the file. A reading earlier
-        than the last one is marked in early (n,) and left out.
+    times_ns, channels, values, lines: (n,), in time order, also with the readings
+        of the call before.
     last_times_ns, last_values: (k,), the last reading of each channel; kept up to date.
     open_record: (3,), times of the open record's first and last reading, and the line of
         the last; kept up to date. NO_TIME in the first: no record is open.
@@ -53,9 +52,6 @@ def align_readings(
     k = len(last_values)
     for i in range(len(times_ns)):
         if open_record[0] != NO_TIME:
-            if times_ns[i] < open_record[1]:
-                early[i] = True
-                continue
             if times_ns[i] - open_record[0] >= wait_ns:
                 out_times_ns[n_records] = open_record[1]
                 out_lines[n_records] = open_record[2]

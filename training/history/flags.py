@@ -17,9 +17,19 @@ F = TypeVar("F", bound=Callable[..., Any])
 NAMED_SEPARATORS = {"comma": ",", "semicolon": ";", "tab": "\t", "bar": "|"}
 
 _FLAGS = (
-    click.option("--time", default="time", show_default=True, help="Column that holds the time."),
     click.option(
-        "--source", default="source", show_default=True, help="Column that names the source."
+        "--time",
+        default="time",
+        show_default=True,
+        metavar="NAME",
+        help="Column that holds the time.",
+    ),
+    click.option(
+        "--source",
+        default="source",
+        show_default=True,
+        metavar="NAME",
+        help="Column that names the source.",
     ),
     click.option(
         "--zone",
@@ -38,6 +48,27 @@ _FLAGS = (
     ),
     click.option(
         "--decimal", type=click.Choice([".", ","]), help="Decimal mark.  [default: found]"
+    ),
+    click.option(
+        "--channel-column",
+        default="channel",
+        show_default=True,
+        metavar="NAME",
+        help="Long form: column that names the channel.",
+    ),
+    click.option(
+        "--value-column",
+        default="value",
+        show_default=True,
+        metavar="NAME",
+        help="Long form: column that holds the reading.",
+    ),
+    click.option(
+        "--quality-column",
+        default="quality",
+        show_default=True,
+        metavar="NAME",
+        help="Long form: column that says good, uncertain or bad, if there is one.",
     ),
     click.option(
         "--age",
@@ -69,6 +100,9 @@ def history_options(
     time_format: str | None,
     separator: str | None,
     decimal: str | None,
+    channel_column: str,
+    value_column: str,
+    quality_column: str,
     age: float | None,
     step: float | None,
     keep_time_text: bool = False,
@@ -80,6 +114,9 @@ def history_options(
     return HistoryOptions(
         time=time,
         source=source,
+        channel=channel_column,
+        value=value_column,
+        quality=quality_column,
         zone=None if zone is None else _zone(zone),
         time_format=time_format,
         separator=None if separator is None else _separator(separator),

@@ -25,6 +25,10 @@ Int64 = NDArray[np.int64]
 QUALITIES = ("good", "uncertain", "bad")
 
 
+# More than any fleet's tables have: a source and a channel make one number.
+MAX_CHANNELS = 1 << 24
+
+
 def is_long(file: CellFile, options: HistoryOptions, table: ChannelTable | None) -> bool:
     """True for a file with a column of channels and one of values, unless these are channels."""
     if not {options.channel, options.value} <= set(file.names):
@@ -55,11 +59,23 @@ class Readings:
 
 
 class LongCells:
-    """Takes the cells of one long file apart, up to the values, which stay as written."""
+    """Takes the cells of one long file apart, up to the values, which stay as written.
+
+    by_channel: the times of a source step back where another channel begins. Then the
+        two passes of the hour that exists twice are told apart within a channel.
+    """
 
     def __init__(
-        self, file: CellFile, options: HistoryOptions, sources: SourceRegister, tally: Tally
+        self,
+        file: CellFile,
+        options: HistoryOptions,
+        sources: SourceRegister,
+        tally: Tally,
+        *,
+        by_channel: bool = False,
     ) -> None:
+        self._by_channel = by_channel
+        self._channels_met = SourceRegister()
         self._options = options
         self._sources = sources
         self._tally = tally
@@ -82,10 +98,14 @@ class LongCells:
             codes = np.full(n, self._sources.code(ONLY_SOURCE), dtype=np.int32)
         for row in np.flatnonzero(codes < 0).tolist():
             problems.add(row, NO_SOURCE, f"column {options.source!r} is empty")
-        times_ns, bad_times = self._times.read(cells.columns[options.time], codes)
+        channel_codes, names = self._channels(cells, problems)
+        keys = codes.astype(np.int64)
+        if self._by_channel:
+            numbers = np.array([self._channels_met.code(name) for name in names] + [-1])
+            keys = keys * MAX_CHANNELS + numbers[channel_codes]
+        times_ns, bad_times = self._times.read(cells.columns[options.time], keys)
         for bad in bad_times:
             problems.add(*bad)
-        channel_codes, names = self._channels(cells, problems)
         values = self._blank_bad_quality(cells, problems, channel_codes, names)
         good = problems.reason == ""
         readings = Readings(

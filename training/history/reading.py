@@ -16,8 +16,10 @@ from training.history.cells import CellFile
 from training.history.columnar import ColumnarFile
 from training.history.delimited import DelimitedFile
 from training.history.files import find_files, is_parquet
-from training.history.long import LongReader
+from training.history.long import Aligner
 from training.history.long_cells import is_long
+from training.history.long_numbers import LongNumbers, NumberedReadings
+from training.history.long_order import TimeOrder, TimeStretches
 from training.history.options import BadHistory, HistoryOptions
 from training.history.tally import NO_OFFSET, Tally
 from training.history.wide import WideReader
@@ -47,6 +49,8 @@ def read_history(
 ) -> Iterator[HistoryBatch]:
     """Yield every row of a history as records, in the order of files and rows.
 
+    Long files come after wide ones and in the order of their times, all as one.
+
     Bad rows keep their place in the batches and are counted in the tally; whether there
     are too many is the caller's question (Tally.refuse_if_mostly_bad).
     progress: advanced by the bytes read on disk; history_n_bytes gives the total.
@@ -55,24 +59,22 @@ def read_history(
     Raises BadHistory for files that cannot be read as a history of this channel table.
     """
     sources = SourceRegister()
-    long_reader = LongReader(table, options, sources, tally)
-    any_long = False
+    long_files = []
     for path in find_files(paths):
         file = open_cells(path, options)
         refuse_missing_time(file, options)
         if is_long(file, options, table):
-            any_long = True
-            yield from _read_long(file, long_reader, progress)
+            long_files.append(file)
             continue
         refuse_missing_channels(file, [c.name for c in table.instruments])
         reader = WideReader(file, table.instruments, options, sources, tally)
         yield from _read_wide(file, reader, progress)
-    if any_long:
-        batch = long_reader.finish()
-        if batch is not None:
-            yield batch
+    if long_files:
+        numbers = LongNumbers(table, options, sources, tally)
+        aligner = Aligner(table, options, sources)
+        yield from _read_long(long_files, numbers, aligner, options, progress)
         if every_channel:
-            long_reader.refuse_absent()
+            numbers.refuse_absent(long_files[-1].path)
 
 
 def _read_wide(
@@ -91,17 +93,54 @@ def _read_wide(
 
 
 def _read_long(
-    file: CellFile, reader: LongReader, progress: Advances | None
+    files: list[CellFile],
+    numbers: LongNumbers,
+    aligner: Aligner,
+    options: HistoryOptions,
+    progress: Advances | None,
 ) -> Iterator[HistoryBatch]:
-    first = True
-    for batch, problems, n_bytes in reader.read_file(file):
-        if first:
-            refuse_local_times(problems.reason, str(file.path))
-        first = False
-        if batch is not None:
-            yield batch
-        if progress is not None:
-            progress.advance(n_bytes)
+    order = _look_at_order(files, options, progress)
+    if order.in_order:
+        batches: Iterator[HistoryBatch | None] = (
+            aligner.add(readings)
+            for readings in _readings(files, numbers, progress, by_channel=False)
+        )
+        yield from (batch for batch in batches if batch is not None)
+    else:
+        with TimeStretches(order) as stretches:
+            for readings in _readings(files, numbers, progress, by_channel=True):
+                stretches.add(readings)
+            batches = (aligner.add(readings) for readings in stretches.in_order())
+            yield from (batch for batch in batches if batch is not None)
+    last = aligner.finish()
+    if last is not None:
+        yield last
+
+
+def _look_at_order(
+    files: list[CellFile], options: HistoryOptions, progress: Advances | None
+) -> TimeOrder:
+    order, last_ns = TimeOrder(), dict[str, int]()
+    for file in files:
+        for n_bytes in order.look_at(file, options, last_ns):
+            # The look and the reading are half the work each.
+            if progress is not None:
+                progress.advance(n_bytes // 2)
+    return order
+
+
+def _readings(
+    files: list[CellFile], numbers: LongNumbers, progress: Advances | None, *, by_channel: bool
+) -> Iterator[NumberedReadings]:
+    for file in files:
+        first = True
+        for readings, problems, n_bytes in numbers.read_file(file, by_channel=by_channel):
+            if first:
+                refuse_local_times(problems.reason, str(file.path))
+            first = False
+            yield readings
+            if progress is not None:
+                progress.advance(n_bytes - n_bytes // 2)
 
 
 def open_cells(path: Path, options: HistoryOptions) -> CellFile:

@@ -23,7 +23,6 @@ NO_SOURCE = "no source"
 NO_CHANNEL = "no channel"
 UNKNOWN_QUALITY = "unknown quality"
 TIME_TWICE = "time twice"
-OUT_OF_ORDER = "out of time order"
 
 # A cell that someone pasted a page into must not fill the list of bad rows.
 MAX_DETAIL_CHARS = 160

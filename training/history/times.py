@@ -25,6 +25,7 @@ from training.history.options import HistoryOptions
 from training.history.tally import BROKEN_TIME, NO_OFFSET
 
 Int64 = NDArray[np.int64]
+Codes = NDArray[np.int32] | NDArray[np.int64]
 
 # Stands for a broken time; numpy's own "not a time".
 NO_TIME = np.iinfo(np.int64).min
@@ -60,7 +61,7 @@ class TimeReader:
         self._format = options.time_format
         self._passes: dict[int, tuple[int, bool]] = {}
 
-    def read(self, column: Any, source_codes: NDArray[np.int32]) -> tuple[Int64, list[BadTime]]:
+    def read(self, column: Any, source_codes: Codes) -> tuple[Int64, list[BadTime]]:
         """Return (n,) times, NO_TIME where broken, and the broken ones.
 
         column: a pyarrow array of n time cells. source_codes: (n,), any numbers that
@@ -80,7 +81,7 @@ class TimeReader:
         empty = np.flatnonzero(times == NO_TIME)
         return times, [BadTime(int(row), BROKEN_TIME, "the time is empty") for row in empty]
 
-    def _read_stamps(self, column: Any, codes: NDArray[np.int32]) -> tuple[Int64, list[BadTime]]:
+    def _read_stamps(self, column: Any, codes: Codes) -> tuple[Int64, list[BadTime]]:
         zoned = getattr(column.type, "tz", None) is not None
         kind = pa.timestamp("ns", "UTC") if zoned else pa.timestamp("ns")
         try:
@@ -92,7 +93,7 @@ class TimeReader:
         texts = pc.cast(column, pa.string())
         return self._finish(times, np.full(len(times), not zoned), texts, codes)
 
-    def _read_format(self, texts: Any, codes: NDArray[np.int32]) -> tuple[Int64, list[BadTime]]:
+    def _read_format(self, texts: Any, codes: Codes) -> tuple[Int64, list[BadTime]]:
         assert self._format is not None
         zoned = "%z" in self._format
         parsed = pd.to_datetime(
@@ -103,7 +104,7 @@ class TimeReader:
         times = np.where(in_reach, micros * 1000, NO_TIME)
         return self._finish(times, np.full(len(times), not zoned), texts, codes)
 
-    def _read_mixed(self, texts: Any, codes: NDArray[np.int32]) -> tuple[Int64, list[BadTime]]:
+    def _read_mixed(self, texts: Any, codes: Codes) -> tuple[Int64, list[BadTime]]:
         cells = pc.utf8_trim_whitespace(pc.fill_null(texts, ""))
         cells = pc.replace_substring_regex(cells, _DOTTED, r"\3-\2-\1T\4.\7")
         cells = pc.replace_substring_regex(cells, r"\.( ?[Zz+-]|$)", r"\1")
@@ -117,7 +118,7 @@ class TimeReader:
         return self._finish(times, local, texts, codes)
 
     def _finish(
-        self, times: Int64, local: NDArray[np.bool_], texts: Any, codes: NDArray[np.int32]
+        self, times: Int64, local: NDArray[np.bool_], texts: Any, codes: Codes
     ) -> tuple[Int64, list[BadTime]]:
         """Turn local times to UTC and name the broken ones."""
         broken = times == NO_TIME
@@ -142,7 +143,7 @@ class TimeReader:
         return times, bad
 
     def _to_utc(
-        self, local: Int64, codes: NDArray[np.int32], zone: ZoneInfo
+        self, local: Int64, codes: Codes, zone: ZoneInfo
     ) -> tuple[Int64, NDArray[np.bool_]]:
         quarters, of_row = np.unique(local // QUARTER_NS, return_inverse=True)
         offsets = np.array([_offsets_ns(int(quarter), zone) for quarter in quarters])
