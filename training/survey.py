@@ -187,6 +187,9 @@ def propose(facts: ColumnFacts) -> ProposedChannel:
         return left_out("never filled")
     if facts.is_text and len(facts.words) > MAX_WORDS:
         return left_out(f"text, more than {MAX_WORDS} different ones")
+    if facts.is_text and 2 * facts.n_filled < facts.n_cells:
+        share = _percent(facts.n_filled, facts.n_cells)
+        return left_out(f"text in {share} of the rows, remarks rather than a state")
     if not facts.is_text and not math.isfinite(facts.low):
         return left_out("no usable number")
     if facts.counts_rows:
