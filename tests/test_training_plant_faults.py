@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from datetime import UTC, datetime
 from typing import Any
 
 import numpy as np
@@ -15,7 +16,17 @@ from training.plant.instruments import SPREAD, TYPICAL
 from training.plant.simulate import PlantConfig, simulate, start_runs
 
 HOUR_NS = 3_600_000_000_000
-BASE: dict[str, Any] = {"seed": 31, "n_stations": 1, "days": 1, "step_s": 60, "silences": False}
+# A working day in winter: one pump is enough all day, so that a fault which draws more
+# water does not also decide when the second pump joins and warms up.
+START_OF_RUN = datetime(2026, 1, 14, tzinfo=UTC)
+BASE: dict[str, Any] = {
+    "seed": 31,
+    "n_stations": 1,
+    "start": START_OF_RUN,
+    "days": 1,
+    "step_s": 60,
+    "silences": False,
+}
 ORIGIN_NS = PlantConfig(**BASE).origin_ns
 START, END = ORIGIN_NS + 6 * HOUR_NS, ORIGIN_NS + 12 * HOUR_NS
 ROWS = slice(360, 720)

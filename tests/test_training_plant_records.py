@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+from datetime import UTC, datetime
 
 import numpy as np
 
@@ -11,7 +12,9 @@ from training.plant.channels import NAMES
 from training.plant.records import records_of, rfc3339
 from training.plant.simulate import PlantConfig, simulate
 
-CHUNKS = list(simulate(PlantConfig(seed=71, n_stations=3, days=1, step_s=600)))
+START = datetime(2026, 3, 2, tzinfo=UTC)
+CONFIG = PlantConfig(seed=71, n_stations=3, start=START, days=1, step_s=600)
+CHUNKS = list(simulate(CONFIG))
 
 
 def test_records_of_all_stations_come_in_order_of_time() -> None:

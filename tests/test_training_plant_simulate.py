@@ -19,7 +19,14 @@ from training.plant.incidents import Incident
 from training.plant.simulate import Chunk, PlantConfig, incidents_of, simulate
 from training.plant.utility import BadPlant
 
-CONFIG = PlantConfig(seed=41, n_stations=2, days=3, step_s=60, rates=IncidentRates(2.0))
+CONFIG = PlantConfig(
+    seed=41,
+    n_stations=2,
+    start=datetime(2026, 3, 2, tzinfo=UTC),
+    days=3,
+    step_s=60,
+    rates=IncidentRates(2.0),
+)
 
 
 def digest(chunks: Iterable[Chunk]) -> dict[str, str]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from datetime import UTC, datetime
 from pathlib import Path
 
 import pytest
@@ -11,7 +12,8 @@ from training.plant.spoil import PROBLEMS, spoil_csv
 from training.plant.utility import BadPlant
 from training.plant.writers import SEMICOLON, write_wide_csv
 
-CONFIG = PlantConfig(seed=61, n_stations=1, days=1, step_s=600)
+START = datetime(2026, 3, 2, tzinfo=UTC)
+CONFIG = PlantConfig(seed=61, n_stations=1, start=START, days=1, step_s=600)
 
 
 @pytest.mark.parametrize("separator", [",", ";"])

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import csv
 import dataclasses
+from datetime import UTC, datetime
 from pathlib import Path
 
 import numpy as np
@@ -26,7 +27,10 @@ from training.plant.writers import (
     write_wide_csv,
 )
 
-CONFIG = PlantConfig(seed=51, n_stations=2, days=2, step_s=600, rates=IncidentRates(3.0))
+START = datetime(2026, 3, 2, tzinfo=UTC)
+CONFIG = PlantConfig(
+    seed=51, n_stations=2, start=START, days=2, step_s=600, rates=IncidentRates(3.0)
+)
 CHUNKS = list(simulate(CONFIG))
 VALUES = np.concatenate([c.values for c in CHUNKS])
 TIMES = pd.to_datetime(np.concatenate([c.times_ns for c in CHUNKS]), utc=True)

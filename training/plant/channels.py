@@ -84,9 +84,9 @@ def _state(name: str) -> Instrument:
 _PT100_A: Final = (0.15, 0.002)
 _PT100_B: Final = (0.30, 0.005)
 _SPEED: Final = ("rpm", (0.0, 1800.0), 0, 1.0, 0, 0, 0.0006, 5.0, 1330.0, 8.0)
-_CURRENT: Final = ("A", (0.0, 120.0), 1, 0.1, 0.005, 0, 0.003, 5.0, 46.0, 0.68)
+_CURRENT: Final = ("A", (0.0, 120.0), 1, 0.1, 0.005, 0, 0.003, 5.0, 46.0, 0.70)
 _BEARING: Final = ("degC", (-20.0, 150.0), 1, *_PT100_B, 0.06, 0, 60.0, 48.0, 1.9)
-_WINDING: Final = ("degC", (-20.0, 200.0), 1, *_PT100_B, 0.06, 0, 90.0, 68.0, 3.3)
+_WINDING: Final = ("degC", (-20.0, 200.0), 1, *_PT100_B, 0.06, 0, 90.0, 68.0, 3.5)
 _VIBRATION: Final = ("mm/s", (0.0, 25.0), 2, 0, 0.05, 0.01, 0.04, 10.0, 1.5, 0.10)
 
 # Columns: name, unit, span, decimals, accuracy and its share of reading, noise and its
@@ -102,7 +102,7 @@ INSTRUMENTS: Final[tuple[Instrument, ...]] = (
     Instrument("speed_2", *_SPEED),
     Instrument("current_1", *_CURRENT),
     Instrument("current_2", *_CURRENT),
-    Instrument("power", "kW", (0.0, 150.0), 2, 0, 0.005, 0.05, 0.003, 5.0, 30.0, 0.44),
+    Instrument("power", "kW", (0.0, 150.0), 2, 0, 0.005, 0.05, 0.003, 5.0, 30.0, 0.46),
     Instrument("bearing_temperature_1", *_BEARING),
     Instrument("bearing_temperature_2", *_BEARING),
     Instrument("winding_temperature_1", *_WINDING),

@@ -38,7 +38,9 @@ _WARM_UP_DAYS: Final = 1
 class PlantConfig:
     """What to simulate.
 
-    start: time of the first record, with an offset. step_s: a divisor of a day, in s.
+    start: time of the first record, with an offset; as shipped three weeks before the
+        height of summer, when demand stands still and both pumps are often needed.
+    step_s: a divisor of a day, in s.
     incidents: a list of one's own, used instead of drawing; None draws by `rates`.
     quiet_days: whole days from the start in which no incident is drawn.
     silences: False gives every reading of every record.
@@ -46,7 +48,7 @@ class PlantConfig:
 
     seed: int = 1
     n_stations: int = 6
-    start: datetime = datetime(2026, 3, 2, tzinfo=UTC)
+    start: datetime = datetime(2026, 6, 29, tzinfo=UTC)
     days: int = 28
     step_s: int = 10
     rates: IncidentRates = field(default_factory=IncidentRates)
