@@ -138,7 +138,7 @@ def add_token(
     connection: sa.Connection, name: str, roles: tuple[str, ...], days: float | None
 ) -> str:
     """Store a new token and return it, the only time that it can be read."""
-    if not _NAME.match(name):
+    if not _NAME.fullmatch(name):
         raise BadToken(
             f"{name!r} cannot name a token; use 1 to 64 small letters, digits, dots and dashes"
         )

@@ -2,97 +2,88 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Iterator, Mapping
 from typing import Any
 
-import numpy as np
 import orjson
-from numpy.typing import NDArray
 
-from service.engine import ALERT_WORDS, Engine
-from service.layout import Layout, unpack_readings
+from service.engine import ALERT_WORDS
+from service.layout import unpack_readings
 from service.parse import Batch
-from service.pipeline import CONFLICT, KNOWN, NO_ROOM, Outcome, unpack_detail
+from service.pipeline import Outcome, unpack_detail
 from service.problems import Problem
+from service.sheet import CONFLICT, DECIMALS, KNOWN, NO_ROOM, Sheet
 from service.store.states import StoredRecord
 from service.store.tables import FLAG_AHEAD, FLAG_LATE, FLAG_NOT_JUDGED
-from service.times import format_time, format_times
-
-# Decimals of nats in answers; levels and alerts use the full number.
-_DECIMALS = 4
+from service.times import format_time
 
 
-def batch_answers(batch: Batch, outcome: Outcome, engine: Engine) -> list[dict[str, Any]]:
+def batch_answers(batch: Batch, outcome: Outcome) -> list[dict[str, Any]]:
     """Return one answer an item, in the order of the body."""
-    answers = record_answers(batch, outcome, engine)
-    if not batch.problems and not outcome.status.any():
+    answers = record_answers(outcome)
+    sheet = outcome.sheet
+    if not batch.problems and sheet.is_plain:
         return list(answers)
     found: list[dict[str, Any]] = [{}] * batch.n_items
     for row, (position, answer) in enumerate(zip(batch.positions, answers, strict=True)):
-        problem = problem_of(batch, outcome, row)
+        problem = problem_of(outcome, row)
         found[position] = problem.as_item(position) if problem else answer
     for position, problem in batch.problems.items():
         found[position] = problem.as_item(position)
     return found
 
 
-def problem_of(batch: Batch, outcome: Outcome, row: int) -> Problem | None:
-    """Return why a row that could be read was not stored, or None."""
-    status = outcome.status[row]
+def problem_of(outcome: Outcome, row: int) -> Problem | None:
+    """Return why a row that could be read was not stored, or None. row: in the batch."""
+    sheet, row = outcome.sheet, outcome.start + row
+    status = sheet.status[row]
     if status == CONFLICT:
         return Problem(
             "conflict",
-            f"a record of {batch.sources[row]!r} at {format_time(int(batch.times_ns[row]))} is "
+            f"a record of {sheet.sources[row]!r} at {format_time(int(sheet.times_ns[row]))} is "
             "stored with other readings; the first one stands",
         )
     if status == NO_ROOM:
         return Problem(
             "too-many-sources",
-            f"{batch.sources[row]!r} is new, and as many sources are known as limits.n_sources "
+            f"{sheet.sources[row]!r} is new, and as many sources are known as limits.n_sources "
             "allows",
         )
     return None
 
 
-def record_answers(batch: Batch, outcome: Outcome, engine: Engine) -> Iterator[dict[str, Any]]:
-    """Yield the answer of every row."""
-    scored, layout = outcome.scored, batch.layout
-    names = layout.names
-    missing = _missing(batch)
-    reading_of = _reading_of(layout)
-    suspects = scored.suspect.tolist()
-    columns = np.maximum(scored.suspect, 0).astype(np.intp)
-    readings = batch.values[np.arange(len(suspects)), columns].tolist()
+def record_answers(outcome: Outcome) -> Iterator[dict[str, Any]]:
+    """Yield the answer of every row of a batch."""
+    sheet = outcome.sheet
+    engine, names, missing, unknown = (
+        sheet.engine, sheet.engine.layout.names, sheet.missing, sheet.unknown
+    )  # fmt: skip
+    span = slice(outcome.start, outcome.stop)
     rows = zip(
-        batch.sources,
-        format_times(batch.times_ns),
-        _rounded(scored.surprise),
-        _rounded(scored.excess),
-        _rounded(scored.sustained),
-        suspects,
-        _rounded(scored.suspect_surprise),
-        scored.low.tolist(),
-        scored.high.tolist(),
-        scored.best.tolist(),
-        readings,
-        scored.alert.tolist(),
+        range(outcome.start, outcome.stop),
+        sheet.sources[span],
+        *(column[span] for column in sheet.columns),
         strict=True,
     )
     member_of: dict[str, str] = {}
-    plain = not (outcome.flags.any() or outcome.status.any() or scored.every)
-    model = engine.name
-    for row, (
-        source, time, surprise, excess, sustained, column, own, low, high, best, reading, alert,
-    ) in enumerate(rows):  # fmt: skip
+    model, plain, words, states = (
+        engine.name,
+        sheet.is_plain,
+        sheet.scored.words,
+        engine.layout.states,
+    )
+    for (
+        row, source, time, surprise, excess, sustained, own, low, high, best, reading, column, alert
+    ) in rows:  # fmt: skip
         suspect = None
         if column >= 0:
-            words = scored.words.get(row)
+            is_state = column in states
             suspect = {
                 "channel": names[column],
                 "surprise": own,
-                "reading": reading_of(batch, row, column, reading),
-                "expected": {"words": words}
-                if words is not None
+                "reading": _word(sheet, row, column, reading) if is_state else reading,
+                "expected": {"words": words[row]}
+                if row in words
                 else {"low": low, "high": high, "best": best},
                 "neighbours": engine.neighbours(source, column),
             }
@@ -107,72 +98,42 @@ def record_answers(batch: Batch, outcome: Outcome, engine: Engine) -> Iterator[d
             "surprise": surprise,
             "excess": excess,
             "sustained": sustained,
-            "missing": missing.get(row, []),
-            "unknown": batch.unknown.get(row, []),
+            "missing": missing.get(row, _NONE),
+            "unknown": unknown.get(row, _NONE),
             "suspect": suspect,
             "alert": ALERT_WORDS[alert],
         }
         if not plain:
-            _add_marks(answer, outcome, row)
+            _add_marks(answer, sheet, row)
         yield answer
 
 
-def _add_marks(answer: dict[str, Any], outcome: Outcome, row: int) -> None:
-    answer["model"] = outcome.model_of.get(row, answer["model"])
-    if outcome.status[row] == KNOWN:
+_NONE: list[str] = []
+
+
+def _word(sheet: Sheet, row: int, column: int, value: float) -> float | str | None:
+    layout = sheet.engine.layout
+    word = layout.reading(column, value)
+    if word is None and row in sheet.extra:
+        unseen: str | None = sheet.extra[row].get("words", {}).get(layout.names[column])
+        return unseen
+    return word
+
+
+def _add_marks(answer: dict[str, Any], sheet: Sheet, row: int) -> None:
+    answer["model"] = sheet.model_of.get(row, answer["model"])
+    if sheet.status[row] == KNOWN:
         answer["known"] = True
-    flags = int(outcome.flags[row])
+    flags = int(sheet.flags[row])
     if flags & FLAG_LATE:
         answer["late"] = True
     if flags & FLAG_AHEAD:
         answer["ahead"] = True
     if flags & FLAG_NOT_JUDGED:
         answer["judged"] = False
-    every = outcome.scored.every.get(row)
+    every = sheet.scored.every.get(row)
     if every is not None:
         answer["channels"] = every
-
-
-def _missing(batch: Batch) -> dict[int, list[str]]:
-    """Return the names of the channels without a usable reading, by row."""
-    found: dict[int, list[str]] = {}
-    absent = missing_mask(batch)
-    if absent.any():
-        names = batch.layout.names
-        for row, column in zip(*(axis.tolist() for axis in np.nonzero(absent)), strict=True):
-            found.setdefault(row, []).append(names[column])
-    return found
-
-
-def missing_mask(batch: Batch) -> NDArray[np.bool_]:
-    """Return (n, n_channels) True where a reading is absent, bad, or outside its span."""
-    absent: NDArray[np.bool_] = np.isnan(batch.values)
-    if batch.layout.has_spans:
-        absent |= (batch.values < batch.layout.low) | (batch.values > batch.layout.high)
-    if batch.bad is not None:
-        absent |= batch.bad
-    return absent
-
-
-def _reading_of(layout: Layout) -> Callable[[Batch, int, int, float], float | str | None]:
-    if not layout.states:
-        return lambda _batch, _row, _column, value: value
-
-    def read(batch: Batch, row: int, column: int, value: float) -> float | str | None:
-        if column not in layout.states:
-            return value
-        word = layout.reading(column, value)
-        if word is None and row in batch.extra:
-            unseen: str | None = batch.extra[row].get("words", {}).get(layout.names[column])
-            return unseen
-        return word
-
-    return read
-
-
-def _rounded(values: NDArray[np.float64]) -> list[float]:
-    rounded: list[float] = np.round(values, _DECIMALS).tolist()
-    return rounded
 
 
 def stored_answer(
@@ -229,4 +190,4 @@ def _is_missing(
 
 
 def _round_or_none(value: float | None) -> float | None:
-    return None if value is None or value != value else round(value, _DECIMALS)
+    return None if value is None or value != value else round(value, DECIMALS)

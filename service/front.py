@@ -88,7 +88,7 @@ class Front:
 
     def _request_id(self, scope: Scope) -> str:
         for name, value in scope["headers"]:
-            if name == b"x-request-id" and _REQUEST_ID.match(value):
+            if name == b"x-request-id" and _REQUEST_ID.fullmatch(value):
                 return str(value.decode())
         return f"{self._prefix}-{next(self._numbers):x}"
 

@@ -25,7 +25,8 @@ from prometheus_client.core import (
 from prometheus_client.registry import CollectorRegistry
 
 from service.engine import ALERT_WORDS, Engine
-from service.pipeline import CONFLICT, KNOWN, NO_ROOM, STORED, Job, Outcome
+from service.pipeline import Job
+from service.sheet import CONFLICT, KNOWN, NO_ROOM, STORED, Sheet
 from service.store.tables import FLAG_AHEAD, FLAG_LATE, FLAG_NOT_JUDGED
 
 # Edges around what a request should take: a single one some ms, a batch some ten.
@@ -126,90 +127,72 @@ class Metrics:
             self.outcomes["refused"] += n_records
 
     def group_done(
-        self, jobs: Sequence[Job], outcomes: Sequence[Outcome], scoring_s: float, commit_s: float
+        self, jobs: Sequence[Job], sheets: Sequence[Sheet], scoring_s: float, commit_s: float
     ) -> None:
         """Count one stored group; called by the writer."""
         with self._lock:
             self.scoring_seconds.add(scoring_s)
             self.commit_seconds.add(commit_s)
-            n_records = 0
-            for job, outcome in zip(jobs, outcomes, strict=True):
-                n_records += len(outcome.status)
-                self._count(job, outcome)
-            self.group_records.add(float(n_records))
+            for job in jobs:
+                self.batch_records.add(float(job.batch.n_items))
+            for sheet in sheets:
+                self.group_records.add(float(len(sheet.sources)))
+                self._count(sheet)
 
-    def _count(self, job: Job, outcome: Outcome) -> None:
-        batch, scored = job.batch, outcome.scored
-        self.batch_records.add(float(batch.n_items))
-        stored = outcome.status == STORED
+    def _count(self, sheet: Sheet) -> None:
+        stored = sheet.status == STORED
         n_stored = int(np.count_nonzero(stored))
         if n_stored < len(stored):
             for status, word in ((KNOWN, "known"), (CONFLICT, "conflict"), (NO_ROOM, "no_room")):
-                self.outcomes[word] += int(np.count_nonzero(outcome.status == status))
+                self.outcomes[word] += int(np.count_nonzero(sheet.status == status))
         if not n_stored:
             return
-        late = int(np.count_nonzero(stored & (outcome.flags & FLAG_LATE > 0)))
-        ahead = int(np.count_nonzero(stored & (outcome.flags & FLAG_AHEAD > 0)))
-        unjudged = int(np.count_nonzero(stored & (outcome.flags & FLAG_NOT_JUDGED > 0)))
+        late = ahead = 0
+        if sheet.flags.any():
+            late = int(np.count_nonzero(stored & (sheet.flags & FLAG_LATE > 0)))
+            ahead = int(np.count_nonzero(stored & (sheet.flags & FLAG_AHEAD > 0)))
+            unjudged = int(np.count_nonzero(stored & (sheet.flags & FLAG_NOT_JUDGED > 0)))
+            self.outcomes["not_judged"] += unjudged
         self.outcomes["late"] += late
         self.outcomes["ahead"] += ahead
         self.outcomes["stored"] += n_stored - late - ahead
-        self.outcomes["not_judged"] += unjudged
-        if n_stored < len(stored):
-            excess, values = scored.excess[stored], batch.values[stored]
-        else:
-            excess, values = scored.excess, batch.values
-        judged = excess[~np.isnan(excess)]
-        if len(judged) == 1:
-            self.excess.add(float(judged[0]))
-        elif len(judged):
-            self.excess.add_many(judged)
-        self._count_missing(values, batch.layout.names)
-        self._count_alerts(batch.sources, batch.layout.names, outcome, stored)
-        self._count_sources(batch.sources, batch.times_ns, outcome, stored)
+        excess = sheet.scored.excess[stored]
+        self.excess.add_many(excess[~np.isnan(excess)])
+        names = sheet.engine.layout.names
+        self._count_missing(
+            sheet.absent if n_stored == len(stored) else sheet.absent[stored], names
+        )
+        self._count_alerts(sheet, names, stored)
+        self._count_sources(sheet, stored)
 
-    def _count_missing(self, values: NDArray[np.float64], names: Sequence[str]) -> None:
-        self.n_readings += values.size
-        absent = np.isnan(values)
+    def _count_missing(self, absent: NDArray[np.bool_], names: Sequence[str]) -> None:
+        self.n_readings += absent.size
         if absent.any():
             by_column = np.count_nonzero(absent, axis=0).tolist()
             for name, n_absent in zip(names, by_column, strict=True):
                 if n_absent:
                     self.missing[name] += n_absent
 
-    def _count_alerts(
-        self,
-        sources: Sequence[str],
-        names: Sequence[str],
-        outcome: Outcome,
-        stored: NDArray[np.bool_],
-    ) -> None:
-        over = np.flatnonzero((outcome.scored.alert > 0) & stored)
-        for row in over.tolist():
-            self.over_level[str(ALERT_WORDS[int(outcome.scored.alert[row])])] += 1
-            self.source(sources[row]).n_over_level += 1
-            column = int(outcome.scored.suspect[row])
+    def _count_alerts(self, sheet: Sheet, names: Sequence[str], stored: NDArray[np.bool_]) -> None:
+        scored = sheet.scored
+        for row in np.flatnonzero((scored.alert > 0) & stored).tolist():
+            self.over_level[str(ALERT_WORDS[int(scored.alert[row])])] += 1
+            self.source(sheet.sources[row]).n_over_level += 1
+            column = int(scored.suspect[row])
             if column >= 0:
                 self.suspects[names[column]] += 1
 
-    def _count_sources(
-        self,
-        sources: Sequence[str],
-        times_ns: NDArray[np.int64],
-        outcome: Outcome,
-        stored: NDArray[np.bool_],
-    ) -> None:
-        still = outcome.flags & (FLAG_LATE | FLAG_AHEAD) > 0
-        if still.any() or not stored.all():
-            moved: Iterable[int] = np.flatnonzero(stored & ~still).tolist()
-        else:
-            moved = range(len(sources))
+    def _count_sources(self, sheet: Sheet, stored: NDArray[np.bool_]) -> None:
+        moved: Iterable[int] = range(len(sheet.sources))
+        if sheet.flags.any() or not stored.all():
+            still = sheet.flags & (FLAG_LATE | FLAG_AHEAD) > 0
+            moved = np.flatnonzero(stored & ~still).tolist()
         # The last row of each source is what the scrape shows.
-        last = {sources[row]: row for row in moved}
+        last = {sheet.sources[row]: row for row in moved}
         for name, row in last.items():
             tally = self.source(name)
-            tally.last_ns = max(tally.last_ns, int(times_ns[row]))
-            tally.sustained = float(outcome.scored.sustained[row])
+            tally.last_ns = max(tally.last_ns, int(sheet.times_ns[row]))
+            tally.sustained = float(sheet.scored.sustained[row])
 
     def source(self, name: str) -> SourceTally:
         """Return the tally of one source."""

@@ -8,7 +8,7 @@ and not ahead of the clock move it.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Any, Protocol
 
 import numpy as np
@@ -18,11 +18,11 @@ from numpy.typing import NDArray
 from service.engine import Engine, Scored
 from service.layout import unpack_readings
 from service.parse import Batch
+from service.sheet import CONFLICT, KNOWN, NO_ROOM, Sheet
 from service.store.group import Group
 from service.store.states import SourceState, StoredRecord
 from service.store.tables import FLAG_AHEAD, FLAG_LATE, FLAG_NOT_JUDGED
 
-STORED, KNOWN, CONFLICT, NO_ROOM = 0, 1, 2, 3
 # A record further ahead of the server's clock than this is scored and leaves the standing
 # alone: one machine with a wrong clock must not make all that follows late.
 AHEAD_NS = 5 * 60 * 1_000_000_000
@@ -38,18 +38,13 @@ class Job:
     channels: bool = False
 
 
-@dataclass(slots=True)
+@dataclass(frozen=True, slots=True)
 class Outcome:
-    """What became of a batch's rows; arrays are (n,).
+    """What became of one batch: its rows of the group's sheet, from start to before stop."""
 
-    status: STORED, KNOWN, CONFLICT or NO_ROOM. flags: FLAG_* of the store.
-    model_of: the model's name of known rows that another model scored.
-    """
-
-    scored: Scored
-    status: NDArray[np.uint8]
-    flags: NDArray[np.int16]
-    model_of: dict[int, str] = field(default_factory=dict)
+    sheet: Sheet
+    start: int
+    stop: int
 
 
 @dataclass(frozen=True, slots=True)
@@ -85,25 +80,8 @@ class GroupScorer:
 
     def __init__(self, group: Group, engine: Engine, jobs: Sequence[Job], now_ns: int) -> None:
         self.group, self.engine, self.jobs, self.now_ns = group, engine, jobs, now_ns
-        batches = [job.batch for job in jobs]
-        self.sources = [name for batch in batches for name in batch.sources]
-        n = len(self.sources)
-        if len(batches) == 1:
-            self.times_ns, self.values = batches[0].times_ns, batches[0].values
-        else:
-            self.times_ns = np.concatenate([batch.times_ns for batch in batches])
-            self.values = np.concatenate([batch.values for batch in batches])
-        self.bad = _joined_bad(batches)
+        self.sheet = Sheet.of(engine, [job.batch for job in jobs])
         self.channels = any(job.channels for job in jobs)
-        self.outcome = Outcome(
-            Scored.empty(n), np.zeros(n, dtype=np.uint8), np.zeros(n, dtype=np.int16)
-        )
-        self.extra: dict[int, dict[str, Any]] = {}
-        start = 0
-        for batch in batches:
-            for row, extra in batch.extra.items():
-                self.extra[start + row] = extra
-            start += len(batch.sources)
         self.kept: list[tuple[SourceState, list[int]]] = []
         self.copies: dict[int, int] = {}
         self.runs: list[Run] = []
@@ -111,13 +89,13 @@ class GroupScorer:
     def run(self, sink: AlertSink) -> list[Outcome]:
         """Score, insert, save; the caller commits. Returns an outcome for each job."""
         rows_of: dict[str, list[int]] = {}
-        for row, name in enumerate(self.sources):
+        for row, name in enumerate(self.sheet.sources):
             rows_of.setdefault(name, []).append(row)
         states = self.group.sources(list(rows_of))
         for name, rows in rows_of.items():
             state = states.get(name)
             if state is None:
-                self.outcome.status[rows] = NO_ROOM
+                self.sheet.status[rows] = NO_ROOM
                 continue
             fresh = self._fresh(state, rows)
             if fresh:
@@ -132,7 +110,7 @@ class GroupScorer:
 
     def _fresh(self, state: SourceState, rows: list[int]) -> list[int]:
         """Return the rows that are not stored yet; settle the others."""
-        times = self.times_ns[rows]
+        times = self.sheet.times_ns[rows]
         if times[0] > state.newest_ns and (len(rows) == 1 or bool((np.diff(times) > 0).all())):
             return rows
         times_list = times.tolist()
@@ -152,17 +130,17 @@ class GroupScorer:
     def _settle_stored(self, row: int, stored: StoredRecord) -> None:
         layout_id = self._layout_id()
         same = (
-            stored.readings == self.values[row].tobytes()
-            and stored.extra == _pack(self.extra.get(row))
+            stored.readings == self.sheet.values[row].tobytes()
+            and stored.extra == _pack(self.sheet.extra.get(row))
             if stored.layout_id == layout_id
             else self._stored_readings(stored) == self._given_readings(row)
         )
         if not same:
-            self.outcome.status[row] = CONFLICT
+            self.sheet.status[row] = CONFLICT
             return
-        self.outcome.status[row] = KNOWN
-        self.outcome.flags[row] = stored.flags
-        scored = self.outcome.scored
+        self.sheet.status[row] = KNOWN
+        self.sheet.flags[row] = stored.flags
+        scored = self.sheet.scored
         scored.surprise[row] = _or_nan(stored.surprise)
         scored.excess[row] = _or_nan(stored.excess)
         scored.sustained[row] = _or_nan(stored.sustained)
@@ -174,23 +152,23 @@ class GroupScorer:
             scored.suspect_surprise[row], scored.low[row] = detail[0], detail[1]
             scored.high[row], scored.best[row] = detail[2], detail[3]
         else:
-            self.outcome.model_of[row] = self.group.layout_model(stored.layout_id)
+            self.sheet.model_of[row] = self.group.layout_model(stored.layout_id)
 
     def _settle_twin(self, row: int, first: int) -> None:
-        same = self.values[row].tobytes() == self.values[first].tobytes()
-        if same and self.extra.get(row) == self.extra.get(first):
-            self.outcome.status[row] = KNOWN
+        same = self.sheet.values[row].tobytes() == self.sheet.values[first].tobytes()
+        if same and self.sheet.extra.get(row) == self.sheet.extra.get(first):
+            self.sheet.status[row] = KNOWN
             self.copies[row] = first
         else:
-            self.outcome.status[row] = CONFLICT
+            self.sheet.status[row] = CONFLICT
 
     def _copy_repeats(self) -> None:
-        scored = self.outcome.scored
+        scored = self.sheet.scored
         for row, first in self.copies.items():
             for name in _ARRAYS:
                 array = getattr(scored, name)
                 array[row] = array[first]
-            self.outcome.flags[row] = self.outcome.flags[first]
+            self.sheet.flags[row] = self.sheet.flags[first]
             if first in scored.words:
                 scored.words[row] = scored.words[first]
             if first in scored.every:
@@ -198,37 +176,54 @@ class GroupScorer:
 
     def _score(self, state: SourceState, rows: list[int]) -> None:
         """Score a source's fresh rows and advance its state."""
-        times = self.times_ns[rows]
+        if state.live is None or state.model != self.engine.name:
+            state.live = self.engine.standing_from(state.standing)
+        times = self.sheet.times_ns[rows]
+        newest_ns = int(times.max())
+        if len(rows) == 1:
+            self._score_one(state, rows, newest_ns)
+        else:
+            self._score_many(state, rows, times)
+        state.newest_ns = max(state.newest_ns, newest_ns)
+        state.n_records += len(rows)
+        state.n_over_level += int(np.count_nonzero(self.sheet.scored.alert[rows]))
+
+    def _score_one(self, state: SourceState, rows: list[int], time_ns: int) -> None:
+        """Score one row without arrays of flags: most requests bring one record."""
+        mark = 0
+        if time_ns > self.now_ns + AHEAD_NS:
+            mark = FLAG_AHEAD
+        elif time_ns <= state.last_ns:
+            mark = FLAG_LATE
+        self._score_run(state, rows, moves=not mark)
+        if mark:
+            self.sheet.flags[rows[0]] += mark
+
+    def _score_many(self, state: SourceState, rows: list[int], times: NDArray[np.int64]) -> None:
         ahead = times > self.now_ns + AHEAD_NS
         moving = np.where(ahead, state.last_ns, times)
         newest_before = np.maximum.accumulate(np.concatenate([[state.last_ns], moving[:-1]]))
         late = ~ahead & (times <= newest_before)
-        if state.live is None or state.model != self.engine.name:
-            state.live = self.engine.standing_from(state.standing)
         still = ahead | late
         if not still.any():
             self._score_run(state, rows, moves=True)
-        else:
-            borders = np.flatnonzero(np.diff(still)) + 1
-            for part in np.split(np.arange(len(rows)), borders):
-                self._score_run(
-                    state, [rows[i] for i in part.tolist()], moves=not bool(still[part[0]])
-                )
-            self.outcome.flags[rows] += (late * FLAG_LATE + ahead * FLAG_AHEAD).astype(np.int16)
-        state.newest_ns = max(state.newest_ns, int(times.max()))
-        state.n_records += len(rows)
-        state.n_over_level += int(np.count_nonzero(self.outcome.scored.alert[rows]))
+            return
+        borders = np.flatnonzero(np.diff(still)) + 1
+        for part in np.split(np.arange(len(rows)), borders):
+            run = [rows[i] for i in part.tolist()]
+            self._score_run(state, run, moves=not bool(still[part[0]]))
+        self.sheet.flags[rows] += (late * FLAG_LATE + ahead * FLAG_AHEAD).astype(np.int16)
 
     def _score_run(self, state: SourceState, rows: list[int], *, moves: bool) -> None:
         # One source alone in its group, or one that came in one piece, needs no copy.
         whole = rows[-1] - rows[0] + 1 == len(rows)
         at: Any = slice(rows[0], rows[-1] + 1) if whole else np.array(rows)
-        times = self.times_ns[at]
-        bad = None if self.bad is None else self.bad[at]
+        times = self.sheet.times_ns[at]
+        bad = None if self.sheet.bad is None else self.sheet.bad[at]
         scored, live = self.engine.score(
-            state.name, times, self.values[at], state.live, bad, self.channels
+            state.name, times, self.sheet.values[at], state.live, bad, self.channels
         )
-        out = self.outcome
+        out = self.sheet
         out.scored.put(at, scored, rows)
         if not scored.judged.all():
             out.flags[at] += (~scored.judged * FLAG_NOT_JUDGED).astype(np.int16)
@@ -244,7 +239,7 @@ class GroupScorer:
 
     def _rows(self) -> list[tuple[Any, ...]]:
         """Return the rows for the store, source by source."""
-        out, scored = self.outcome, self.outcome.scored
+        out, scored = self.sheet, self.sheet.scored
         order = [row for _, rows in self.kept for row in rows]
         ids = [state.id for state, rows in self.kept for _ in rows]
         requests = self._requests()
@@ -252,14 +247,18 @@ class GroupScorer:
             [scored.suspect_surprise[order], scored.low[order], scored.high[order],
              scored.best[order]]
         ).tobytes()  # fmt: skip
-        readings = self.values[order].tobytes()
-        width = self.values.shape[1] * 8
+        readings = self.sheet.values[order].tobytes()
+        width = self.sheet.values.shape[1] * 8
         layout_id = self._layout_id()
-        extra = [_pack(self.extra.get(row)) for row in order] if self.extra else [None] * len(order)
+        extra = (
+            [_pack(self.sheet.extra.get(row)) for row in order]
+            if self.sheet.extra
+            else [None] * len(order)
+        )
         return list(
             zip(
                 ids,
-                self.times_ns[order].tolist(),
+                self.sheet.times_ns[order].tolist(),
                 [self.now_ns] * len(order),
                 [requests[row] for row in order],
                 [layout_id] * len(order),
@@ -278,7 +277,7 @@ class GroupScorer:
 
     def _requests(self) -> list[str]:
         if len(self.jobs) == 1:
-            return [self.jobs[0].request] * len(self.sources)
+            return [self.jobs[0].request] * len(self.sheet.sources)
         return [job.request for job in self.jobs for _ in job.batch.sources]
 
     def _layout_id(self) -> int:
@@ -291,15 +290,15 @@ class GroupScorer:
 
     def _given_readings(self, row: int) -> dict[str, Any]:
         channels = self.engine.layout.as_json()
-        return _present(unpack_readings(self.values[row].tobytes(), self.extra.get(row), channels))
+        return _present(
+            unpack_readings(self.sheet.values[row].tobytes(), self.sheet.extra.get(row), channels)
+        )
 
     def _split(self) -> list[Outcome]:
-        if len(self.jobs) == 1:
-            return [self.outcome]
         outcomes, start = [], 0
         for job in self.jobs:
             stop = start + len(job.batch.sources)
-            outcomes.append(_slice(self.outcome, start, stop))
+            outcomes.append(Outcome(self.sheet, start, stop))
             start = stop
         return outcomes
 
@@ -308,34 +307,6 @@ _ARRAYS = (
     "surprise", "excess", "sustained", "suspect", "suspect_surprise", "low", "high", "best",
     "alert", "judged",
 )  # fmt: skip
-
-
-def _slice(outcome: Outcome, start: int, stop: int) -> Outcome:
-    scored = outcome.scored
-    part = Scored(**{name: getattr(scored, name)[start:stop] for name in _ARRAYS})
-    rows = range(start, stop)
-    if scored.words:
-        part.words = {row - start: scored.words[row] for row in rows if row in scored.words}
-    if scored.every:
-        part.every = {row - start: scored.every[row] for row in rows if row in scored.every}
-    models = outcome.model_of
-    return Outcome(
-        part,
-        outcome.status[start:stop],
-        outcome.flags[start:stop],
-        {row - start: models[row] for row in rows if row in models} if models else {},
-    )
-
-
-def _joined_bad(batches: Sequence[Batch]) -> NDArray[np.bool_] | None:
-    if all(batch.bad is None for batch in batches):
-        return None
-    return np.concatenate(
-        [
-            batch.bad if batch.bad is not None else np.zeros_like(batch.values, dtype=np.bool_)
-            for batch in batches
-        ]
-    )
 
 
 def _present(readings: dict[str, Any]) -> dict[str, Any]:

@@ -76,11 +76,11 @@ class RecordsEndpoint:
             return orjson.dumps([batch.problems[i].as_item(i) for i in range(batch.n_items)])
         outcome = await self.service.writer.submit(Job(batch, engine, request, channels))
         if not single:
-            return orjson.dumps(batch_answers(batch, outcome, engine))
-        problem = problem_of(batch, outcome, 0)
+            return orjson.dumps(batch_answers(batch, outcome))
+        problem = problem_of(outcome, 0)
         if problem:
             raise problem
-        return orjson.dumps(next(record_answers(batch, outcome, engine)))
+        return orjson.dumps(next(record_answers(outcome)))
 
 
 def _channels(query: bytes) -> bool:

@@ -40,8 +40,8 @@ def serve_command(
     service.open()
     try:
         require_tokens_off_loopback(settings, service.tokens)
-        listener = _listen(settings)
-        _say_where(settings, listener)
+        listener = listen(settings)
+        say_where(settings, listener)
     except BaseException:
         service.database.close()
         raise
@@ -62,7 +62,8 @@ def _options(
     }
 
 
-def _listen(settings: Settings) -> socket.socket:
+def listen(settings: Settings) -> socket.socket:
+    """Return a bound socket; raises CannotListen."""
     host, port = settings.server.host, settings.server.port
     try:
         found = socket.getaddrinfo(host, port, type=socket.SOCK_STREAM, flags=socket.AI_PASSIVE)
@@ -78,7 +79,8 @@ def _listen(settings: Settings) -> socket.socket:
     return listener
 
 
-def _say_where(settings: Settings, listener: socket.socket) -> None:
+def say_where(settings: Settings, listener: socket.socket) -> None:
+    """Print where the service listens, and how to take what it says."""
     scheme = "https" if settings.server.tls_certificate else "http"
     host = settings.server.host
     shown = f"[{host}]" if ":" in host else host

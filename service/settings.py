@@ -8,11 +8,13 @@ nearest known name. Variables are ODDBRANCH_ + section + __ + key in capitals.
 from __future__ import annotations
 
 import os
+import re
 import tomllib
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any, Literal
 
+import click
 from pydantic import BaseModel, ConfigDict, Field, SecretStr, ValidationError
 from pydantic_settings import (
     BaseSettings,
@@ -254,3 +256,25 @@ def _range(section: str, key: str) -> str | None:
         return None
     what = "a whole number" if field.annotation is int else "a number"
     return f"{what} from {low:,} to {high:,} is wanted ({field.description})".replace(",", " ")
+
+
+@click.command("settings")
+@click.option("--config", type=click.Path(path_type=Path), help="Settings file of the service.")
+def settings_command(config: Path | None) -> None:
+    """Show every setting of the service in force, and where it comes from."""
+    settings, file = load_settings(config), read_file(config)
+    for section, key in known_keys():
+        field = type(Settings.model_fields[section].default).model_fields[key]
+        value = getattr(getattr(settings, section), key)
+        origin = origin_of(section, key, file, {})
+        click.echo(f"{section}.{key} = {_shown(value)}  ({origin}; {field.description})")
+
+
+def _shown(value: object) -> str:
+    if isinstance(value, SecretStr):
+        secret = value.get_secret_value()
+        # The password alone is secret; where the store is helps whoever looks for it.
+        return re.sub(r"(?<=:)[^:@/]*(?=@)", "***", secret) if secret else '""'
+    if isinstance(value, tuple):
+        return str(list(value))
+    return f'"{value}"' if isinstance(value, str | Path) else str(value).lower()

@@ -122,8 +122,8 @@ async def _answer_piece(
         # Nothing of this piece is stored; every line of it is told so in its place.
         refused = {**dict.fromkeys(range(batch.n_items), problem), **batch.problems}
         return _lines([refused[i].as_item(position + i) for i in range(batch.n_items)])
-    answers = batch_answers(batch, outcome, engine)
-    if position and (batch.problems or outcome.status.any()):
+    answers = batch_answers(batch, outcome)
+    if position and (batch.problems or not outcome.sheet.is_plain):
         _shift(answers, position)
     return _lines(answers)
 

@@ -36,9 +36,9 @@ def parse_time(text: str) -> int:
     Second 60 (a leap second) is read as the second that follows it. Raises ValueError
     with the reason as a clause.
     """
-    match = _RFC_3339.match(text)
+    match = _RFC_3339.fullmatch(text)
     if match is None:
-        if _NO_OFFSET.match(text):
+        if _NO_OFFSET.fullmatch(text):
             raise ValueError(
                 f"has no offset from UTC; end it with Z or +hh:mm, for example {_EXAMPLE}"
             )

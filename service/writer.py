@@ -22,6 +22,7 @@ from service.logs import log_event
 from service.metrics import Metrics
 from service.pipeline import AlertSink, GroupScorer, Job, Outcome
 from service.problems import Problem
+from service.sheet import Sheet
 from service.store.database import Database
 
 # Records of one transaction: more would make its first request wait for the last one's scores.
@@ -175,6 +176,7 @@ class Writer:
         started = time.perf_counter()
         group = self.database.begin(self._connected(), self.n_sources_max)
         outcomes: list[Outcome] = []
+        sheets: list[Sheet] = []
         try:
             # Batches parsed before a new model was published go through the model they
             # were parsed for; the order of the queue is the order of the models.
@@ -182,13 +184,14 @@ class Writer:
                 part = list(same)
                 scorer = GroupScorer(group, part[0].engine, part, self.clock_ns())
                 outcomes += scorer.run(self.sink)
+                sheets.append(scorer.sheet)
             scored = time.perf_counter()
             group.commit()
         except BaseException:
             self._rollback(group.rollback)
             raise
         now = time.perf_counter()
-        self.metrics.group_done(jobs, outcomes, scored - started, now - scored)
+        self.metrics.group_done(jobs, sheets, scored - started, now - scored)
         return outcomes
 
     def _do_errand(self, errand: _Errand) -> None:

@@ -80,7 +80,7 @@ class FakeEngine:
         used = values if bad is None else np.where(bad, np.nan, values)
         surprise = np.nan_to_num(used[:, 0], nan=0.0) / 10
         scored.surprise = surprise
-        scored.judged = ~np.isnan(used).all(axis=1)
+        scored.judged = np.array(np.isfinite(used).any(axis=1), dtype=np.bool_)
         scored.excess = np.where(scored.judged, surprise - 1.0, np.nan)
         scored.suspect = np.where(np.isnan(used[:, 0]), -1, 0).astype(np.int16)
         scored.suspect_surprise = surprise / 2

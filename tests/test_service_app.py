@@ -1,0 +1,438 @@
+"""The service over HTTP: what a client sends and what it reads."""
+
+from __future__ import annotations
+
+import gzip
+import json
+from collections.abc import Iterator
+from pathlib import Path
+from typing import Any
+
+import orjson
+import pytest
+from pydantic import TypeAdapter
+
+from service import schemas
+from service.pipeline import AHEAD_NS
+from service.problems import KINDS
+from tests.service_fakes import FakeEngine
+from tests.service_http import NOW_NS, START_S, Api, record, running
+
+
+@pytest.fixture
+def api(tmp_path: Path) -> Iterator[Api]:
+    with running(tmp_path) as found:
+        yield found
+
+
+def lines(*items: Any) -> bytes:
+    return b"".join(json.dumps(item).encode() + b"\n" for item in items)
+
+
+def stored(api: Api, **query: Any) -> list[dict[str, Any]]:
+    items: list[dict[str, Any]] = api.get("/records", params=query).json()["items"]
+    return items
+
+
+def test_a_record_is_answered_with_its_scores(api: Api) -> None:
+    answer = api.post(record(flow=241.3, speed=None, valve=1))
+    assert answer.status_code == 200
+    assert answer.json() == {
+        "source": "mill-lane-2",
+        "time": "2026-12-01T04:00:00Z",
+        "model": "0123456789abcdef",
+        "member": "own",
+        "surprise": 24.13,
+        "excess": 23.13,
+        "sustained": 2.313,
+        "missing": ["speed"],
+        "unknown": ["valve"],
+        "suspect": {
+            "channel": "flow",
+            "surprise": 12.065,
+            "reading": 241.3,
+            "expected": {"low": 242.3, "high": None, "best": 243.3},
+            "neighbours": ["power"],
+        },
+        "alert": None,
+    }
+
+
+def test_a_batch_is_answered_in_order_and_a_bad_item_harms_no_other(api: Api) -> None:
+    answer = api.post([record(0), {"source": 1}, record(1, flow=350.0)])
+    assert answer.status_code == 200
+    first, bad, last = answer.json()
+    assert (first["time"], last["time"]) == ("2026-12-01T04:00:00Z", "2026-12-01T04:01:00Z")
+    assert last["alert"] == "record"
+    assert bad["index"] == bad["problem"]["index"] == 1
+    assert bad["problem"]["status"] == 422
+    assert len(stored(api)) == 2
+
+
+def test_lines_are_answered_line_by_line(api: Api) -> None:
+    body = lines(record(0)) + b"nonsense\n\n" + lines(record(1))[:-1]
+    answers = api.post_lines(body)
+    assert [a.get("index") for a in answers] == [None, 1, None]
+    assert answers[1]["problem"]["type"] == "/problems/bad-json"
+    assert len(stored(api)) == 2
+
+
+def test_many_lines_keep_their_places(api: Api) -> None:
+    items: list[Any] = [record(i / 60) for i in range(2500)]
+    items[1700] = "nonsense"
+    answers = api.post_lines(lines(*items))
+    assert len(answers) == 2500
+    assert [i for i, a in enumerate(answers) if "problem" in a] == [1700]
+    assert answers[1700]["index"] == 1700
+
+
+def test_a_line_over_the_limit_is_refused_in_its_place(tmp_path: Path) -> None:
+    with running(tmp_path, limits={"line_kb": 1.0}) as api:
+        answers = api.post_lines(lines(record(0), {"x": "y" * 3000}, record(1)))
+        assert [a.get("problem", {}).get("status") for a in answers] == [None, 413, None]
+
+
+def test_the_same_record_again_is_answered_as_known_with_its_score(api: Api) -> None:
+    first = api.post(record(0, flow=200.0)).json()
+    api.post(record(1))
+    again = api.post(record(0, flow=200.0)).json()
+    assert again == {**first, "known": True}
+    assert len(stored(api)) == 2
+
+
+def test_other_readings_at_the_same_time_are_a_conflict(api: Api) -> None:
+    api.post(record(0, flow=200.0))
+    answer = api.post(record(0, flow=201.0))
+    assert answer.status_code == 409
+    assert "stored with other readings; the first one stands" in answer.json()["detail"]
+    batch = api.post([record(0, flow=201.0), record(1)]).json()
+    assert batch[0]["problem"]["status"] == 409
+    assert [item["readings"]["flow"] for item in stored(api)] == [200.0, 120.0]
+
+
+def test_a_batch_may_hold_a_record_twice(api: Api) -> None:
+    answers = api.post([record(0), record(0), record(0, flow=9.0), record(1)]).json()
+    assert answers[1] == {**answers[0], "known": True}
+    assert answers[2]["problem"]["status"] == 409
+    assert len(stored(api)) == 2
+
+
+def test_an_unseen_word_makes_a_record_another_one(api: Api) -> None:
+    assert api.post(record(0, pump="creeping")).status_code == 200
+    assert api.post(record(0, pump="crawling")).status_code == 409
+    assert api.post(record(0, pump="creeping")).json()["known"] is True
+    assert stored(api)[0]["readings"]["pump"] == "creeping"
+
+
+def test_a_late_record_is_scored_and_leaves_the_standing_alone(api: Api) -> None:
+    api.post(record(5))
+    before = api.get("/sources").json()["items"][0]
+    late = api.post(record(3, flow=399.0)).json()
+    assert late["late"] is True
+    assert late["surprise"] == 39.9
+    after = api.get("/sources").json()["items"][0]
+    assert after == {**before, "records": 2, "over_level": 1}
+
+
+def test_a_record_ahead_of_the_clock_leaves_the_standing_alone(api: Api) -> None:
+    ahead_min = (NOW_NS // 10**9 - START_S) / 60 + AHEAD_NS / 60e9
+    assert "ahead" not in api.post(record(ahead_min)).json()
+    assert api.post(record(ahead_min + 1)).json()["ahead"] is True
+    assert api.get("/sources").json()["items"][0]["last"] == "2026-12-01T05:05:00Z"
+    # What follows in order is not late because of it.
+    assert "late" not in api.post(record(ahead_min + 0.5)).json()
+
+
+def test_one_by_one_and_in_one_batch_give_the_same(tmp_path: Path) -> None:
+    items = [record(m, flow=100 + 7 * m) for m in (0, 1, 5, 3, 3, 6, 400, 7, 8, 2)]
+    with running(tmp_path / "one") as api:
+        singly = [api.post(item).json() for item in items]
+        standing = api.get("/sources").json()
+    with running(tmp_path / "many") as api:
+        assert api.post(items).json() == singly
+        assert api.get("/sources").json() == standing
+
+
+def test_bad_quality_and_out_of_span_count_as_missing(api: Api) -> None:
+    bad = record(0, flow=900.0, power={"value": 3.0, "quality": "bad"})
+    assert api.post(bad).json()["missing"] == ["flow", "power"]
+    item = stored(api)[0]
+    assert item["missing"] == ["flow", "power"]
+    assert item["readings"]["power"] == {"value": 3.0, "quality": "bad"}
+    assert item["readings"]["flow"] == 900.0
+
+
+def test_every_channel_comes_when_asked_for(api: Api) -> None:
+    answer = api.post(record(), "/records?channels=true").json()
+    assert [c["channel"] for c in answer["channels"]] == ["flow", "power", "pump", "speed"]
+    assert "channels" not in api.post(record(1), "/records?channels=false").json()
+
+
+@pytest.mark.parametrize(
+    ("query", "message"),
+    [("chanels=true", "channels=true is the only one, is it meant"), ("channels=ja", "neither")],
+)
+def test_a_query_that_is_not_known_is_refused(api: Api, query: str, message: str) -> None:
+    answer = api.post(record(), f"/records?{query}")
+    assert answer.status_code == 422
+    assert message in answer.json()["detail"]
+
+
+def test_gzip_bodies_are_unpacked(api: Api) -> None:
+    packed = gzip.compress(json.dumps(record()).encode())
+    assert api.post(packed, headers={"content-encoding": "gzip"}).status_code == 200
+    twice = gzip.compress(lines(record(1))) + gzip.compress(lines(record(2)))
+    assert len(api.post_lines(twice, headers={"content-encoding": "gzip"})) == 2
+
+
+@pytest.mark.parametrize(
+    ("body", "kind"),
+    [
+        (b"no gzip", "bad-encoding"),
+        (gzip.compress(b"{}")[:-9], "bad-encoding"),
+        (gzip.compress(b" " * 40_000_000), "too-large"),
+    ],
+)
+def test_a_packed_body_that_cannot_be_used_is_refused(api: Api, body: bytes, kind: str) -> None:
+    answer = api.post(body, headers={"content-encoding": "gzip"})
+    assert answer.json()["type"] == f"/problems/{kind}"
+    assert answer.status_code == KINDS[kind].status
+
+
+@pytest.mark.parametrize(
+    ("headers", "status", "message"),
+    [
+        ({"content-type": "application/x-www-form-urlencoded"}, 415, "with curl: -H"),
+        ({"content-type": "application/json; charset=utf-16"}, 415, "only UTF-8 is taken"),
+        ({"content-encoding": "br"}, 415, "send gzip or none"),
+        ({"host": "elsewhere.example"}, 400, "a host that is not served here"),
+        ({"origin": "https://elsewhere.example"}, 403, "another origin"),
+    ],
+)
+def test_a_header_that_cannot_be_taken_is_refused(
+    api: Api, headers: dict[str, str], status: int, message: str
+) -> None:
+    answer = api.post(record(), headers=headers)
+    assert answer.status_code == status
+    assert message in answer.json()["detail"]
+    assert not stored(api)
+
+
+def test_a_body_over_the_limit_is_refused_with_the_way_out(tmp_path: Path) -> None:
+    with running(tmp_path, limits={"body_mb": 0.001}) as api:
+        answer = api.post([record(i) for i in range(20)])
+        assert answer.status_code == 413
+        assert "application/x-ndjson" in answer.json()["detail"]
+
+
+def test_an_array_over_the_limit_is_refused_with_the_way_out(tmp_path: Path) -> None:
+    with running(tmp_path, limits={"n_batch": 3}) as api:
+        answer = api.post([record(i) for i in range(4)])
+        assert answer.status_code == 413
+        assert "at most 3 are taken" in answer.json()["detail"]
+
+
+def test_a_source_over_the_limit_is_refused_and_known_ones_go_on(tmp_path: Path) -> None:
+    with running(tmp_path, limits={"n_sources": 2}) as api:
+        answers = api.post([record(0, "a"), record(0, "b"), record(0, "c"), record(1, "a")]).json()
+        assert [a.get("problem", {}).get("status") for a in answers] == [None, None, 403, None]
+        assert api.post(record(0, "d")).status_code == 403
+        assert api.post(record(2, "b")).status_code == 200
+
+
+def test_a_full_queue_answers_503_with_retry_after(tmp_path: Path) -> None:
+    with running(tmp_path, limits={"memory_mb": 0.001}) as api:
+        answer = api.post([record(i) for i in range(20)])
+        assert answer.status_code == 503
+        assert answer.headers["retry-after"] == "1"
+        assert api.service.n_body_bytes == 0
+
+
+def test_an_empty_array_is_answered_with_one(api: Api) -> None:
+    assert api.post([]).json() == []
+    assert api.post(b"[1]").json()[0]["problem"]["status"] == 422
+    assert api.post(b"3").status_code == 422
+
+
+def test_a_fault_in_one_request_harms_no_other_and_tells_nothing(tmp_path: Path) -> None:
+    with running(tmp_path) as api:
+        engine = api.service.engine
+        assert isinstance(engine, FakeEngine)
+        engine.fail_on = "poison"
+        answer = api.post(record(0, "poison"))
+        assert answer.status_code == 500
+        assert "told to fail" not in answer.text
+        assert api.post(record(0)).status_code == 200
+        assert [s["source"] for s in api.get("/sources").json()["items"]] == ["mill-lane-2"]
+
+
+def test_every_answer_has_a_request_id_that_goes_to_the_store(api: Api) -> None:
+    answer = api.post(record(0), headers={"x-request-id": "forwarder-17"})
+    assert answer.headers["x-request-id"] == "forwarder-17"
+    assert stored(api)[0]["request"] == "forwarder-17"
+    odd = api.post(record(1), headers={"x-request-id": "spaces are not taken"})
+    assert " " not in odd.headers["x-request-id"]
+
+
+def test_pages_follow_each_other_without_gaps(api: Api) -> None:
+    api.post([record(i, source) for source in ("a", "b") for i in range(5)])
+    seen, after = [], None
+    while True:
+        query = {"limit": 3} | ({"after": after} if after else {})
+        page = api.get("/records", params=query).json()
+        seen += [(item["source"], item["time"][14:16]) for item in page["items"]]
+        after = page["next"]
+        if after is None:
+            break
+    assert seen == [(s, f"{i:02d}") for s in ("a", "b") for i in range(5)]
+
+
+def test_records_are_chosen_by_source_and_time(api: Api) -> None:
+    api.post([record(i, source) for source in ("a", "b") for i in range(5)])
+    found = stored(
+        api, source="b", **{"from": "2026-12-01T04:01:00Z", "to": "2026-12-01T05:03:00+01:00"}
+    )
+    assert [item["time"][14:16] for item in found] == ["01", "02"]
+    newest = stored(api, source="b", newest=True, limit=2)
+    assert [item["time"][14:16] for item in newest] == ["04", "03"]
+
+
+def test_all_records_come_as_lines_when_asked_for(api: Api) -> None:
+    api.post([record(i / 60) for i in range(250)])
+    answer = api.get("/records", headers={"accept": "application/x-ndjson"})
+    assert answer.headers["content-type"].startswith("application/x-ndjson")
+    assert len(answer.text.splitlines()) == 250
+
+
+@pytest.mark.parametrize(
+    ("path", "message"),
+    [
+        ("/records?from=yesterday", "from = 'yesterday' is not an RFC 3339 time"),
+        ("/records?limit=0", "limit"),
+        ("/records?limit=many", "limit"),
+        ("/records?after=xyz", "after is not the `next` of a page before"),
+        ("/records?after=WzFd", "after is not the `next` of a page before"),
+        ("/sources?after=WzFd", "after is not the `next` of a page before"),
+        ("/model?source=", "source"),
+    ],
+)
+def test_a_page_that_cannot_be_given_says_why(api: Api, path: str, message: str) -> None:
+    answer = api.get(path)
+    assert answer.status_code == 422
+    assert answer.headers["content-type"] == "application/problem+json"
+    assert message in answer.json()["detail"]
+
+
+def test_alerts_are_the_records_over_a_level_newest_first(api: Api) -> None:
+    api.post([record(i, flow=390.0 if i % 2 else 10.0) for i in range(6)])
+    page = api.get("/alerts", params={"limit": 2}).json()
+    assert [item["time"][14:16] for item in page["items"]] == ["05", "03"]
+    following = api.get("/alerts", params={"limit": 2, "after": page["next"]}).json()
+    assert [item["time"][14:16] for item in following["items"]] == ["01"]
+    assert page["advice"] == schemas.ADVICE
+
+
+@pytest.mark.parametrize(
+    ("path", "model"),
+    [
+        ("/records", schemas.RecordsPage),
+        ("/alerts", schemas.AlertsPage),
+        ("/sources", schemas.SourcesPage),
+        ("/model", schemas.ModelPage),
+        ("/model?source=mill-lane-1", schemas.ModelPage),
+        ("/pruned", schemas.PrunedPage),
+        ("/health/live", schemas.Health),
+        ("/health/ready", schemas.Health),
+    ],
+)
+def test_pages_are_as_they_are_described(api: Api, path: str, model: type[Any]) -> None:
+    api.post([record(i, flow=390.0, pump="creeping", x=1) for i in range(3)])
+    TypeAdapter(model).validate_json(api.get(path).content)
+
+
+def test_answers_are_as_they_are_described(api: Api) -> None:
+    answers = api.post([record(0), 3, record(0), record(-5)], "/records?channels=1").json()
+    TypeAdapter(list[schemas.Score | schemas.ProblemItem]).validate_python(answers)
+
+
+def test_what_is_not_there_is_a_problem_too(api: Api) -> None:
+    for method, path, status in (
+        ("GET", "/nothing", 404),
+        ("DELETE", "/records", 405),
+        ("PUT", "/sources", 405),
+        ("GET", "/problems/none", 404),
+    ):
+        answer = api.request(method, path)
+        assert answer.status_code == status
+        assert answer.headers["content-type"] == "application/problem+json"
+    assert "GET" in api.request("PUT", "/sources").headers["allow"]
+
+
+@pytest.mark.parametrize("kind", KINDS)
+def test_every_kind_of_problem_is_explained(api: Api, kind: str) -> None:
+    answer = api.get(f"/problems/{kind}")
+    assert answer.status_code == 200
+    assert KINDS[kind].way_out in answer.text
+
+
+def test_no_page_of_another_origin_is_let_in(api: Api) -> None:
+    answer = api.request("OPTIONS", "/records", headers={"origin": "http://127.0.0.1:8321"})
+    assert "access-control-allow-origin" not in answer.headers
+    assert answer.status_code == 405
+
+
+def test_the_page_shows_sources_against_their_level_and_the_caution(api: Api) -> None:
+    api.post([record(i, "<b>mill</b>", flow=390.0) for i in range(30)])
+    page = api.get("/")
+    assert page.status_code == 200
+    assert schemas.ADVICE in page.text
+    assert "&lt;b&gt;mill&lt;/b&gt;" in page.text
+    assert 'class="track over"' in page.text
+    assert "look at flow first, it read 390" in page.text
+    assert "http" not in page.text.replace("http-equiv", "")
+
+
+def test_the_description_names_every_channel_with_its_unit(api: Api) -> None:
+    document = api.get("/openapi.json").json()
+    readings = document["components"]["schemas"]["Record"]["properties"]["readings"]["properties"]
+    assert readings["flow"]["description"] == "measurement, unit m3/h"
+    assert readings["pump"]["description"] == "state, no unit; words: running, stopped"
+
+
+def test_every_field_is_described_with_a_unit_and_an_example(api: Api) -> None:
+    schemas_found = api.get("/openapi.json").json()["components"]["schemas"]
+    wanting = []
+    units = ("no unit", "nats", "unit", "RFC 3339", "count", "ratio")
+    for name, schema in schemas_found.items():
+        for key, described in schema.get("properties", {}).items():
+            if not any(unit in described.get("description", "") for unit in units):
+                wanting.append(f"{name}.{key} has no unit")
+            if key != "items" and "examples" not in described:
+                wanting.append(f"{name}.{key} has no example")
+    assert not wanting, "\n".join(wanting)
+
+
+def test_a_restarted_service_has_every_record_and_standing(tmp_path: Path) -> None:
+    items = [record(i, flow=100.0 + i) for i in range(40)]
+    with running(tmp_path / "whole") as api:
+        unbroken = api.post(items).json()
+        standing = api.get("/sources").json()
+    with running(tmp_path / "two") as api:
+        first = api.post(items[:17]).json()
+    with running(tmp_path / "two") as api:
+        assert first + api.post(items[17:]).json() == unbroken
+        assert api.get("/sources").json() == standing
+        assert len(stored(api)) == 40
+
+
+def test_logs_hold_ids_and_no_readings(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    with running(tmp_path, log={"requests": "all"}) as api:
+        api.post(record(flow=123.456), headers={"authorization": "Bearer hush.secret"})
+        api.post(record(flow="123.456"))
+    written = capsys.readouterr().err
+    assert "123.456" not in written
+    assert "hush" not in written
+    events = [orjson.loads(line) for line in written.splitlines()]
+    requests = [event for event in events if event["event"] == "request"]
+    assert [event["status"] for event in requests] == [200, 422]
+    assert all(event["request"] for event in requests)
