@@ -97,7 +97,7 @@ def _publish(path: Path, text: str, packed: bytes) -> None:
     aside = Path(tempfile.mkdtemp(prefix=f".{path.name}-", dir=path.parent))
     try:
         for name, content in (("model.json", text.encode()), ("tables.npz", packed)):
-            with open(aside / name, "wb") as file:
+            with (aside / name).open("wb") as file:
                 file.write(content)
                 file.flush()
                 os.fsync(file.fileno())
@@ -105,11 +105,11 @@ def _publish(path: Path, text: str, packed: bytes) -> None:
         if path.exists():
             # A directory cannot be replaced in one step where the old one is not empty.
             old = Path(tempfile.mkdtemp(prefix=f".{path.name}-old-", dir=path.parent))
-            os.rename(path, old / "model")
-            os.rename(aside, path)
+            path.rename(old / "model")
+            aside.rename(path)
             shutil.rmtree(old)
         else:
-            os.rename(aside, path)
+            aside.rename(path)
     finally:
         shutil.rmtree(aside, ignore_errors=True)
     descriptor = os.open(path.parent, os.O_RDONLY)

@@ -21,7 +21,7 @@ def _reach(p: Floats, borders: Floats, first: int, target: float) -> float:
     for b in range(first + 1, borders.shape[0]):
         if mass + p[b] >= target:
             part = (target - mass) / p[b] if p[b] > 0.0 else 1.0
-            return borders[b - 1] + part * (borders[b] - borders[b - 1])
+            return float(borders[b - 1] + part * (borders[b] - borders[b - 1]))
         mass += p[b]
     return np.inf
 
@@ -33,7 +33,7 @@ def _reach_down(p: Floats, borders: Floats, last: int, target: float) -> float:
     for b in range(last, 0, -1):
         if mass + p[b] >= target:
             part = (target - mass) / p[b] if p[b] > 0.0 else 1.0
-            return borders[b] - part * (borders[b] - borders[b - 1])
+            return float(borders[b] - part * (borders[b] - borders[b - 1]))
         mass += p[b]
     return -np.inf
 
@@ -43,7 +43,7 @@ def _middle(p: Floats, borders: Floats) -> float:
     """Return the median of the belief, interpolated; the nearest border if it lies beyond."""
     if p[0] >= 0.5:
         return float(borders[0])
-    x = _reach(p, borders, 0, 0.5 - p[0])
+    x = _reach(p, borders, 0, 0.5 - float(p[0]))
     return float(borders[-1]) if x == np.inf else x
 
 
@@ -71,13 +71,13 @@ def shortest_interval(p: Floats, borders: Floats, resolution: float) -> tuple[fl
     if width == np.inf:
         # The closed bins hold too little, so at least one side is open.
         if p[0] >= p[n] and p[0] < EXPECTED_SHARE:
-            high = _reach(p, borders, 0, EXPECTED_SHARE - p[0])
+            high = _reach(p, borders, 0, EXPECTED_SHARE - float(p[0]))
         elif p[0] >= EXPECTED_SHARE:
             high = borders[0]
         elif p[n] >= EXPECTED_SHARE:
             low = borders[n - 1]
         else:
-            low = _reach_down(p, borders, n - 1, EXPECTED_SHARE - p[n])
+            low = _reach_down(p, borders, n - 1, EXPECTED_SHARE - float(p[n]))
     if resolution > 0.0:
         # A hair inside, so that a border that is a multiple already stays where it is.
         if low > -np.inf:

@@ -28,8 +28,8 @@ LOW, HIGH = 1e-250, 1e250
 @njit(cache=True, nogil=True, inline="always")
 def _log_ratio(t: TreeArrays, slot: int, own: int, across: int) -> float:
     if t.is_left[slot]:
-        return t.log_ratio[t.edge[slot], own, across]
-    return t.log_ratio[t.edge[slot], across, own]
+        return float(t.log_ratio[t.edge[slot], own, across])
+    return float(t.log_ratio[t.edge[slot], across, own])
 
 
 @njit(cache=True, nogil=True)
@@ -364,4 +364,5 @@ def belief_row(t: TreeArrays, row: BinRows, node: int) -> Floats:
     seen = np.zeros(n_nodes, np.bool_)
     vec = np.zeros(t.marginal.shape)
     _belief(t, node, row, order, via, seen, vec)
-    return vec[node]
+    belief: Floats = vec[node]
+    return belief

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from scoring.bins import MISSING, BinRows
 from scoring.channels import Channel
 from scoring.density import belief_of, removal_of
-from scoring.derived import derive
+from scoring.derived import Carry, derive
 from scoring.excess import ExcessScale
 from scoring.expected import shortest_interval
 from scoring.kernels import belief_row
@@ -94,7 +94,7 @@ class Scorer:
     def warm(self) -> None:
         """Compile or load every kernel, so that the first record is as fast as the next."""
         values = np.full((2, len(self.instruments)), np.nan)
-        for column, instrument in enumerate(self.instruments):
+        for column in range(len(self.instruments)):
             borders = self.model.fleet.bins[column].borders
             values[0, column] = borders[len(borders) // 2] if len(borders) else 0.0
             values[1, column] = values[0, column] if column else np.nan
@@ -172,7 +172,7 @@ class Scorer:
 
     def _derive(
         self, times_ns: NDArray[np.int64], values: Floats, standing: Standing | None
-    ) -> tuple[Floats, object]:
+    ) -> tuple[Floats, Carry | None]:
         """Return all nodes' values; late records neither see nor become the last record."""
         carry = standing.carry if standing else None
         newest = np.maximum.accumulate(times_ns)

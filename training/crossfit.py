@@ -1,0 +1,176 @@
+"""Held-out scores: every block of time scored by bins and tables that never saw it.
+
+From them come what is usual for a source, and the excess and sustained values from
+which levels are set. Scores go to a file as they are made, so memory does not grow with
+the history.
+"""
+
+from __future__ import annotations
+
+import tempfile
+from collections.abc import Iterator
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scoring.bins import MISSING
+from scoring.density import removal_of
+from scoring.derived import groups
+from scoring.excess import ENOUGH_TRUE_ROWS, ExcessScale
+from scoring.model import Levels, Member, Part, Usual
+from scoring.sustained import sustain
+from training.blocks import N_FOLDS
+from training.fit import Density
+from training.rows import Rows
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+# Held-out records that a member carries as bins, for what is usual under any mask.
+MAX_USUAL_ROWS = 3000
+# Records from which medians and 99 % points are taken.
+MAX_MEASURED = 60_000
+
+
+@dataclass(frozen=True)
+class HeldOut:
+    """One source's held-out surprise, in a file, with figures of it.
+
+    density: mean held-out surprise in nats a record. fitted: the same on the records that
+    the tables did see, for comparison. coverage: share of readings inside their expected
+    interval. n_scored: records clear of their block's guard.
+    """
+
+    path: Path
+    n_records: int
+    n_scored: int
+    density: float
+    usual: Usual
+
+    def surprise(self, start: int, stop: int) -> Floats:
+        """Return held-out surprise of records start to stop, NaN within a guard."""
+        with self.path.open("rb") as file:
+            file.seek(8 * start)
+            return np.fromfile(file, dtype=np.float64, count=stop - start)
+
+
+def hold_out(
+    rows: Rows, source: str, members: list[Member], final: Member, folder: Path
+) -> HeldOut:
+    """Score each fold of one source by the member that did not see it.
+
+    members: one a fold, each learned from the other folds. final: the member that will be
+    used; the kept rows carry its bins. folder: for the file of scores.
+    """
+    with tempfile.NamedTemporaryFile(dir=folder, delete=False) as file:
+        path = Path(file.name)
+        sampled = _Sampled(rows.of(source).n_records)
+        total, n_scored, n_records = 0.0, 0, 0
+        for chunk in rows.of(source).chunks():
+            surprise = np.full(len(chunk.times_ns), np.nan)
+            own = np.full((len(surprise), len(rows.table.instruments)), np.nan)
+            for fold in range(N_FOLDS):
+                use = (chunk.fold == fold) & chunk.clear
+                if use.any():
+                    surprise[use], own[use] = score_values(members[fold], rows, chunk.values[use])
+            file.write(surprise.tobytes())
+            there = ~np.isnan(surprise)
+            total += float(surprise[there].sum())
+            n_scored += int(there.sum())
+            n_records += len(surprise)
+            bins = final.bin_table.rows(chunk.values[there])
+            sampled.add(surprise[there], own[there], bins)
+    return HeldOut(path, n_records, n_scored, total / max(n_scored, 1), sampled.usual())
+
+
+def score_values(member: Member, rows: Rows, values: Floats) -> tuple[Floats, Floats]:
+    """Return surprise (n,) and each instrument's own (n, n_instruments) of node values."""
+    start, nodes = groups(rows.table)
+    return removal_of(member, member.bin_table.rows(values), start, nodes)
+
+
+class _Sampled:
+    """A sample of held-out records: surprise, each channel's own, bins under the final member."""
+
+    def __init__(self, n_records: int) -> None:
+        self._every = max(1, n_records // MAX_MEASURED)
+        self._seen = 0
+        self._parts: list[tuple[Floats, Floats, NDArray[np.uint8]]] = []
+
+    def add(self, surprise: Floats, own: Floats, bins: NDArray[np.uint8]) -> None:
+        """Take every so many-th record."""
+        at = np.arange(-self._seen % self._every, len(surprise), self._every)
+        self._seen += len(surprise)
+        self._parts.append((surprise[at], own[at], bins[at]))
+
+    def usual(self) -> Usual:
+        """Return what is usual under the final member."""
+        return usual_of(*(np.concatenate(p) for p in zip(*self._parts, strict=True)))
+
+
+def usual_of(surprise: Floats, own: Floats, bins: NDArray[np.uint8]) -> Usual:
+    """Return what is usual from scored records; sustained is set later, with the levels.
+
+    surprise: (n,), own: (n, n_instruments) nats, bins: (n, n_nodes).
+    """
+    n_instruments = own.shape[1]
+    middle, spread = np.zeros(n_instruments), np.ones(n_instruments)
+    if not len(surprise):
+        return Usual(0.0, 1.0, 0.0, middle, spread, bins)
+    keep = np.linspace(0, len(bins) - 1, min(MAX_USUAL_ROWS, len(bins))).astype(int)
+    whole = ~(bins == MISSING).any(axis=1)
+    full = surprise[whole] if whole.sum() >= ENOUGH_TRUE_ROWS else surprise
+    for i in range(n_instruments):
+        there = own[~np.isnan(own[:, i]), i]
+        if len(there):
+            middle[i] = np.median(there)
+            spread[i] = max(float(np.quantile(there, 0.99)) - middle[i], 1e-3)
+    return Usual(
+        float(np.median(full)), float(np.quantile(full, 0.99)), 0.0, middle, spread, bins[keep]
+    )
+
+
+@dataclass(frozen=True, slots=True)
+class Followed:
+    """Some consecutive records of one source: times, excess and sustained, (n,) each."""
+
+    times_ns: Ints
+    excess: Floats
+    sustained: Floats
+
+
+def follow(rows: Rows, member: Member, held_out: HeldOut, levels: Levels) -> Iterator[Followed]:
+    """Yield held-out excess and sustained in time order, in chunks.
+
+    excess is NaN within guards and where too few readings are there to judge.
+    """
+    scale = ExcessScale(member)
+    n_instruments = len(rows.table.instruments)
+    last_ns, value, start = -1, member.usual.sustained, 0
+    for chunk in rows.of(member.source).chunks():
+        surprise = held_out.surprise(start, start + len(chunk.times_ns))
+        start += len(chunk.times_ns)
+        bins = member.bin_table.rows(chunk.values)
+        n_usable = (~np.isnan(chunk.values[:, :n_instruments])).sum(axis=1)
+        excess = np.where(n_usable >= levels.least_readings, scale.excess(bins, surprise), np.nan)
+        sustained, _, last_ns, value = sustain(
+            chunk.times_ns,
+            excess,
+            last_ns,
+            value,
+            member.usual.sustained,
+            levels.tau_s,
+            levels.step_s,
+            levels.cap,
+        )
+        yield Followed(chunk.times_ns, excess, sustained)
+
+
+def member_of(source: str, density: Density, usual: Usual | None = None) -> Member:
+    """Return a member with one part from a fitted density."""
+    from_nothing = Usual(
+        0.0, 1.0, 0.0, np.zeros(0), np.zeros(0), np.zeros((0, len(density.nodes)), np.uint8)
+    )
+    return Member(source, density.bins, (Part(density.tree),), usual or from_nothing)

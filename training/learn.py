@@ -1,0 +1,211 @@
+"""`oddbranch learn`: from history to a model directory, and what a person wants to know."""
+
+from __future__ import annotations
+
+import tempfile
+import time
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import Any
+
+import click
+
+from scoring.artefact import write_model
+from scoring.channels import ChannelTable, load_channels
+from scoring.model import Levels, Model
+from training.history.files import history_n_bytes
+from training.history.flags import history_flags, history_options
+from training.history.spool import Spool, spool_history
+from training.levels import Curve, set_levels
+from training.members import LEAST_OWN_RECORDS, Learned, learn_fleet, learn_member
+from training.progress import Progress
+from training.rows import DEFAULT_STEP_S, Rows
+from training.settings import LearnSettings, load_learn_settings
+from training.treetext import tree_lines
+
+
+@dataclass(frozen=True)
+class LearnResult:
+    """A model with all that its report needs."""
+
+    model: Model
+    learned: dict[str, Learned]
+    curves: dict[str, Curve]
+    seconds: float
+
+
+def learn_model(
+    spool: Spool, table: ChannelTable, settings: LearnSettings, progress: Progress | None = None
+) -> LearnResult:
+    """Learn a model from spooled history.
+
+    Sources with too few records of their own are left to the fleet's member.
+    """
+    began = time.perf_counter()
+    step_s = table.step_s or DEFAULT_STEP_S
+    rows = Rows(spool, table, spool.sources, step_s)
+    enough = [s for s in spool.sources if spool.n_records(s) >= LEAST_OWN_RECORDS]
+    with tempfile.TemporaryDirectory(prefix="oddbranch-held-out-") as folder:
+        learned = {}
+        for source in enough:
+            learned[source] = learn_member(rows, source, Path(folder))
+            if progress is not None:
+                progress.advance(1)
+        only = learned[enough[0]] if len(spool.sources) == 1 and enough else None
+        fleet = learn_fleet(rows, only)
+        if progress is not None:
+            progress.advance(1)
+        start = Levels(
+            record=1e6,
+            sustained=1e6,
+            cap=1e6,
+            tau_s=settings.sustained.time_constant_steps * step_s,
+            step_s=step_s,
+            least_readings=max(1, round(settings.judging.least_share * len(table.instruments))),
+        )
+        members = {s: one.member for s, one in learned.items()}
+        levels, members, curves = set_levels(
+            rows,
+            members,
+            {s: one.held_out for s, one in learned.items()},
+            start,
+            settings.budget.alerts_per_day * len(enough) / max(len(spool.sources), 1),
+        )
+    members = {s: replace(m, about=_about(rows, learned[s])) for s, m in members.items()}
+    rests = [m.usual.sustained for m in members.values()] or [0.0]
+    fleet = replace(fleet, usual=replace(fleet.usual, sustained=sum(rests) / len(rests)), source="")
+    table = table.model_copy(update={"step_s": step_s})
+    about = {
+        "n_records": rows.n_records,
+        "n_sources": len(spool.sources),
+        "alerts_per_day": settings.budget.alerts_per_day,
+        "first_ns": spool.report.first_ns,
+        "last_ns": spool.report.last_ns,
+    }
+    model = Model(table, members, fleet, levels, about=about)
+    return LearnResult(model, learned, curves, time.perf_counter() - began)
+
+
+def _about(rows: Rows, one: Learned) -> dict[str, Any]:
+    first, last = rows.spool.first_last_ns(one.member.source)
+    return {
+        "n_records": one.density.n_records,
+        "first_ns": first,
+        "last_ns": last,
+        "held_out_records": one.held_out.n_scored,
+        "held_out_surprise": round(one.held_out.density, 4),
+        "n_bins": one.density.choice.n_bins,
+        "share": one.density.choice.share,
+        "masses": one.density.choice.mass.tolist(),
+    }
+
+
+@click.command("learn")
+@click.argument("history", nargs=-1, required=True, metavar="HISTORY...")
+@click.option(
+    "--channels",
+    required=True,
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="Channel table, as `oddbranch survey` proposes it.",
+)
+@click.option(
+    "--out",
+    required=True,
+    type=click.Path(path_type=Path),
+    metavar="MODEL",
+    help="Model directory to write.",
+)
+@click.option(
+    "--config",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="Settings, as in config/learn.toml.",
+)
+@click.option(
+    "--exclude",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="Periods to leave out: source,start,end,reason.",
+)
+@click.option(
+    "--rejected",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="Where to list rows that were not used.",
+)
+@history_flags
+def learn_command(
+    history: tuple[str, ...],
+    channels: Path,
+    out: Path,
+    config: Path | None,
+    exclude: Path | None,
+    rejected: Path | None,
+    **flags: Any,
+) -> None:
+    """Learn a model from HISTORY: files, folders or patterns, CSV or Parquet."""
+    began = time.perf_counter()
+    table = load_channels(channels)
+    settings = load_learn_settings(config)
+    options = history_options(**flags)
+    with Progress("reading history", history_n_bytes(history)) as progress:
+        spool = spool_history(history, table, options, progress, exclude=exclude, rejected=rejected)
+    with spool:
+        for line in history_lines(spool):
+            click.echo(line)
+        with Progress("learning", len(spool.sources) + 1) as progress:
+            result = learn_model(spool, table, settings, progress)
+    model = write_model(result.model, out)
+    for line in result_lines(result):
+        click.echo(line)
+    click.echo(f"model {model.name} written to {out} in {time.perf_counter() - began:.1f} s")
+
+
+def history_lines(spool: Spool) -> list[str]:
+    """Return what came of reading the history, for a person."""
+    report = spool.report
+    n_kept = sum(report.n_records.values())
+    n_bad = sum(report.rejected.values())
+    lines = [
+        f"{report.n_rows} rows read, {n_kept} records kept of {len(report.n_records)} "
+        f"source{'s' if len(report.n_records) != 1 else ''}, {n_bad} rejected"
+    ]
+    for reason, n in report.rejected.most_common():
+        lines.append(f"  rejected: {n} {reason} (first: {report.first[reason]})")
+    for reason, n in report.excluded.most_common():
+        lines.append(f"  excluded: {n} {reason}")
+    for what, counter in (
+        ("outside the span", report.outside_span),
+        ("unknown word", report.unknown_words),
+        ("bad quality", report.bad_quality),
+    ):
+        for channel, n in counter.most_common():
+            lines.append(f"  {channel}: {n} readings {what}")
+    return lines
+
+
+def result_lines(result: LearnResult) -> list[str]:
+    """Return what was learned: the tree, held-out figures, levels."""
+    model = result.model
+    lines = []
+    shown = next(iter(result.learned.values()), None)
+    if shown is not None:
+        name = shown.member.source
+        lines.append(f"tree of {name} (nats on its edges):")
+        lines += ["  " + line for line in tree_lines(model.table, shown.member.parts[0].tree)]
+        for source, one in result.learned.items():
+            choice = one.density.choice
+            lines.append(
+                f"{source}: {one.density.n_records} records, "
+                f"{len(one.density.tree.edges)} edges, {choice.n_bins} bins, "
+                f"held-out surprise {one.held_out.density:.2f} nats a record "
+                f"over {one.held_out.n_scored} records"
+            )
+    days = result.curves["sustained"].days
+    lines.append(
+        f"levels for {model.about['alerts_per_day']:g} alerts a day: excess "
+        f"{model.levels.record:.2f}, sustained {model.levels.sustained:.2f} nats, "
+        f"from {days * 24:.1f} source-hours held out"
+    )
+    return lines

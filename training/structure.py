@@ -1,0 +1,253 @@
+"""Which channels go with which: edge weights and the forest of greatest weight.
+
+Two measurements, or a measurement and a state, are weighed by what their shaped table
+gains on blocks of time that it did not see, in nats a record. Two states are weighed by
+their mutual information less Suzuki's penalty (Suzuki 1993, UAI). Only edges that pay
+are taken, heaviest first (Kruskal 1956), which gives the forest of greatest weight.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+from numba import njit, prange
+from numpy.typing import NDArray
+
+from training.copula import normal_cells
+from training.tables import mutual_information, shaped_joint
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+# Weights of the shape, in records, and independent share while edges are weighed: each pair
+# is weighed with the mass that suits it, since a short history says little by counts.
+WEIGHING_MASSES = np.array([30.0, 300.0, 3000.0, 100_000.0])
+WEIGHING_SHARE = 0.01
+
+
+@dataclass(frozen=True)
+class CoarseNode:
+    """A node on the coarse bins that weigh edges; no state has scores.
+
+    scores: (n_bins - 1,) normal scores of the borders. marginal: (n_bins,).
+    """
+
+    scores: Floats
+    marginal: Floats
+    is_state: bool
+
+
+def spanning_forest(
+    weights: Floats,
+    required: tuple[tuple[int, int], ...] = (),
+    forbidden: frozenset[tuple[int, int]] = frozenset(),
+    least: float = 0.0,
+) -> list[tuple[int, int]]:
+    """Return the edges of the forest of greatest weight, (left, right) with left < right.
+
+    weights: (n, n) symmetric; only edges above `least` are taken, but for the required.
+    Equal weights are cut by channel order, so that two trainings give the same tree.
+    """
+    n = len(weights)
+    group = list(range(n))
+
+    def root(i: int) -> int:
+        while group[i] != i:
+            group[i] = group[group[i]]
+            i = group[i]
+        return i
+
+    chosen = []
+    for left, right in sorted((min(p), max(p)) for p in required):
+        group[root(left)] = root(right)
+        chosen.append((left, right))
+    left_nodes, right_nodes = np.triu_indices(n, 1)
+    order = np.lexsort((right_nodes, left_nodes, -weights[left_nodes, right_nodes]))
+    for k in order.tolist():
+        left, right = int(left_nodes[k]), int(right_nodes[k])
+        if not weights[left, right] > least:
+            break
+        if (left, right) in forbidden or root(left) == root(right):
+            continue
+        group[root(left)] = root(right)
+        chosen.append((left, right))
+    return sorted(chosen)
+
+
+def suzuki_weight(counts: NDArray[np.int64]) -> float:
+    """Return a state pair's weight: I - (a - 1)(b - 1) ln n / 2n, nats.
+
+    counts: (a_all, b_all) records per cell; a and b are the words that occur.
+    """
+    n = int(counts.sum())
+    if n == 0:
+        return -math.inf
+    joint = counts / n
+    left, right = joint.sum(axis=1), joint.sum(axis=0)
+    a, b = int((left > 0).sum()), int((right > 0).sum())
+    penalty = (a - 1) * (b - 1) * math.log(n) / (2 * n)
+    safe_left, safe_right = np.where(left > 0, left, 1.0), np.where(right > 0, right, 1.0)
+    return float(mutual_information(joint, safe_left, safe_right)) - penalty
+
+
+@njit(cache=True, nogil=True)
+def score_correlation(counts: Floats, left: Floats, right: Floats) -> float:
+    """Return the correlation of two channels' normal scores from their counts per cell.
+
+    left, right: mean normal score of each bin. 0 where a channel does not move.
+    """
+    n = sx = sy = sxx = syy = sxy = 0.0
+    for i in range(counts.shape[0]):
+        for j in range(counts.shape[1]):
+            c = counts[i, j]
+            n += c
+            sx += c * left[i]
+            sy += c * right[j]
+            sxx += c * left[i] * left[i]
+            syy += c * right[j] * right[j]
+            sxy += c * left[i] * right[j]
+    if n < 3.0:
+        return 0.0
+    vx, vy = sxx - sx * sx / n, syy - sy * sy / n
+    if vx <= 1e-12 * n or vy <= 1e-12 * n:
+        return 0.0
+    # A few records say little: shrunk as by two more that agree with independence.
+    return (sxy - sx * sy / n) / math.sqrt(vx * vy) * n / (n + 2.0)
+
+
+@njit(cache=True, nogil=True)
+def bin_scores(scores: Floats, marginal: Floats) -> Floats:
+    """Return the mean normal score of each bin, (n_bins,), from its borders' scores."""
+    n = scores.shape[0] + 1
+    out = np.empty(n)
+    for b in range(n):
+        low = math.exp(-0.5 * scores[b - 1] ** 2) if b > 0 else 0.0
+        high = math.exp(-0.5 * scores[b] ** 2) if b < n - 1 else 0.0
+        mean = (low - high) / math.sqrt(2.0 * math.pi) / max(marginal[b], 1e-300)
+        # Beyond the range the marginal need not be the normal's: keep inside the borders.
+        if b > 0:
+            mean = max(mean, scores[b - 1])
+        if b < n - 1:
+            mean = min(mean, scores[b])
+        out[b] = mean
+    return out
+
+
+@njit(cache=True, nogil=True)
+def pair_shape(
+    counts: Floats, left: Floats, right: Floats, left_scores: Floats, right_scores: Floats
+) -> Floats:
+    """Return the shape of one pair's table: the normal copula with the counts' correlation.
+
+    counts: (n, m). left, right: marginals. *_scores: borders' normal scores, empty for a
+    state, whose shape is the product of the marginals.
+    """
+    n, m = counts.shape
+    if left_scores.shape[0] + 1 != n or right_scores.shape[0] + 1 != m:
+        shape = np.empty((n, m))
+        for i in range(n):
+            for j in range(m):
+                shape[i, j] = left[i] * right[j]
+        return shape
+    r = score_correlation(counts, bin_scores(left_scores, left), bin_scores(right_scores, right))
+    return normal_cells(left_scores, right_scores, r)
+
+
+@njit(cache=True, nogil=True)
+def held_out_gains(
+    counts: Floats,
+    left: Floats,
+    right: Floats,
+    left_scores: Floats,
+    right_scores: Floats,
+    masses: Floats,
+    shares: Floats,
+) -> Floats:
+    """Return what one pair's table gains on folds that it did not see, in nats.
+
+    counts: (n_folds, n, m) records per cell. Tables are made from the other folds, for
+    each weight of the shape and each independent share.
+    Returns (n_folds, n_masses, n_shares), sums over the fold's records of
+    ln(joint / (left * right)).
+    """
+    n_folds, n, m = counts.shape
+    total = np.zeros((n, m))
+    for f in range(n_folds):
+        total += counts[f]
+    gains = np.zeros((n_folds, masses.shape[0], shares.shape[0]))
+    for f in range(n_folds):
+        seen = total - counts[f]
+        shape = pair_shape(seen, left, right, left_scores, right_scores)
+        for k in range(masses.shape[0]):
+            joint = shaped_joint(seen, shape, masses[k], 0.0, left, right)
+            for i in range(n):
+                for j in range(m):
+                    if counts[f, i, j] > 0.0:
+                        ratio = joint[i, j] / (left[i] * right[j])
+                        for s in range(shares.shape[0]):
+                            gains[f, k, s] += counts[f, i, j] * math.log(
+                                (1.0 - shares[s]) * ratio + shares[s]
+                            )
+    return gains
+
+
+@njit(cache=True, parallel=True)
+def _weigh(
+    counts: NDArray[np.int64],
+    left: Ints,
+    right: Ints,
+    n_bins: Ints,
+    marginal: Floats,
+    scores: Floats,
+    is_state: NDArray[np.bool_],
+    masses: Floats,
+    shares: Floats,
+    gains: Floats,
+) -> None:
+    for p in prange(left.shape[0]):
+        a, b = left[p], right[p]
+        if is_state[a] and is_state[b]:
+            continue
+        n, m = n_bins[a], n_bins[b]
+        cells = counts[:, p, :n, :m].astype(np.float64)
+        empty = np.empty(0)
+        left_scores = empty if is_state[a] else scores[a, : n - 1]
+        right_scores = empty if is_state[b] else scores[b, : m - 1]
+        found = held_out_gains(
+            cells, marginal[a, :n], marginal[b, :m], left_scores, right_scores, masses, shares
+        )
+        best = np.argmax(found[:, :, 0].sum(axis=0))
+        gains[p] = found[:, best, 0]
+
+
+def edge_weights(
+    counts: NDArray[np.int64], left: Ints, right: Ints, nodes: list[CoarseNode]
+) -> tuple[Floats, Floats]:
+    """Return every pair's weight and the doubt of it, (n_nodes, n_nodes) nats a record.
+
+    counts: (n_folds, n_pairs, width, width). The doubt is the standard error over folds
+    (0 for state pairs); a pair never read together weighs nothing.
+    """
+    n_nodes = len(nodes)
+    n_bins = np.array([len(node.marginal) for node in nodes])
+    marginal = np.zeros((n_nodes, n_bins.max()))
+    scores = np.zeros((n_nodes, n_bins.max()))
+    for k, node in enumerate(nodes):
+        marginal[k, : n_bins[k]] = node.marginal
+        scores[k, : len(node.scores)] = node.scores
+    is_state = np.array([node.is_state for node in nodes])
+    gains = np.zeros((len(left), len(counts)))
+    shares = np.array([WEIGHING_SHARE])
+    _weigh(counts, left, right, n_bins, marginal, scores, is_state, WEIGHING_MASSES, shares, gains)
+    n_rows = counts[:, :, :-1, :-1].sum(axis=(0, 2, 3))
+    mean = gains.sum(axis=1) / np.maximum(n_rows, 1)
+    error = gains.std(axis=1, ddof=1) * math.sqrt(len(counts)) / np.maximum(n_rows, 1)
+    for p in np.flatnonzero(is_state[left] & is_state[right]):
+        a, b = n_bins[left[p]], n_bins[right[p]]
+        mean[p], error[p] = suzuki_weight(counts[:, p, :a, :b].sum(axis=0)), 0.0
+    weights, doubt = np.zeros((n_nodes, n_nodes)), np.zeros((n_nodes, n_nodes))
+    weights[left, right] = weights[right, left] = mean
+    doubt[left, right] = doubt[right, left] = error
+    return weights, doubt
