@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import atexit
 import contextlib
 import json
 import os
@@ -12,8 +13,9 @@ import subprocess
 import sys
 import threading
 import time
-from collections.abc import Callable, Coroutine, Iterator, Mapping
+from collections.abc import Callable, Coroutine, Iterator, Mapping, Sequence
 from contextlib import contextmanager
+from functools import cache
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -31,13 +33,14 @@ T = TypeVar("T")
 
 JSON = {"content-type": "application/json"}
 NDJSON = {"content-type": "application/x-ndjson"}
-# The stand-in's clock in tests: 2026-12-01T05:00:00Z.
-NOW_NS = 1_796_101_200 * 10**9
-START_S = 1_796_097_600
+# The stand-in's clock in tests, 2025-12-01T05:00:00Z, and an hour before: both are past
+# wherever the tests run, so that a real server's clock takes no record for one ahead.
+NOW_NS = 1_764_565_200 * 10**9
+START_S = 1_764_561_600
 
 
 def record(minute: Any = 0.0, source: Any = "mill-lane-2", **readings: Any) -> dict[str, Any]:
-    """Return one record at some minutes after 2026-12-01T04:00:00Z."""
+    """Return one record at some minutes after 2025-12-01T04:00:00Z."""
     seconds = START_S + round(minute * 60)
     moment = time.strftime("%Y-%m-%dT%H:%M:%SZ", time.gmtime(seconds))
     given = {"flow": 120.0, "power": 31.5, "pump": "running", "speed": 1450.0, **readings}
@@ -120,29 +123,74 @@ def running(
         loop.close()
 
 
+class Spawner:
+    """A process that has imported the service and forks a server at once when asked."""
+
+    def __init__(self) -> None:
+        self.process = subprocess.Popen(
+            [sys.executable, "-m", "tests.service_server", "--spawn"],
+            cwd=ROOT,
+            stdin=subprocess.PIPE,
+            stdout=subprocess.PIPE,
+            text=True,
+        )
+
+    def spawn(self, folder: Path, words: Sequence[str]) -> int:
+        """Return the process id of a new server."""
+        assert self.process.stdin is not None
+        assert self.process.stdout is not None
+        self.process.stdin.write(json.dumps([str(folder), *words]) + "\n")
+        self.process.stdin.flush()
+        return int(self.process.stdout.readline())
+
+    def close(self) -> None:
+        """End the process; its servers must have ended before."""
+        assert self.process.stdin is not None
+        assert self.process.stdout is not None
+        self.process.stdin.close()
+        self.process.wait(10)
+        self.process.stdout.close()
+
+
+@cache
+def spawner() -> Spawner:
+    """Return the one spawner of this test run."""
+    found = Spawner()
+    atexit.register(found.close)
+    return found
+
+
 class Server:
     """A real server in a process of its own, over a stand-in model."""
 
-    def __init__(self, folder: Path, *words: str, environment: Mapping[str, str] = {}) -> None:
+    def __init__(self, folder: Path, *words: str) -> None:
         if not (folder / "model").exists():
             write_fake(folder / "model")
         self.folder = folder
-        self.log = (folder / "server.log").open("ab")
-        self.process = subprocess.Popen(
-            [sys.executable, "-m", "tests.service_server", str(folder), *words],
-            cwd=ROOT,
-            stdout=subprocess.PIPE,
-            stderr=self.log,
-            env={**os.environ, **environment},
-        )
+        self._out = folder / "server.out"
+        self._out.unlink(missing_ok=True)
+        self.pid = spawner().spawn(folder, words)
         self.port = self._wait_for_port()
 
     def _wait_for_port(self) -> int:
-        assert self.process.stdout is not None
-        line = self.process.stdout.readline().decode()
-        found = re.search(r":(\d+) ", line)
-        assert found, f"the server did not start: {self.log_text()}"
-        return int(found.group(1))
+        end = time.monotonic() + 30
+        while time.monotonic() < end:
+            text = self._out.read_text(encoding="utf-8") if self._out.exists() else ""
+            found = re.search(r":(\d+) ", text)
+            if found:
+                return int(found.group(1))
+            assert self.is_alive, f"the server did not start: {self.log_text()}"
+            time.sleep(0.01)
+        raise AssertionError(f"the server does not say where it listens: {self.log_text()}")
+
+    @property
+    def is_alive(self) -> bool:
+        """Whether its process is there."""
+        try:
+            os.kill(self.pid, 0)
+        except ProcessLookupError:
+            return False
+        return True
 
     def log_text(self) -> str:
         """Return what the server logged so far."""
@@ -155,26 +203,22 @@ class Server:
 
     def kill(self) -> None:
         """End it as a power cut would."""
-        self.process.send_signal(signal.SIGKILL)
+        os.kill(self.pid, signal.SIGKILL)
         self._wait()
 
     def stop(self) -> None:
         """End it as an operator would."""
         with contextlib.suppress(ProcessLookupError):
-            self.process.terminate()
+            os.kill(self.pid, signal.SIGTERM)
         self._wait()
 
     def _wait(self) -> None:
-        try:
-            self.process.wait(30)
-        except subprocess.TimeoutExpired:
-            self.process.kill()
-            self.process.wait(5)
-            raise
-        finally:
-            assert self.process.stdout is not None
-            self.process.stdout.close()
-            self.log.close()
+        end = time.monotonic() + 30
+        while self.is_alive:
+            if time.monotonic() > end:
+                os.kill(self.pid, signal.SIGKILL)
+                raise AssertionError("the server does not end")
+            time.sleep(0.005)
 
 
 @contextmanager
@@ -184,5 +228,5 @@ def serving(folder: Path, *words: str) -> Iterator[Server]:
     try:
         yield server
     finally:
-        if server.process.poll() is None:
+        if server.is_alive:
             server.stop()

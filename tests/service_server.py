@@ -1,14 +1,22 @@
-"""A server over the stand-in model: `python -m tests.service_server FOLDER [section.key=value]`."""
+"""Servers over the stand-in model: `python -m tests.service_server --spawn`.
+
+Reads lines with a JSON list, a folder and settings as section.key=value, and forks a
+server for each; its process id is answered. Importing the service once and not for every
+start makes it cheap to kill a server many times.
+"""
 
 from __future__ import annotations
 
+import gc
 import json
+import os
+import signal
 import sys
 from pathlib import Path
 from typing import Any
 
 from service.running import Service
-from service.serve import listen, run, say_where
+from service.server import listen, run, say_where
 from service.settings import load_settings
 from tests.service_fakes import load_fake
 
@@ -33,5 +41,32 @@ def main(folder: Path, words: list[str]) -> None:
     run(service, listener)
 
 
+def spawn() -> None:
+    """Fork a server for every line."""
+    signal.signal(signal.SIGCHLD, signal.SIG_IGN)
+    gc.freeze()
+    for line in sys.stdin:
+        folder, *words = json.loads(line)
+        pid = os.fork()
+        if pid == 0:
+            signal.signal(signal.SIGCHLD, signal.SIG_DFL)
+            _redirect(Path(folder))
+            main(Path(folder), words)
+            os._exit(0)
+        sys.stdout.write(f"{pid}\n")
+        sys.stdout.flush()
+
+
+def _redirect(folder: Path) -> None:
+    os.close(0)
+    for number, name in ((1, "server.out"), (2, "server.log")):
+        handle = os.open(folder / name, os.O_CREAT | os.O_WRONLY | os.O_APPEND, 0o600)
+        os.dup2(handle, number)
+        os.close(handle)
+
+
 if __name__ == "__main__":
-    main(Path(sys.argv[1]), sys.argv[2:])
+    if sys.argv[1:] == ["--spawn"]:
+        spawn()
+    else:
+        main(Path(sys.argv[1]), sys.argv[2:])

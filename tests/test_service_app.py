@@ -17,11 +17,21 @@ from service.pipeline import AHEAD_NS
 from service.problems import KINDS
 from tests.service_fakes import FakeEngine
 from tests.service_http import NOW_NS, START_S, Api, record, running
+from tests.service_postgres import Cluster, cluster
 
 
-@pytest.fixture
-def api(tmp_path: Path) -> Iterator[Api]:
-    with running(tmp_path) as found:
+@pytest.fixture(scope="module")
+def postgres() -> Iterator[Cluster]:
+    with cluster() as found:
+        yield found
+
+
+@pytest.fixture(params=["sqlite", "postgresql"])
+def api(tmp_path: Path, request: pytest.FixtureRequest) -> Iterator[Api]:
+    store: dict[str, Any] = {}
+    if request.param == "postgresql":
+        store["url"] = request.getfixturevalue("postgres").new_database()
+    with running(tmp_path, store=store) as found:
         yield found
 
 
@@ -39,7 +49,7 @@ def test_a_record_is_answered_with_its_scores(api: Api) -> None:
     assert answer.status_code == 200
     assert answer.json() == {
         "source": "mill-lane-2",
-        "time": "2026-12-01T04:00:00Z",
+        "time": "2025-12-01T04:00:00Z",
         "model": "0123456789abcdef",
         "member": "own",
         "surprise": 24.13,
@@ -62,7 +72,7 @@ def test_a_batch_is_answered_in_order_and_a_bad_item_harms_no_other(api: Api) ->
     answer = api.post([record(0), {"source": 1}, record(1, flow=350.0)])
     assert answer.status_code == 200
     first, bad, last = answer.json()
-    assert (first["time"], last["time"]) == ("2026-12-01T04:00:00Z", "2026-12-01T04:01:00Z")
+    assert (first["time"], last["time"]) == ("2025-12-01T04:00:00Z", "2025-12-01T04:01:00Z")
     assert last["alert"] == "record"
     assert bad["index"] == bad["problem"]["index"] == 1
     assert bad["problem"]["status"] == 422
@@ -138,7 +148,7 @@ def test_a_record_ahead_of_the_clock_leaves_the_standing_alone(api: Api) -> None
     ahead_min = (NOW_NS // 10**9 - START_S) / 60 + AHEAD_NS / 60e9
     assert "ahead" not in api.post(record(ahead_min)).json()
     assert api.post(record(ahead_min + 1)).json()["ahead"] is True
-    assert api.get("/sources").json()["items"][0]["last"] == "2026-12-01T05:05:00Z"
+    assert api.get("/sources").json()["items"][0]["last"] == "2025-12-01T05:05:00Z"
     # What follows in order is not late because of it.
     assert "late" not in api.post(record(ahead_min + 0.5)).json()
 
@@ -290,7 +300,7 @@ def test_pages_follow_each_other_without_gaps(api: Api) -> None:
 def test_records_are_chosen_by_source_and_time(api: Api) -> None:
     api.post([record(i, source) for source in ("a", "b") for i in range(5)])
     found = stored(
-        api, source="b", **{"from": "2026-12-01T04:01:00Z", "to": "2026-12-01T05:03:00+01:00"}
+        api, source="b", **{"from": "2025-12-01T04:01:00Z", "to": "2025-12-01T05:03:00+01:00"}
     )
     assert [item["time"][14:16] for item in found] == ["01", "02"]
     newest = stored(api, source="b", newest=True, limit=2)

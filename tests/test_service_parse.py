@@ -15,7 +15,7 @@ from service.layout import Layout
 from service.parse import Batch, load_json, parse_items, parse_lines
 from service.problems import Problem
 from tests.service_fakes import CHANNELS
-from tests.service_http import record
+from tests.service_http import START_S, record
 
 LAYOUT = Layout(CHANNELS)
 
@@ -101,7 +101,7 @@ def test_any_bytes_are_parsed_or_refused_with_a_problem(body: bytes) -> None:
 def test_a_plain_record_becomes_a_row() -> None:
     batch = parse(record(flow=241, speed=None, pump="stopped"))
     assert batch.sources == ["mill-lane-2"]
-    assert batch.times_ns.tolist() == [1_796_097_600 * 10**9]
+    assert batch.times_ns.tolist() == [START_S * 10**9]
     assert batch.values[0, :3].tolist() == [241.0, 31.5, 1.0]
     assert math.isnan(batch.values[0, 3])
 

@@ -20,8 +20,8 @@ def test_records_older_than_the_age_go_and_it_is_on_record(tmp_path: Path) -> No
         assert len(api.get("/records").json()["items"]) == 2
         (pruned,) = api.get("/pruned").json()["items"]
         assert pruned == {
-            "at": "2026-12-02T06:00:00Z", "reason": "age",
-            "before": "2026-12-01T06:00:00Z", "records": 3,
+            "at": "2025-12-02T06:00:00Z", "reason": "age",
+            "before": "2025-12-01T06:00:00Z", "records": 3,
         }  # fmt: skip
         # The standing is not made of stored records and stays.
         assert api.get("/sources").json()["items"][0]["records"] == 5
@@ -53,7 +53,7 @@ def test_the_oldest_go_while_the_store_is_too_large(tmp_path: Path) -> None:
         pruned = api.get("/pruned").json()["items"]
         assert {item["reason"] for item in pruned} == {"size"}
         newest = api.get("/records", params={"newest": True, "limit": 1}).json()["items"]
-        assert newest[0]["time"] == "2026-12-01T07:19:59Z"
+        assert newest[0]["time"] == "2025-12-01T07:19:59Z"
 
 
 def _n_pages(api: Api) -> int:

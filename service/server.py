@@ -1,0 +1,70 @@
+"""The web server on this process: the socket, where it is, and the run until told to stop."""
+
+from __future__ import annotations
+
+import socket
+
+import click
+import uvicorn
+
+from scoring.errors import OddbranchError
+from service.app import create_app
+from service.running import Service
+from service.schemas import ADVICE
+from service.settings import Settings
+
+# Connections that wait while the loop is busy.
+_BACKLOG = 2048
+
+
+class CannotListen(OddbranchError):
+    """The address is taken or is not this machine's."""
+
+
+def listen(settings: Settings) -> socket.socket:
+    """Return a bound socket; raises CannotListen."""
+    host, port = settings.server.host, settings.server.port
+    try:
+        found = socket.getaddrinfo(host, port, type=socket.SOCK_STREAM, flags=socket.AI_PASSIVE)
+        family, _, _, _, address = found[0]
+        listener = socket.socket(family, socket.SOCK_STREAM)
+        listener.setsockopt(socket.SOL_SOCKET, socket.SO_REUSEADDR, 1)
+        listener.bind(address)
+        # From here on a client that is told the address can connect, and waits its turn.
+        listener.listen(_BACKLOG)
+    except OSError as error:
+        raise CannotListen(
+            f"cannot listen on {host} port {port}: {error.strerror}; "
+            "stop what listens there, or choose another with --port"
+        ) from None
+    return listener
+
+
+def say_where(settings: Settings, listener: socket.socket) -> None:
+    """Print where the service listens, and how to take what it says."""
+    scheme = "https" if settings.server.tls_certificate else "http"
+    host = settings.server.host
+    shown = f"[{host}]" if ":" in host else host
+    click.echo(f"Serving on {scheme}://{shown}:{listener.getsockname()[1]} (stop with Ctrl-C)")
+    click.echo(ADVICE)
+
+
+def run(service: Service, listener: socket.socket) -> None:
+    """Serve until the process is told to stop; what waits is stored first."""
+    server = service.settings.server
+    uvicorn.Server(
+        uvicorn.Config(
+            create_app(service),
+            loop="uvloop",
+            http="httptools",
+            lifespan="on",
+            access_log=False,
+            log_level="warning",
+            server_header=False,
+            proxy_headers=False,
+            limit_concurrency=server.n_connections,
+            timeout_graceful_shutdown=int(server.drain_s),
+            ssl_certfile=server.tls_certificate,
+            ssl_keyfile=server.tls_key,
+        )
+    ).run(sockets=[listener])
