@@ -23,6 +23,7 @@ Ints = NDArray[np.int64]
 # A product outside these is done again in logs: beyond them a factor still to come could
 # have lifted what was already flushed to zero.
 LOW, HIGH = 1e-250, 1e250
+LN_LOW = math.log(LOW)
 
 
 @njit(cache=True, nogil=True, inline="always")
@@ -68,6 +69,8 @@ def _plain(t: TreeArrays, row: BinRows, n: int, order: Ints, via: Ints, vec: Flo
     scale = 0.0
     for k in range(n):
         u = order[k]
+        if t.lowest[u] < LN_LOW:
+            return np.nan
         vec[u] = t.marginal[u]
         for slot in range(t.start[u], t.start[u + 1]):
             b = row[t.neighbour[slot]]
@@ -94,6 +97,8 @@ def _plain(t: TreeArrays, row: BinRows, n: int, order: Ints, via: Ints, vec: Flo
             for c in range(width):
                 total += vec[u, c] * t.ratio[back, b, c]
             vec[parent, b] *= total / high
+            if t.marginal[parent, b] > 0.0 and not vec[parent, b] > LOW:
+                return np.nan
     return scale
 
 
@@ -262,7 +267,9 @@ def _whole_row(
         first, last = start[i], start[i + 1]
         for slot in range(first, last):
             alone += edge_nats[edge[slot]]
-        if last - first > 1:
+        if last - first > 1 and t.lowest[i] < LN_LOW:
+            alone = np.nan
+        elif last - first > 1:
             p0 = np.uint64(i) * width
             a0 = (np.uint64(first) * width + bins[neighbour[first]]) * width
             c0 = (np.uint64(first + 1) * width + bins[neighbour[first + 1]]) * width

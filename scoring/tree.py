@@ -32,6 +32,7 @@ class TreeArrays(NamedTuple):
     ratio: (n_slots, width, width), r indexed by the bin across, then the own bin.
     log_ratio: (n_edges, width, width), ln r by left bin, then right bin.
     left, right: (n_edges,) the edges' nodes.
+    lowest: (n_nodes,) nats, no product of a node's marginal and ratios is below its exp.
     flat_marginal, flat_ratio, flat_log_ratio: the same memory in one dimension, because
         a slice in a tight loop costs a reference count.
     """
@@ -47,6 +48,7 @@ class TreeArrays(NamedTuple):
     log_ratio: Floats
     left: Ints
     right: Ints
+    lowest: Floats
     flat_marginal: Floats
     flat_ratio: Floats
     flat_log_ratio: Floats
@@ -97,6 +99,10 @@ class Tree:
             ratio[slot] = table.T if is_left else table
         marginal = np.exp(log_marginal)
         edges = self.edges.reshape(-1, 2)
+        lowest = [
+            float(m.min()) + sum(min(0.0, float(self.log_ratios[slot[1]].min())) for slot in node)
+            for m, node in zip(self.log_marginals, slots, strict=True)
+        ]
         return TreeArrays(
             start=np.cumsum([0] + [len(node) for node in slots], dtype=np.int64),
             neighbour=np.array([slot[0] for slot in flat], dtype=np.int64),
@@ -109,6 +115,7 @@ class Tree:
             log_ratio=log_ratio,
             left=np.ascontiguousarray(edges[:, 0]),
             right=np.ascontiguousarray(edges[:, 1]),
+            lowest=np.array(lowest),
             flat_marginal=marginal.reshape(-1),
             flat_ratio=ratio.reshape(-1),
             flat_log_ratio=log_ratio.reshape(-1),
