@@ -70,26 +70,15 @@ def belief_of(member: Member, row: BinRows, node: int) -> Floats:
     n_bins = member.bins[node].n_bins
     if len(member.parts) == 1:
         return belief_row(member.parts[0].tree.arrays, hidden, node)[:n_bins]
-    if node in member.regime:
-        trial = np.repeat(hidden[None, :], n_bins, axis=0)
-        trial[:, node] = np.arange(n_bins)
-        logs = -surprise_of(member, trial)
-        weights = np.exp(logs - logs.max())
-        return np.asarray(weights / weights.sum())
-    if not _unread(member, hidden[None, :])[0]:
+    if node not in member.regime and not _unread(member, hidden[None, :])[0]:
         part = _by_part(member, hidden[None, :])[0][0]
         return belief_row(member.parts[part].tree.arrays, hidden, node)[:n_bins]
-    logs = np.array([_part_evidence(member, k, hidden[None, :])[0] for k in _indices(member)])
+    # Which part holds is open, so every bin is tried.
+    trial = np.repeat(hidden[None, :], n_bins, axis=0)
+    trial[:, node] = np.arange(n_bins)
+    logs = -surprise_of(member, trial)
     weights = np.exp(logs - logs.max())
-    beliefs = [
-        belief_row(member.parts[k].tree.arrays, _with_key(member, k, hidden), node)[:n_bins]
-        for k in _indices(member)
-    ]
-    return np.asarray(np.average(beliefs, axis=0, weights=weights))
-
-
-def _indices(member: Member) -> range:
-    return range(len(member.parts))
+    return np.asarray(weights / weights.sum())
 
 
 def _unread(member: Member, rows: BinRows) -> NDArray[np.bool_]:
