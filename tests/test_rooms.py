@@ -21,6 +21,7 @@ SCORING_ORDER = (
     "derived",
     "bins",
     "tree",
+    "stillness",
     "model",
     "kernels",
     "density",
@@ -30,6 +31,8 @@ SCORING_ORDER = (
     "standing",
     "scorer",
     "artefact",
+    "alert_settings",
+    "alert_kernel",
 )
 
 # What each room may import beside the standard library.
