@@ -23,6 +23,8 @@ from service.routes_read import read_router
 from service.routes_records import RecordsEndpoint
 from service.running import Service
 
+# What goes past the framework: (path, method).
+QUICK = (("/records", "POST"),)
 _KIND_OF_STATUS = {404: "not-found", 405: "bad-method"}
 
 
@@ -49,7 +51,7 @@ def create_app(service: Service) -> ASGIApp:
     _add_documents(app, service)
     _add_handlers(app)
     records = RecordsEndpoint(service)
-    return Front(app, service, {("POST", "/records"): records})
+    return Front(app, service, {(method, path): records for path, method in QUICK})
 
 
 def _version() -> str:
@@ -85,11 +87,15 @@ def _add_handlers(app: FastAPI) -> None:
         return _response(Problem("bad-query", f"{name}: {first['msg']}"))
 
     @app.exception_handler(HTTPException)
-    async def on_http(_request: Request, error: Exception) -> Response:
+    async def on_http(request: Request, error: Exception) -> Response:
         assert isinstance(error, HTTPException)
         kind = _KIND_OF_STATUS.get(error.status_code, "bad-header")
         response = _response(Problem(kind, str(error.detail)))
         response.headers.update(error.headers or {})
+        if error.status_code == 405:
+            # A path may be served by several routes; the framework names the first one's.
+            quick = [method for path, method in QUICK if path == request.url.path]
+            response.headers["allow"] = ", ".join(["GET", *quick])
         return response
 
 

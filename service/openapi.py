@@ -16,20 +16,12 @@ from service.layout import ChannelLike
 from service.parse import MAX_ABS_READING, MAX_NAME_CHARS, MAX_WORD_CHARS, QUALITIES
 from service.problems import KINDS
 from service.running import Service
-from service.schemas import ADVICE, TIME_EXAMPLE, ProblemBody, ProblemItem, Score
+from service.schemas import ADVICE, TIME_EXAMPLE, TIME_PATTERN, ProblemBody, ProblemItem, Score
 
 _DESCRIPTION = f"""Scores every record of a fleet's instruments and names the suspect.
 
 {ADVICE}
 """
-# As strict as the parser, for the days of months too; only 29 February is left to it.
-_TIME_PATTERN = (
-    r"^(19[7-9][0-9]|20[0-9]{2}|21[0-9]{2}|22[0-5][0-9])-"
-    r"((0[13578]|1[02])-(0[1-9]|[12][0-9]|3[01])|(0[469]|11)-(0[1-9]|[12][0-9]|30)"
-    r"|02-(0[1-9]|1[0-9]|2[0-8]))"
-    r"T([01][0-9]|2[0-3]):[0-5][0-9]:[0-5][0-9](\.[0-9]{1,9})?"
-    r"(Z|[+-](0[0-9]|1[0-4]):[0-5][0-9])$"
-)
 _NAME_PATTERN = r"^[^\u0000-\u001f\u007f]+$"
 _REFUSALS = {
     "POST": (400, 401, 403, 408, 409, 413, 415, 422, 500, 503),
@@ -96,7 +88,7 @@ def _record(channels: tuple[ChannelLike, ...], n_readings: int) -> dict[str, Any
             "time": {
                 "type": "string",
                 "description": "time of the record, RFC 3339 with an offset",
-                "pattern": _TIME_PATTERN,
+                "pattern": TIME_PATTERN,
                 "maxLength": 40,
                 "examples": [TIME_EXAMPLE],
             },
@@ -180,6 +172,8 @@ def _example(channels: tuple[ChannelLike, ...]) -> dict[str, Any]:
 def _post(n_batch: int, channels: tuple[ChannelLike, ...]) -> dict[str, Any]:
     record = {"$ref": "#/components/schemas/Record"}
     score = {"$ref": "#/components/schemas/Score"}
+    anything = {"description": "anything else is answered with a problem in its place"}
+    items = {"anyOf": [record, anything]}
     item = {"anyOf": [score, {"$ref": "#/components/schemas/ProblemItem"}]}
     return {
         "summary": "Store and score records",
@@ -202,10 +196,11 @@ def _post(n_batch: int, channels: tuple[ChannelLike, ...]) -> dict[str, Any]:
             "content": {
                 "application/json": {
                     "schema": {
-                        "anyOf": [record, {"type": "array", "items": record, "maxItems": n_batch}]
+                        "anyOf": [record, {"type": "array", "items": items, "maxItems": n_batch}]
                     },
                     "example": _example(channels),
                 },
+                "application/x-ndjson": {"schema": {"type": "string"}},
             },
         },
         "responses": {

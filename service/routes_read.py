@@ -3,24 +3,26 @@
 # No postponed annotations here: the framework reads them, and they hold values of this app.
 
 import asyncio
-import base64
-import binascii
+import re
 from collections.abc import AsyncIterator, Callable
 from functools import partial
 from typing import Annotated, Any, TypeVar
 
 import orjson
 import sqlalchemy as sa
-from fastapi import APIRouter, Header, Query, Response
+from fastapi import APIRouter, Depends, Header, Query, Request, Response
+from fastapi.routing import APIRoute
 from starlette.responses import StreamingResponse
 
 from service.answers import stored_answer
 from service.engine import ALERT_WORDS
+from service.nearest import nearest_of
 from service.problems import Problem
 from service.running import Service
 from service.schemas import (
     ADVICE,
     TIME_EXAMPLE,
+    TIME_PATTERN,
     AlertsPage,
     ModelPage,
     PrunedPage,
@@ -40,11 +42,18 @@ SourceQuery = Annotated[
         examples=["mill-lane-2"],
         min_length=1,
         max_length=200,
+        pattern=r"^[^\u0000-\u001f\u007f]+$",
     ),
 ]
+_TIME_SCHEMA = {"pattern": TIME_PATTERN, "maxLength": 40}
 FromQuery = Annotated[
     str | None,
-    Query(alias="from", description="first time, RFC 3339 with offset", examples=[TIME_EXAMPLE]),
+    Query(
+        alias="from",
+        description="first time, RFC 3339 with offset",
+        examples=[TIME_EXAMPLE],
+        json_schema_extra=_TIME_SCHEMA,
+    ),
 ]
 ToQuery = Annotated[
     str | None,
@@ -52,17 +61,38 @@ ToQuery = Annotated[
         alias="to",
         description="time after the last, RFC 3339 with offset",
         examples=["2026-12-02T00:00:00Z"],
+        json_schema_extra=_TIME_SCHEMA,
     ),
 ]
+# Two numbers of the last item: no more than a place in an order, and nothing secret.
+# The second is a time in nanoseconds or nothing, and fits in 63 bits.
+_PAIR_TEXT = r"([0-9]{1,18})-(9[01][0-9]{17}|[0-8]?[0-9]{1,18})"
+_PAIR = re.compile(_PAIR_TEXT, re.ASCII)
 AfterQuery = Annotated[
     str | None,
-    Query(description="`next` of the page before, no unit", max_length=2000),
+    Query(
+        description="`next` of the page before, no unit",
+        examples=["1-1796097600000000000"],
+        json_schema_extra={"pattern": f"^{_PAIR_TEXT}$"},
+    ),
 ]
+
+
+def _refuse_unknown(request: Request) -> None:
+    """Refuse a parameter that is not known: a misspelt one would choose everything."""
+    route = request.scope["route"]
+    assert isinstance(route, APIRoute)
+    known = [field.alias for field in route.dependant.query_params]
+    for name in request.query_params:
+        if name not in known:
+            near = nearest_of(name, known)
+            hint = f"; is {near} meant?" if near else f"; known are {', '.join(known)}"
+            raise Problem("bad-query", f"parameter {name[:60]!r} is not known here{hint}")
 
 
 def read_router(service: Service) -> APIRouter:
     """Return the routes that read the store and the model."""
-    router = APIRouter()
+    router = APIRouter(dependencies=[Depends(_refuse_unknown)])
     n_page = service.settings.limits.n_page
     limit_query = Query(description="items at most, count", ge=1, le=n_page, examples=[100])
     layouts = _Layouts()
@@ -152,13 +182,12 @@ def read_router(service: Service) -> APIRouter:
 
     @router.get("/sources", responses=_page(SourcesPage), summary="Sources and their standing")
     async def sources(
-        limit: Annotated[int, limit_query] = 100, after: AfterQuery = None
+        limit: Annotated[int, limit_query] = 100, after: SourceQuery = None
     ) -> Response:
-        """Answer every source by name."""
-        at = _name(after)
-        rows, following = await in_thread(lambda c: pages.sources_page(c, limit=limit, after=at))
+        """Answer every source by name; `after` is the name of the last one seen."""
+        rows, following = await in_thread(lambda c: pages.sources_page(c, limit=limit, after=after))
         items = [source_item(row, service) for row in rows]
-        return _answer({"items": items, "next": _cursor(following)})
+        return _answer({"items": items, "next": following})
 
     @router.get("/model", responses=_page(ModelPage), summary="The model in use")
     async def model(source: SourceQuery = None) -> Response:
@@ -238,33 +267,14 @@ def _time(name: str, text: str | None) -> int | None:
         raise Problem("bad-query", f"{name} = {text[:60]!r} {error}") from None
 
 
-def _cursor(place: tuple[int, int] | str | None) -> str | None:
-    if place is None:
-        return None
-    return base64.urlsafe_b64encode(orjson.dumps(place)).decode().rstrip("=")
-
-
-def _place(after: str) -> Any:
-    try:
-        return orjson.loads(base64.urlsafe_b64decode(after + "=" * (-len(after) % 4)))
-    except (ValueError, binascii.Error):
-        raise Problem("bad-query", "after is not the `next` of a page before") from None
+def _cursor(place: tuple[int, int] | None) -> str | None:
+    return None if place is None else f"{place[0]}-{place[1]}"
 
 
 def _pair(after: str | None) -> tuple[int, int] | None:
     if after is None:
         return None
-    place = _place(after)
-    whole = isinstance(place, list) and len(place) == 2
-    if not whole or not all(type(n) is int and abs(n) < 2**63 for n in place):
-        raise Problem("bad-query", "after is not the `next` of a page before")
-    return place[0], place[1]
-
-
-def _name(after: str | None) -> str | None:
-    if after is None:
-        return None
-    place = _place(after)
-    if not isinstance(place, str) or "\x00" in place:
-        raise Problem("bad-query", "after is not the `next` of a page before")
-    return place
+    match = _PAIR.fullmatch(after)
+    if match is None:
+        raise Problem("bad-query", f"after = {after[:60]!r} is not the `next` of a page before")
+    return int(match.group(1)), int(match.group(2))

@@ -320,9 +320,10 @@ def test_all_records_come_as_lines_when_asked_for(api: Api) -> None:
         ("/records?from=yesterday", "from = 'yesterday' is not an RFC 3339 time"),
         ("/records?limit=0", "limit"),
         ("/records?limit=many", "limit"),
-        ("/records?after=xyz", "after is not the `next` of a page before"),
-        ("/records?after=WzFd", "after is not the `next` of a page before"),
-        ("/sources?after=WzFd", "after is not the `next` of a page before"),
+        ("/records?after=xyz", "after = 'xyz' is not the `next` of a page before"),
+        ("/records?after=1-", "after = '1-' is not the `next` of a page before"),
+        ("/sources?after=%00", "after"),
+        ("/records?sourc=a", "'sourc' is not known here; is source meant"),
         ("/model?source=", "source"),
     ],
 )

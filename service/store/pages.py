@@ -59,7 +59,10 @@ def alerts_page(
     limit: int,
     after: tuple[int, int] | None,
 ) -> tuple[list[StoredRecord], tuple[int, int] | None]:
-    """Return records over a level, newest first, and the cursor of the next page."""
+    """Return records over a level, newest first, and the cursor of the next page.
+
+    after: (id, time) of the last one seen.
+    """
     query: sa.Select[Any] = sa.select(*_STORED, _RECORD.source_id).join(
         tables.source, _SOURCE.id == _RECORD.source_id
     )
@@ -67,9 +70,9 @@ def alerts_page(
     if source is not None:
         query = query.where(_SOURCE.name == source)
     if after is not None:
-        query = query.where(sa.tuple_(_RECORD.time_ns, _RECORD.id) < sa.tuple_(*after))
+        query = query.where(sa.tuple_(_RECORD.time_ns, _RECORD.id) < sa.tuple_(*after[::-1]))
     query = query.order_by(_RECORD.time_ns.desc(), _RECORD.id.desc()).limit(limit + 1)
-    return _page(connection.execute(query).all(), limit, "time_ns", "id")
+    return _page(connection.execute(query).all(), limit, "id", "time_ns")
 
 
 def _between(query: sa.Select[Any], from_ns: int | None, to_ns: int | None) -> sa.Select[Any]:
