@@ -32,8 +32,9 @@ from service.store.tables import FLAG_AHEAD, FLAG_LATE, FLAG_NOT_JUDGED
 # Edges around what a request should take: a single one some ms, a batch some ten.
 _SECONDS = (0.001, 0.0025, 0.005, 0.01, 0.025, 0.05, 0.1, 0.25, 0.5, 1.0, 2.5, 5.0, 10.0)
 _RECORDS = (1.0, 2.0, 5.0, 10.0, 25.0, 50.0, 100.0, 250.0, 500.0, 1000.0, 2500.0, 10000.0)
-# Excess rests near zero; levels usually lie between 5 and 50 nats.
-_NATS = (-5.0, -2.0, 0.0, 2.0, 5.0, 10.0, 15.0, 20.0, 30.0, 50.0, 100.0, 200.0)
+# Excess rests near zero; levels usually lie between 5 and 50 nats. What is less than usual
+# counts as zero, because a histogram with negative values has no sum that only rises.
+_NATS = (0.0, 1.0, 2.0, 5.0, 10.0, 15.0, 20.0, 30.0, 50.0, 100.0, 200.0)
 # Unknown paths would each be a label value of their own.
 OTHER_ROUTE = "other"
 
@@ -157,7 +158,7 @@ class Metrics:
         self.outcomes["ahead"] += ahead
         self.outcomes["stored"] += n_stored - late - ahead
         excess = sheet.scored.excess[stored]
-        self.excess.add_many(excess[~np.isnan(excess)])
+        self.excess.add_many(np.maximum(excess[~np.isnan(excess)], 0.0))
         names = sheet.engine.layout.names
         self._count_missing(
             sheet.absent if n_stored == len(stored) else sheet.absent[stored], names
@@ -233,7 +234,7 @@ class _Collector:
         yield CounterMetricFamily(
             "oddbranch_readings", "Readings that could have come.", value=m.n_readings
         )
-        yield _histogram("excess_nats", "Excess of judged records.", m.excess)
+        yield _histogram("excess_nats", "Excess of judged records, zero where less than usual.", m.excess)
         yield _histogram(
             "batch_records", "Items in a body or a piece of a stream.", m.batch_records
         )

@@ -57,12 +57,12 @@ def test_missing_readings_are_counted_by_channel(api: Api) -> None:
 
 
 def test_excess_is_a_classic_histogram(api: Api) -> None:
-    api.post([record(i, flow=flow) for i, flow in enumerate((30.0, 130.0, 360.0))])
-    assert value(api, "excess_nats_count") == 3
+    api.post([record(i, flow=flow) for i, flow in enumerate((0.0, 30.0, 130.0, 360.0))])
+    assert value(api, "excess_nats_count") == 4
     assert value(api, "excess_nats_sum") == pytest.approx(2 + 12 + 35)
-    assert value(api, "excess_nats_bucket", le="2.0") == 1
-    assert value(api, "excess_nats_bucket", le="15.0") == 2
-    assert value(api, "excess_nats_bucket", le="+Inf") == 3
+    assert value(api, "excess_nats_bucket", le="2.0") == 2
+    assert value(api, "excess_nats_bucket", le="15.0") == 3
+    assert value(api, "excess_nats_bucket", le="+Inf") == 4
 
 
 def test_a_source_shows_its_last_record_and_sustained(api: Api) -> None:
