@@ -16,6 +16,7 @@ import tempfile
 from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
+from zipfile import BadZipFile
 
 import numpy as np
 from numpy.typing import NDArray
@@ -28,6 +29,15 @@ from scoring.tree import Tree
 
 # The version of the model directory that this package writes, and the newest it reads.
 MODEL_FORMAT = 1
+
+# What model.json holds beside the content that its name is the hash of.
+NOT_NAMED = ("name", "tables_sha256", "about")
+
+# How a directory shows that it does not hold what the format promises.
+NOT_WHOLE = (
+    KeyError, TypeError, ValueError, IndexError, AttributeError, EOFError, BadZipFile,
+    BadChannelTable,
+)  # fmt: skip
 
 Arrays = dict[str, NDArray[Any]]
 
@@ -60,8 +70,8 @@ def write_model(model: Model, path: Path) -> Model:
 def read_model(path: Path) -> Model:
     """Return the model in a directory.
 
-    Raises BadArtefact for a missing or damaged directory, a later format, a checksum that
-    does not match.
+    Raises BadArtefact for a missing or damaged directory, a later format, a checksum or a
+    name that does not match.
     """
     try:
         data = json.loads((path / "model.json").read_text(encoding="utf-8"))
@@ -87,8 +97,14 @@ def read_model(path: Path) -> Model:
     try:
         with np.load(io.BytesIO(packed), allow_pickle=False) as stored:
             arrays: Arrays = {key: stored[key] for key in stored.files}
+        named = {key: value for key, value in data.items() if key not in NOT_NAMED}
+        if _name(arrays, named) != data.get("name"):
+            raise BadArtefact(
+                str(path / "model.json"),
+                "does not match the model's name; it is damaged or was edited by hand",
+            )
         return _from_arrays(data, arrays, str(path))
-    except (KeyError, TypeError, ValueError, IndexError, BadChannelTable) as error:
+    except NOT_WHOLE as error:
         raise BadArtefact(str(path), f"does not hold a whole model: {error}") from None
 
 

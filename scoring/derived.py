@@ -44,8 +44,10 @@ def derive(
     times_ns: (n,) rising. values: (n, n_instruments), NaN = missing.
     Returns (n, n_nodes); a derived value is NaN where an input is.
     """
-    if not table.derived or not len(times_ns):
+    if not table.derived:
         return values, carry
+    if not len(times_ns):
+        return np.zeros((0, values.shape[1] + len(table.derived))), carry
     column = {c.name: i for i, c in enumerate(table.instruments)}
     before = _before(table, times_ns, values, carry) if looks_back(table) else values
     extra = np.empty((len(values), len(table.derived)))

@@ -217,3 +217,25 @@ def slow_member_evidence(member: Member, row: Sequence[int]) -> float:
     """Return ln p(what is read) under a member, over every completion."""
     sizes = [b.n_bins for b in member.bins]
     return log_sum([slow_member_log_p(member, full) for full in completions(row, sizes)])
+
+
+def sample_rows(rng: np.random.Generator, tree: Tree, n: int) -> BinRows:
+    """Return n rows drawn from a forest, node by node along its edges."""
+    rows = np.full((n, tree.n_nodes), MISSING, dtype=np.uint8)
+    tables = {}
+    for (a, b), table in zip(tree.edges.tolist(), tree.log_ratios, strict=True):
+        tables[a, b], tables[b, a] = table, table.T
+    for first in range(tree.n_nodes):
+        waiting: list[tuple[int | None, int]] = [(None, first)]
+        while waiting:
+            parent, node = waiting.pop()
+            if not np.all(rows[:, node] == MISSING):
+                continue
+            logs = np.tile(tree.log_marginals[node], (n, 1))
+            if parent is not None:
+                logs += tables[parent, node][rows[:, parent]]
+            below = np.cumsum(np.exp(logs), axis=1)
+            draw = rng.random((n, 1)) * below[:, -1:]
+            rows[:, node] = (draw > below).sum(axis=1)
+            waiting += [(node, k) for k in tree.neighbours(node)]
+    return rows
