@@ -6,13 +6,11 @@ begins or ends; without a mark, and with nothing open, there is nothing more to 
 
 from __future__ import annotations
 
-import math
-
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-from scoring.stillness import code_of, follow_motion, passed_s, place_of
+from scoring.stillness import MAX_STEP, code_of, follow_motion, passed_s, place_of
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -39,19 +37,25 @@ ANCHOR = 0  # the reading that is repeated
 STILL = 1  # seconds without motion
 MOVING = 2  # the same, only while a neighbour moved
 AWAY = 3  # seconds without a usable reading
-RECENT = 4  # weighted mean of the own surprise beyond usual, nats
+RECENT = 4  # own surprise beyond usual of the last few judged records, summed, nats
 N_FLOATS = 5
 
 # Places of levels and delays, in nats and seconds. The two OFF levels hold an open
 # episode; HALF is half the way from usual to the sustained level.
 RECORD, RECORD_OFF, SUSTAINED, SUSTAINED_OFF, HALF, RUN_LENGTH, ON_S, OFF_S = range(8)
-STEP_S, TAU_S, CAP, SPAN_S, CLOCK_S = range(8, 13)
-N_KNOBS = 13
+STEP_S, SPAN_S, CLOCK_S = range(8, 11)
+N_KNOBS = 11
 
 # Rows of what is known of the instruments: those of scoring.stillness.Motion, then the
-# median of the own surprise (nats) and the limit on absence (s).
-MIDDLE, AWAY_LIMIT = 4, 5
-N_ROWS = 6
+# median of the own surprise and the most of it that one record counts for beyond that
+# (nats), and the limit on absence (s).
+MIDDLE, CAP, AWAY_LIMIT = 4, 5, 6
+N_ROWS = 7
+
+# What is kept of RECENT at each judged record: it remembers about three. Of 161 incidents
+# of an invented plant the right channel came first in 65 % when the alert was raised; with
+# fifteen, the memory of sustained, in 57 %; with one in 67 % then, and fewer soon after.
+KEPT = 2.0 / 3.0
 
 # Marks: where something begins or ends.
 RAISED, WORSENED, CLEARED = 0, 1, 2
@@ -168,15 +172,12 @@ def _follow_clock(time_ns: int, heard_ns: int, clock_s: float, ints: Ints) -> in
 
 
 @njit(cache=True, nogil=True)
-def _follow_recent(
-    own: Floats, r: int, middle: Floats, weight: float, fade: float, cap: float, recent: Floats
-) -> None:
-    """Advance each channel's weighted own surprise beyond usual, as sustained advances."""
+def _follow_recent(own: Floats, r: int, rows: Floats, kept: float, recent: Floats) -> None:
+    """Add row r's own surprise beyond usual to what is remembered of the last records."""
+    middle, cap = rows[MIDDLE], rows[CAP]
     for i in range(own.shape[1]):
         x = own[r, i] - middle[i]
-        x = min(x, cap) if x == x else 0.0
-        before = recent[i] * fade
-        recent[i] = before + weight * (x - before)
+        recent[i] = recent[i] * kept + (min(x, cap[i]) if x == x else 0.0)
 
 
 @njit(cache=True, nogil=True)
@@ -281,8 +282,7 @@ def watch_rows(
     n_flags = 0
     for i in range(n + 1):
         n_flags += flags[i] != FINE
-    step_s, tau_s, span_s = knobs[STEP_S], knobs[TAU_S], knobs[SPAN_S]
-    step_weight = 1.0 - math.exp(-step_s / tau_s)
+    step_s, span_s = knobs[STEP_S], knobs[SPAN_S]
     moved = np.zeros(n, np.bool_)
     context = place_of(codes, ints[CODE])
     n_marks = 0
@@ -318,13 +318,9 @@ def watch_rows(
                 n_flags += flags[i] != FINE
         e = excess[r]
         if e == e:
-            fade, weight = 1.0, step_weight
             gap_s = (t - last_ns) * 1e-9
-            if last_ns >= 0 and gap_s > step_s:
-                fade = math.exp(-(gap_s - step_s) / tau_s)
-            elif last_ns >= 0 and gap_s < step_s:
-                weight = 1.0 - math.exp(-gap_s / tau_s)
-            _follow_recent(own, r, rows[MIDDLE], weight, fade, knobs[CAP], floats[RECENT])
+            kept = KEPT if last_ns >= 0 and gap_s <= MAX_STEP * step_s else 0.0
+            _follow_recent(own, r, rows, kept, floats[RECENT])
             mark = follow_levels(t, e, sustained[r], knobs, ints)
             if mark >= 0:
                 n_marks = _put(marks, n_marks, r, mark, -1)

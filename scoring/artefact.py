@@ -25,6 +25,7 @@ from scoring.bins import Bins
 from scoring.channels import parse_channels
 from scoring.errors import BadArtefact, BadChannelTable
 from scoring.model import Levels, Member, Model, Part, Usual
+from scoring.stillness import StillnessLimits
 from scoring.tree import Tree
 
 # The version of the model directory that this package writes, and the newest it reads.
@@ -159,6 +160,9 @@ def _to_arrays(model: Model) -> tuple[Arrays, dict[str, Any]]:
         arrays[f"{k}.n_borders"] = np.array([len(b.borders) for b in member.bins])
         arrays[f"{k}.rows"] = usual.rows
         arrays[f"{k}.channel"] = np.stack([usual.channel_median, usual.channel_spread])
+        if member.stillness is not None:
+            for name in StillnessLimits.__dataclass_fields__:
+                arrays[f"{k}.stillness.{name}"] = getattr(member.stillness, name)
         for j, part in enumerate(member.parts):
             arrays[f"{k}.{j}.edges"] = part.tree.edges
             arrays[f"{k}.{j}.nats"] = part.tree.nats
@@ -231,8 +235,22 @@ def _member(
         **{name: float(value) for name, value in entry["usual"].items()},
     )
     return Member(
-        entry["source"], bins, parts, usual, tuple(entry["regime"]), entry["tables"], about
+        source=entry["source"],
+        bins=bins,
+        parts=parts,
+        usual=usual,
+        regime=tuple(entry["regime"]),
+        tables=entry["tables"],
+        about=about,
+        stillness=_stillness(arrays, f"{k}.stillness"),
     )
+
+
+def _stillness(arrays: Arrays, prefix: str) -> StillnessLimits | None:
+    if f"{prefix}.codes" not in arrays:
+        return None
+    names = StillnessLimits.__dataclass_fields__
+    return StillnessLimits(**{name: arrays[f"{prefix}.{name}"] for name in names})
 
 
 def _tree(arrays: Arrays, prefix: str, sizes: NDArray[np.int64]) -> Tree:

@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 from scoring.bins import Bins, BinTable
 from scoring.channels import ChannelTable
 from scoring.derived import groups
+from scoring.stillness import StillnessLimits
 from scoring.tree import Tree
 
 Floats = NDArray[np.float64]
@@ -65,6 +66,7 @@ class Member:
     regime: nodes of the state channels that choose a part.
     tables: "own" or "shared", where the tables' shape comes from.
     about: figures for people (records, first and last time, held-out density ...).
+    stillness: how long channels normally stay still or away; None = not learned.
     """
 
     source: str
@@ -74,6 +76,7 @@ class Member:
     regime: tuple[int, ...] = ()
     tables: str = "own"
     about: dict[str, Any] = field(default_factory=dict)
+    stillness: StillnessLimits | None = None
 
     @cached_property
     def bin_table(self) -> BinTable:
