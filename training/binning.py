@@ -23,6 +23,9 @@ Floats = NDArray[np.float64]
 # Rungs of the ladder beyond each end of the range, in spreads. The last leaves normal
 # scores of about 12, a probability near 1e-33.
 LADDER = np.array([0.0, 0.25, 0.5, 1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 8.0])
+# No score lies beyond this: a reading further out is as impossible as one that far, so that
+# no single channel outweighs a whole record, and no bin is rarer than the normal's tail there.
+FARTHEST, LEAST_MARGINAL = 13.0, 1e-38
 # A value that makes up this share of the readings, relative to one equal-frequency bin,
 # has a bin of its own.
 REPEAT_SHARE = 0.5
@@ -68,6 +71,17 @@ class NodeBins:
         return len(self.marginal)
 
 
+@dataclass(frozen=True)
+class _Modes:
+    """Stretches of readings parted by wide gaps.
+
+    gaps: (n_gaps,) a gap lies between distinct values k and k + 1. spreads: (n_gaps + 1,)
+    """
+
+    gaps: NDArray[np.int64]
+    spreads: Floats
+
+
 def choose_bins(sample: Floats, channel: Channel, n_bins: int = FINE_BINS) -> NodeBins:
     """Return the bins of one channel from a sample of its readings.
 
@@ -100,47 +114,84 @@ def coarsen(fine: NodeBins, n_bins: int) -> tuple[NodeBins, NDArray[np.uint8]]:
     at = np.clip(np.searchsorted(below, targets), 0, len(below) - 1)
     at -= (at > 0) & (targets - below[np.maximum(at - 1, 0)] < below[at] - targets)
     keep[at] = True
+    into = np.concatenate([[0], np.cumsum(keep)]).astype(np.uint8)
+    return merge_bins(fine, into), into
+
+
+def merge_bins(fine: NodeBins, into: NDArray[np.uint8]) -> NodeBins:
+    """Return the unions of fine bins that `into` (n_fine_bins,) says."""
+    if fine.bins.n_words or not len(fine.scores):
+        return fine
+    keep = np.diff(into.astype(np.int64)) > 0
     starts = np.concatenate([[0], np.flatnonzero(keep) + 1])
     marginal = np.add.reduceat(fine.marginal, starts)
     bins = Bins(fine.bins.borders[keep])
-    into = np.concatenate([[0], np.cumsum(keep)]).astype(np.uint8)
-    return NodeBins(bins, fine.scores[keep], marginal, fine.firm[keep]), into
-
-
-@dataclass(frozen=True)
-class _Modes:
-    """Stretches of readings parted by wide gaps.
-
-    gaps: (n_gaps,) a gap lies between distinct values k and k + 1. spreads: (n_gaps + 1,)
-    """
-
-    gaps: NDArray[np.int64]
-    spreads: Floats
+    return NodeBins(bins, fine.scores[keep], marginal, fine.firm[keep])
 
 
 def _measured_bins(
     values: Floats, counts: NDArray[np.int64], modes: _Modes, channel: Channel, n_bins: int
 ) -> NodeBins:
-    below = np.concatenate([[0], np.cumsum(counts)])
-    inner, firm = _inner_borders(values, counts, below, modes, n_bins, channel)
-    cuts = below[np.searchsorted(values, inner)]
-    inside = np.diff(np.concatenate([[0], cuts, [below[-1]]]))
-    # An empty gap, like each end, gets the probability of half a record.
-    weights = np.where(inside > 0, inside, 0.5)
-    weights = np.concatenate([[0.5], weights, [0.5]]) / (weights.sum() + 1.0)
-    scores_inside = ndtri(np.cumsum(weights)[:-1])
-    scores_inside[-1] = -ndtri(weights[-1])
+    inner, firm = _inner_borders(values, counts, modes, n_bins, channel)
     # A border belongs to the bin above it, so the highest reading must lie below its rung.
     low, top = values[0], np.nextafter(values[-1], np.inf)
     low_rungs = low - modes.spreads[0] * LADDER[::-1]
     borders = np.concatenate([low_rungs, inner, top + modes.spreads[-1] * LADDER])
-    scores = np.concatenate(
-        [scores_inside[0] - LADDER[::-1], scores_inside[1:-1], scores_inside[-1] + LADDER]
-    )
     always = np.full(len(LADDER), np.inf)
-    return NodeBins(
-        Bins(borders), scores, _marginal(weights, scores), np.concatenate([always, firm, always])
-    )
+    scores, marginal = _placed(borders, values, counts, modes)
+    return NodeBins(Bins(borders), scores, marginal, np.concatenate([always, firm, always]))
+
+
+def within(node: NodeBins, sample: Floats, channel: Channel) -> NodeBins:
+    """Return the same bins with the scores and marginal of some of the readings.
+
+    sample: (n,) readings, no NaN, for example those of one regime: beyond their own range
+    scores go on by their own spread, though other readings may lie there.
+    """
+    if channel.is_state:
+        return _state_bins(sample, channel)
+    values, counts = np.unique(sample, return_counts=True)
+    if not len(values):
+        return node
+    scores, marginal = _placed(node.bins.borders, values, counts, _modes(values, counts, channel))
+    return NodeBins(node.bins, scores, marginal, node.firm)
+
+
+def _placed(
+    borders: Floats, values: Floats, counts: NDArray[np.int64], modes: _Modes
+) -> tuple[Floats, Floats]:
+    """Return borders' normal scores and bins' probabilities for some readings.
+
+    Inside their range by counts; an empty bin, like each end, gets half a record. Beyond
+    it the normal tails go on by the spread of the outermost stretch.
+    """
+    below = np.concatenate([[0], np.cumsum(counts)])
+    under = below[np.searchsorted(values, borders)]
+    first, last = int((borders <= values[0]).sum()), int((borders <= values[-1]).sum())
+    inside = np.diff(np.concatenate([[0], under[first:last], [below[-1]]])).astype(float)
+    inside[inside == 0] = 0.5
+    total = inside.sum() + 1.0
+    end = ndtri(0.5 / total)
+    scores = np.empty(len(borders))
+    scores[:first] = end - (values[0] - borders[:first]) / modes.spreads[0]
+    scores[first:last] = ndtri((0.5 + np.cumsum(inside)[:-1]) / total)
+    scores[last:] = -end + (borders[last:] - values[-1]) / modes.spreads[-1]
+    scores = np.clip(scores, -FARTHEST, FARTHEST)
+    marginal = np.empty(len(borders) + 1)
+    low, high = ndtr(scores[:first]), ndtr(-scores[last:])
+    marginal[:first] = np.diff(low, prepend=0.0)
+    marginal[first : last + 1] = inside / total
+    marginal[last + 1 :] = -np.diff(high, append=0.0)
+    # What lies between the range's end and the nearest border belongs to the end's bin.
+    marginal[first] += 0.5 / total - (low[-1] if first else 0.0)
+    marginal[last] += 0.5 / total - (high[0] if last < len(borders) else 0.0)
+    return _rising(scores), np.asarray(np.maximum(marginal, LEAST_MARGINAL) / marginal.sum())
+
+
+def _rising(scores: Floats) -> Floats:
+    """Keep scores strictly rising where floats cannot tell them apart."""
+    least = np.arange(len(scores)) * 1e-9
+    return np.asarray(np.maximum.accumulate(scores - least) + least)
 
 
 def _state_bins(sample: Floats, channel: Channel) -> NodeBins:
@@ -190,7 +241,6 @@ def _half_width(values: Floats, counts: NDArray[np.int64]) -> float:
 def _inner_borders(
     values: Floats,
     counts: NDArray[np.int64],
-    below: NDArray[np.int64],
     modes: _Modes,
     n_bins: int,
     channel: Channel,
@@ -202,6 +252,7 @@ def _inner_borders(
         return fixed, np.full(len(fixed), np.inf)
     if len(values) < 2:
         return np.zeros(0), np.zeros(0)
+    below = np.concatenate([[0], np.cumsum(counts)])
     total = int(below[-1])
     targets = np.concatenate([_tail_targets(total, n_bins), np.arange(1, n_bins) * total / n_bins])
     targets = np.concatenate([targets, total - targets])
@@ -242,11 +293,3 @@ def _tail_targets(total: int, n_bins: int) -> Floats:
         found.append(count)
         count /= 4
     return np.array(found)
-
-
-def _marginal(weights: Floats, scores: Floats) -> Floats:
-    """Return every bin's probability: counts inside the range, normal tails beyond it."""
-    low = np.diff(ndtr(scores[: len(LADDER)]), prepend=0.0)
-    high = np.diff(ndtr(-scores[len(scores) - len(LADDER) :][::-1]), prepend=0.0)[::-1]
-    marginal = np.concatenate([low, weights[1:-1], high])
-    return np.asarray(marginal / marginal.sum())

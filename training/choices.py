@@ -7,22 +7,39 @@ ln(joint / (left * right)), measured on blocks of time that the tables did not s
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, field
 
 import numpy as np
 from numba import njit, prange
 from numpy.typing import NDArray
 
-from training.binning import NodeBins, coarsen
-from training.structure import held_out_gains
+from training.binning import NodeBins
+from training.structure import held_out_gains, held_out_shapes
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
+Columns = NDArray[np.uint8]
+# Nodes on unions of their fine bins, and for each the union that each fine bin is in.
+Unions = tuple[list[NodeBins], list[NDArray[np.uint8]]]
 
 # What is tried. Few bins and a heavy shape win with little history, counts with much.
 N_BINS = (12, 16, 24, 32, 48)
-MASSES = (10.0, 30.0, 100.0, 300.0, 1000.0, 3000.0, 10_000.0, 100_000.0)
+MASSES = (10.0, 50.0, 250.0, 1250.0, 6000.0, 100_000.0)
 SHARES = (0.03, 0.01, 0.003, 0.001, 0.0003)
+
+
+@dataclass(frozen=True)
+class Tried:
+    """Held-out gains over independence with one number of bins, nats a record.
+
+    by_mass: (n_edges, n_masses) under the middle share. by_share: (n_edges, n_shares) with
+    each edge's best mass.
+    """
+
+    n_bins: int
+    by_mass: Floats
+    by_share: Floats
 
 
 @dataclass(frozen=True)
@@ -30,13 +47,13 @@ class Choice:
     """What was chosen and how it compared.
 
     n_bins: equal-frequency bins inside the range. mass: (n_edges,) records. share:
-    independent share. curve: gain in nats a record for each (n_bins, mass, share) tried.
+    independent share. tried: the gains of each number of bins.
     """
 
     n_bins: int
     mass: Floats
     share: float
-    curve: list[tuple[int, float, float, float]] = field(default_factory=list)
+    tried: list[Tried] = field(default_factory=list)
 
 
 @njit(cache=True, parallel=True)
@@ -50,29 +67,40 @@ def _edge_gains(
     is_state: NDArray[np.bool_],
     masses: Floats,
     shares: Floats,
-    gains: Floats,
+    by_mass: Floats,
+    by_share: Floats,
 ) -> None:
-    """Fill gains (n_edges, n_masses, n_shares) with held-out sums of ln r, all folds."""
+    """Fill held-out sums of ln r over all folds, nats.
+
+    by_mass: (n_edges, n_masses) under the middle share. by_share: (n_edges, n_shares)
+    under each edge's best mass.
+    """
     empty = np.empty(0)
+    middle = shares[shares.shape[0] // 2 : shares.shape[0] // 2 + 1]
     for e in prange(left.shape[0]):
         a, b = left[e], right[e]
         n, m = n_bins[a], n_bins[b]
         left_scores = empty if is_state[a] else scores[a, : n - 1]
         right_scores = empty if is_state[b] else scores[b, : m - 1]
-        found = held_out_gains(
-            np.ascontiguousarray(counts[:, e, :n, :m]),
-            marginal[a, :n],
-            marginal[b, :m],
-            left_scores,
-            right_scores,
-            masses,
-            shares,
-        )
-        gains[e] = found.sum(axis=0)
+        cells = np.ascontiguousarray(counts[:, e, :n, :m])
+        p, q = marginal[a, :n], marginal[b, :m]
+        shapes = held_out_shapes(cells, p, q, left_scores, right_scores)
+        found = held_out_gains(cells, shapes, p, q, masses, middle)
+        by_mass[e] = found[:, :, 0].sum(axis=0)
+        best = np.argmax(by_mass[e])
+        found = held_out_gains(cells, shapes, p, q, masses[best : best + 1], shares)
+        by_share[e] = found[:, 0].sum(axis=0)
+
+
+@njit(cache=True, nogil=True)
+def _merge(counts: NDArray[np.int64], rows: Columns, columns: Columns, out: Floats) -> None:
+    for i in range(rows.shape[0]):
+        for j in range(columns.shape[0]):
+            out[rows[i], columns[j]] += counts[i, j]
 
 
 def merge_counts(
-    counts: NDArray[np.int64], into: list[NDArray[np.uint8]], left: Ints, right: Ints, width: int
+    counts: NDArray[np.int64], into: list[Columns], left: Ints, right: Ints, width: int
 ) -> Floats:
     """Return fine joint counts on coarser bins, (n_folds, n_edges, width, width) float64.
 
@@ -80,46 +108,46 @@ def merge_counts(
     """
     merged = np.zeros((counts.shape[0], counts.shape[1], width, width))
     for e, (a, b) in enumerate(zip(left.tolist(), right.tolist(), strict=True)):
-        n, m = len(into[a]), len(into[b])
-        rows = np.zeros((n, width))
-        rows[np.arange(n), into[a]] = 1.0
-        columns = np.zeros((m, width))
-        columns[np.arange(m), into[b]] = 1.0
         for f in range(counts.shape[0]):
-            merged[f, e] = rows.T @ counts[f, e, :n, :m] @ columns
+            _merge(counts[f, e], into[a], into[b], merged[f, e])
     return merged
 
 
-def choose(counts: NDArray[np.int64], left: Ints, right: Ints, fine: list[NodeBins]) -> Choice:
+def choose(
+    counts: NDArray[np.int64],
+    left: Ints,
+    right: Ints,
+    unions: Callable[[int], Unions],
+    n_bins_tried: tuple[int, ...] = N_BINS,
+) -> Choice:
     """Return the best choice for one tree.
 
     counts: (n_folds, n_edges, fine width, fine width) joint counts of the edges' nodes.
+    unions: gives the nodes on a wanted number of bins.
     """
     n_rows = max(1, int(counts.sum(axis=(0, 2, 3)).max(initial=0)))
     if not len(left):
-        return Choice(24, np.zeros(0), SHARES[2])
+        return Choice(n_bins_tried[len(n_bins_tried) // 2], np.zeros(0), SHARES[2])
     masses, shares = np.array(MASSES), np.array(SHARES)
-    curve = []
-    tried: list[Floats] = []
-    for n_bins in N_BINS:
-        coarse, into = zip(*(coarsen(node, n_bins) for node in fine), strict=True)
+    tried: list[Tried] = []
+    for n_bins in n_bins_tried:
+        coarse, into = unions(n_bins)
         sizes = np.array([node.n_bins for node in coarse])
-        marginal, scores = padded(list(coarse))
-        gains = np.zeros((len(left), len(masses), len(shares)))
-        merged = merge_counts(counts, list(into), left, right, int(sizes.max()))
+        marginal, scores = padded(coarse)
+        merged = merge_counts(counts, into, left, right, int(sizes.max()))
         is_state = np.array([bool(node.bins.n_words) for node in coarse])
-        _edge_gains(merged, left, right, sizes, marginal, scores, is_state, masses, shares, gains)
-        tried.append(gains / n_rows)
-        for k, mass in enumerate(MASSES):
-            for s, share in enumerate(SHARES):
-                curve.append((n_bins, mass, share, float(gains[:, k, s].sum() / n_rows)))
+        by_mass = np.zeros((len(left), len(masses)))
+        by_share = np.zeros((len(left), len(shares)))
+        _edge_gains(
+            merged, left, right, sizes, marginal, scores, is_state, masses, shares,
+            by_mass, by_share,
+        )  # fmt: skip
+        tried.append(Tried(n_bins, by_mass / n_rows, by_share / n_rows))
     # Each pair has the mass that suits it; bins and share are the tree's.
-    table = np.array(
-        [[gains[:, :, s].max(axis=1).sum() for s in range(len(shares))] for gains in tried]
-    )
-    best, chosen = (int(k) for k in np.unravel_index(int(table.argmax()), table.shape))
-    own = tried[best][:, :, chosen]
-    return Choice(N_BINS[best], masses[own.argmax(axis=1)], float(shares[chosen]), curve)
+    best = max(tried, key=lambda one: float(one.by_share.sum(axis=0).max()))
+    mass = masses[best.by_mass.argmax(axis=1)]
+    share = float(shares[int(best.by_share.sum(axis=0).argmax())])
+    return Choice(best.n_bins, mass, share, tried)
 
 
 def padded(nodes: list[NodeBins]) -> tuple[Floats, Floats]:

@@ -21,6 +21,8 @@ Floats = NDArray[np.float64]
 MAX_CORRELATION = 0.9995
 # Scores beyond this have no mass that a double can hold beside the rest.
 FAR = 37.0
+# Conditional tails beyond this many widths are 1e-45 and less: nothing beside 1e-30.
+DEEP = 14.0
 # A cell never falls below this, so that its logarithm is finite.
 TINY = 1e-300
 
@@ -30,24 +32,31 @@ _NORM = 1.0 / math.sqrt(2.0 * math.pi)
 
 
 @njit(cache=True, nogil=True)
-def normal_between(low: float, high: float) -> float:
-    """Return P(low < Z < high) of a standard normal, relatively exact in both tails."""
-    if low > 0.0:
-        return 0.5 * (math.erfc(low * _SQRT_HALF) - math.erfc(high * _SQRT_HALF))
-    if high < 0.0:
-        return 0.5 * (math.erfc(-high * _SQRT_HALF) - math.erfc(-low * _SQRT_HALF))
-    return 0.5 * (math.erf(high * _SQRT_HALF) - math.erf(low * _SQRT_HALF))
+def _steps(scores: Floats, mean: float, width: float, out: Floats) -> None:
+    """Fill out[j] with P(score_j-1 < Y < score_j) of N(mean, width), the ends open.
 
-
-@njit(cache=True, nogil=True)
-def _half_erfc_steps(scores: Floats, mean: float, width: float, out: Floats) -> None:
-    """Fill out[j] with P(score_j-1 < Y < score_j) of N(mean, width), ends open."""
+    Each border's smaller tail is taken once, so that differences keep their digits on
+    either side of the mean.
+    """
     n = scores.shape[0]
-    before = -np.inf
+    out[:] = 0.0
+    below, above = 0.0, 1.0
+    left_of_mean = True
     for j in range(n + 1):
-        after = (scores[j] - mean) / width if j < n else np.inf
-        out[j] = normal_between(before, after)
-        before = after
+        t = (scores[j] - mean) / width if j < n else np.inf
+        if t < -DEEP:
+            continue
+        if t <= 0.0:
+            tail = 0.5 * math.erfc(-t * _SQRT_HALF)
+            out[j] = tail - below
+            below = tail
+            continue
+        tail = 0.5 * math.erfc(t * _SQRT_HALF) if t < DEEP else 0.0
+        out[j] = 1.0 - below - tail if left_of_mean else above - tail
+        left_of_mean = False
+        above = tail
+        if tail == 0.0:
+            break
 
 
 @njit(cache=True, nogil=True)
@@ -65,9 +74,17 @@ def normal_cells(left: Floats, right: Floats, correlation: float) -> Floats:
     step = np.empty(m + 1)
     # Narrow enough for ten nodes to follow a conditional that sweeps over a border.
     longest = 1.0 if abs(r) < 1e-9 else min(1.0, 1.5 * width / abs(r))
+    # The open cells end where neither their own tail nor the one that a far cell of the other
+    # channel pulls along has anything left that counts.
+    farthest = 3.0
+    if n:
+        farthest = max(-left[0], left[n - 1], farthest)
+    if m:
+        farthest = max(abs(r) * max(-right[0], right[m - 1]), farthest)
+    end = min(FAR, farthest + 6.0)
     for i in range(n + 1):
-        low = left[i - 1] if i > 0 else max(-FAR, min(-9.0, (left[0] if n else 0.0) - 6.0))
-        high = left[i] if i < n else min(FAR, max(9.0, (left[n - 1] if n else 0.0) + 6.0))
+        low = left[i - 1] if i > 0 else -end
+        high = left[i] if i < n else end
         panels = max(1, int(math.ceil((high - low) / longest)))  # noqa: RUF046 - numba wants it
         half = 0.5 * (high - low) / panels
         for k in range(panels):
@@ -75,7 +92,7 @@ def normal_cells(left: Floats, right: Floats, correlation: float) -> Floats:
             for q in range(_NODES.shape[0]):
                 x = middle + half * _NODES[q]
                 weight = half * _WEIGHTS[q] * _NORM * math.exp(-0.5 * x * x)
-                _half_erfc_steps(right, r * x, width, step)
+                _steps(right, r * x, width, step)
                 for j in range(m + 1):
                     cells[i, j] += weight * step[j]
     for i in range(n + 1):

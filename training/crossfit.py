@@ -19,7 +19,7 @@ from scoring.bins import MISSING
 from scoring.density import removal_of
 from scoring.derived import groups
 from scoring.excess import ENOUGH_TRUE_ROWS, ExcessScale
-from scoring.model import Levels, Member, Part, Usual
+from scoring.model import Levels, Member, Usual
 from scoring.sustained import sustain
 from training.blocks import N_FOLDS
 from training.fit import Density
@@ -38,9 +38,8 @@ MAX_MEASURED = 60_000
 class HeldOut:
     """One source's held-out surprise, in a file, with figures of it.
 
-    density: mean held-out surprise in nats a record. fitted: the same on the records that
-    the tables did see, for comparison. coverage: share of readings inside their expected
-    interval. n_scored: records clear of their block's guard.
+    density: mean held-out surprise in nats a record. n_scored: records clear of their
+    block's guard. by_block: (n_blocks, 2) sum of surprise and number of records.
     """
 
     path: Path
@@ -48,6 +47,7 @@ class HeldOut:
     n_scored: int
     density: float
     usual: Usual
+    by_block: Floats
 
     def surprise(self, start: int, stop: int) -> Floats:
         """Return held-out surprise of records start to stop, NaN within a guard."""
@@ -67,7 +67,8 @@ def hold_out(
     with tempfile.NamedTemporaryFile(dir=folder, delete=False) as file:
         path = Path(file.name)
         sampled = _Sampled(rows.of(source).n_records)
-        total, n_scored, n_records = 0.0, 0, 0
+        blocks = rows.blocks(source)
+        by_block, n_records = np.zeros((blocks.n_blocks, 2)), 0
         for chunk in rows.of(source).chunks():
             surprise = np.full(len(chunk.times_ns), np.nan)
             own = np.full((len(surprise), len(rows.table.instruments)), np.nan)
@@ -77,12 +78,16 @@ def hold_out(
                     surprise[use], own[use] = score_values(members[fold], rows, chunk.values[use])
             file.write(surprise.tobytes())
             there = ~np.isnan(surprise)
-            total += float(surprise[there].sum())
-            n_scored += int(there.sum())
+            number = blocks.number(chunk.times_ns[there])
+            n_blocks = blocks.n_blocks
+            by_block[:, 0] += np.bincount(number, weights=surprise[there], minlength=n_blocks)
+            by_block[:, 1] += np.bincount(number, minlength=n_blocks)
             n_records += len(surprise)
             bins = final.bin_table.rows(chunk.values[there])
             sampled.add(surprise[there], own[there], bins)
-    return HeldOut(path, n_records, n_scored, total / max(n_scored, 1), sampled.usual())
+    total, n_scored = by_block.sum(axis=0)
+    density = float(total / max(n_scored, 1.0))
+    return HeldOut(path, n_records, int(n_scored), density, sampled.usual(), by_block)
 
 
 def score_values(member: Member, rows: Rows, values: Floats) -> tuple[Floats, Floats]:
@@ -171,6 +176,6 @@ def follow(rows: Rows, member: Member, held_out: HeldOut, levels: Levels) -> Ite
 def member_of(source: str, density: Density, usual: Usual | None = None) -> Member:
     """Return a member with one part from a fitted density."""
     from_nothing = Usual(
-        0.0, 1.0, 0.0, np.zeros(0), np.zeros(0), np.zeros((0, len(density.nodes)), np.uint8)
+        0.0, 1.0, 0.0, np.zeros(0), np.zeros(0), np.zeros((0, len(density.fine)), np.uint8)
     )
-    return Member(source, density.bins, (Part(density.tree),), usual or from_nothing)
+    return Member(source, density.bins, density.parts, usual or from_nothing, density.regime)

@@ -6,17 +6,22 @@ counts of the chosen edges on fine bins) and never held.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+import math
+from collections.abc import Callable
+from dataclasses import dataclass, field, replace
+from functools import partial
 
 import numpy as np
 from numpy.typing import NDArray
 
 from scoring.bins import MISSING, Bins, BinTable
-from scoring.channels import ChannelTable
+from scoring.channels import Channel, ChannelTable
+from scoring.kernels import evidence_rows
+from scoring.model import Part
 from scoring.tree import Tree
-from training.binning import NodeBins, choose_bins, coarsen
+from training.binning import NodeBins, choose_bins, coarsen, merge_bins, within
 from training.blocks import N_FOLDS
-from training.choices import Choice, choose, merge_counts
+from training.choices import N_BINS, Choice, Unions, choose, merge_counts
 from training.counts import count_pairs
 from training.rows import Rows
 from training.structure import CoarseNode, edge_weights, pair_shape, spanning_forest
@@ -29,16 +34,15 @@ Ints = NDArray[np.int64]
 WEIGHING_BINS_FEW, WEIGHING_BINS_MANY, FEW_PAIRS = 24, 10, 2000
 # An edge must gain this many standard errors of its gain over the folds.
 LEAST_ERRORS = 1.0
+# A combination of regime channels with fewer records, or a smaller share of them, is rare
+# and left to the plain tree; more combinations than this are no regimes.
+LEAST_REGIME_RECORDS, LEAST_REGIME_SHARE, MAX_REGIMES = 300, 0.005, 16
 
 
 @dataclass(frozen=True)
-class Density:
-    """What one fit learned: bins, a tree on them, and how they were chosen.
+class Fitted:
+    """One tree on given bins. weights: (n_nodes, n_nodes) nats. n_records: learned from."""
 
-    fine: the fine bins; nodes: the chosen bins; weights: (n_nodes, n_nodes) nats.
-    """
-
-    fine: list[NodeBins]
     nodes: list[NodeBins]
     tree: Tree
     choice: Choice
@@ -46,45 +50,162 @@ class Density:
     n_records: int
 
     @property
+    def edges(self) -> list[tuple[int, int]]:
+        """The tree's edges as pairs of nodes."""
+        return [(int(a), int(b)) for a, b in self.tree.edges]
+
+
+@dataclass(frozen=True)
+class Density:
+    """What one fit learned.
+
+    fine: the fine bins of every node. plain: one tree over all records. regime: nodes of
+    the state channels that choose a tree; regimes: a tree for each combination of their
+    bins that is not rare.
+    """
+
+    fine: list[NodeBins]
+    plain: Fitted
+    regime: tuple[int, ...] = ()
+    regimes: dict[tuple[int, ...], Fitted] = field(default_factory=dict)
+
+    @property
     def bins(self) -> tuple[Bins, ...]:
         """The chosen bins of every node."""
-        return tuple(node.bins for node in self.nodes)
+        return tuple(node.bins for node in self.plain.nodes)
+
+    @property
+    def parts(self) -> tuple[Part, ...]:
+        """The parts of a member with this density: regimes, then the rest."""
+        if not self.regimes:
+            return (Part(self.plain.tree),)
+        n_all = self.plain.n_records + 0.5 * (len(self.regimes) + 1)
+        named = sum(f.n_records for f in self.regimes.values())
+        parts = [
+            Part(fitted.tree, key, math.log((fitted.n_records + 0.5) / n_all))
+            for key, fitted in self.regimes.items()
+        ]
+        rest = math.log((max(self.plain.n_records - named, 0) + 0.5) / n_all)
+        return (*parts, Part(self.plain.tree, None, rest - self._log_unnamed()))
+
+    def _log_unnamed(self) -> float:
+        """Return ln of the plain tree's probability of the combinations not named."""
+        keys = np.array(list(self.regimes), dtype=np.uint8)
+        rows = np.full((len(keys), len(self.fine)), MISSING, dtype=np.uint8)
+        rows[:, list(self.regime)] = keys
+        named = float(np.exp(evidence_rows(self.plain.tree.arrays, rows)).sum())
+        return math.log(max(1.0 - named, 1e-12))
 
 
 def fit(
-    rows: Rows,
-    folds: tuple[int, ...] = tuple(range(N_FOLDS)),
-    choice: Choice | None = None,
-    edges: list[tuple[int, int]] | None = None,
+    rows: Rows, folds: tuple[int, ...] = tuple(range(N_FOLDS)), like: Density | None = None
 ) -> Density:
-    """Learn the density of some rows from the given folds.
+    """Learn the density of some rows from the given folds, one tree over all records.
 
-    choice, edges: taken as given where not None.
+    like: a density whose structure and choices are taken over.
     """
-    channels = rows.table.nodes
     sample = rows.sample(folds)
     fine = []
-    for k, channel in enumerate(channels):
+    for k, channel in enumerate(rows.table.nodes):
         readings = sample[:, k]
         fine.append(choose_bins(readings[~np.isnan(readings)], channel))
-    bin_table = BinTable.of(tuple(node.bins for node in fine))
-    weights = np.zeros((len(channels), len(channels)))
-    if edges is None:
-        weights, edges = _structure(rows, folds, fine, bin_table)
+    reader = _Reader(rows, folds, BinTable.of(tuple(node.bins for node in fine)))
+    plain = _fit_tree(reader, fine, partial(_unions, fine), like.plain if like else None)
+    return Density(fine, plain)
+
+
+def fit_regimes(
+    rows: Rows,
+    density: Density,
+    regime: tuple[int, ...],
+    folds: tuple[int, ...] = tuple(range(N_FOLDS)),
+    like: Density | None = None,
+) -> Density:
+    """Add a tree for each combination of the regime's channels that is not rare.
+
+    regime: nodes of state channels. density: the plain one of the same rows and folds.
+    like: a density whose regimes, structures and choices are taken over.
+    """
+    sample = rows.sample(folds)
+    codes = sample[:, list(regime)]
+    n_bins = density.plain.choice.n_bins
+    into = _unions(density.fine, n_bins)[1]
+    bin_table = BinTable.of(tuple(node.bins for node in density.fine))
+    regimes = {}
+    for key in list(like.regimes) if like else _common(codes):
+        holds = (codes == np.array(key)).all(axis=1)
+        nodes = _within(density.fine, sample[holds], rows.table.nodes, regime, key)
+        merged = [merge_bins(node, i) for node, i in zip(nodes, into, strict=True)]
+        regimes[key] = _fit_tree(
+            _Reader(rows, folds, bin_table, regime, key),
+            nodes,
+            partial(_same, (merged, into)),
+            like.regimes[key] if like else None,
+            (n_bins,),
+        )
+    return Density(density.fine, density.plain, regime, regimes)
+
+
+def _unions(fine: list[NodeBins], n_bins: int) -> Unions:
+    found = [coarsen(node, n_bins) for node in fine]
+    return [node for node, _ in found], [into for _, into in found]
+
+
+def _same(unions: Unions, n_bins: int) -> Unions:  # noqa: ARG001 - the number is settled
+    return unions
+
+
+def _common(codes: Floats) -> list[tuple[int, ...]]:
+    """Return the combinations of regime channels that are not rare, most records first."""
+    codes = codes[~np.isnan(codes).any(axis=1)]
+    found, counts = np.unique(codes, axis=0, return_counts=True)
+    least = max(LEAST_REGIME_RECORDS, LEAST_REGIME_SHARE * len(codes))
+    order = np.argsort(-counts, kind="stable")[:MAX_REGIMES]
+    return [tuple(int(x) for x in found[k]) for k in order if counts[k] >= least]
+
+
+def _within(
+    fine: list[NodeBins],
+    sample: Floats,
+    channels: tuple[Channel, ...],
+    regime: tuple[int, ...],
+    key: tuple[int, ...],
+) -> list[NodeBins]:
+    """Return the fine bins with scores and marginals of one regime's records."""
+    nodes = []
+    for k, (node, channel) in enumerate(zip(fine, channels, strict=True)):
+        readings = sample[:, k]
+        nodes.append(within(node, readings[~np.isnan(readings)], channel))
+        if k in regime:
+            # In its own regime the channel has one value, whatever else was smoothed.
+            only = np.full(node.n_bins, 1e-300)
+            only[key[regime.index(k)]] = 1.0
+            nodes[-1] = replace(nodes[-1], marginal=only)
+    return nodes
+
+
+def _fit_tree(
+    reader: _Reader,
+    fine: list[NodeBins],
+    unions: Callable[[int], Unions],
+    like: Fitted | None,
+    n_bins_tried: tuple[int, ...] = N_BINS,
+) -> Fitted:
+    """Weigh pairs, choose edges, bins, masses and share, and make the tables of one tree."""
+    weights = np.zeros((len(fine), len(fine)))
+    if like is None:
+        weights, edges = _structure(reader, fine)
+    else:
+        edges = like.edges
     left = np.array([e[0] for e in edges], dtype=np.int64)
     right = np.array([e[1] for e in edges], dtype=np.int64)
-    width = max(node.n_bins for node in fine)
     same = [np.arange(node.n_bins, dtype=np.uint8) for node in fine]
-    counts, n_records = _count(rows, folds, bin_table, same, left, right, width)
-    if choice is None or len(choice.mass) != len(edges):
-        choice = choose(counts, left, right, fine)
-    coarse, into = zip(*(coarsen(node, choice.n_bins) for node in fine), strict=True)
-    nodes = list(coarse)
-    merged = merge_counts(
-        counts.sum(axis=0)[None], list(into), left, right, max(n.n_bins for n in nodes)
-    )[0]
-    tree = build_tree(nodes, merged, edges, choice)
-    return Density(fine, nodes, tree, choice, weights, n_records)
+    counts, n_records = reader.count(same, left, right, max(node.n_bins for node in fine))
+    choice = like.choice if like else choose(counts, left, right, unions, n_bins_tried)
+    nodes, into = unions(choice.n_bins)
+    width = max(node.n_bins for node in nodes)
+    merged = merge_counts(counts.sum(axis=0)[None], into, left, right, width)[0]
+    return Fitted(nodes, build_tree(nodes, merged, edges, choice), choice, weights, n_records)
 
 
 def build_tree(
@@ -107,18 +228,15 @@ def build_tree(
     )
 
 
-def _structure(
-    rows: Rows, folds: tuple[int, ...], fine: list[NodeBins], bin_table: BinTable
-) -> tuple[Floats, list[tuple[int, int]]]:
+def _structure(reader: _Reader, fine: list[NodeBins]) -> tuple[Floats, list[tuple[int, int]]]:
     """Weigh all pairs on coarse bins and return the weights and the forest's edges."""
-    n_nodes = len(fine)
-    left, right = np.triu_indices(n_nodes, 1)
+    left, right = np.triu_indices(len(fine), 1)
     wanted = WEIGHING_BINS_FEW if len(left) <= FEW_PAIRS else WEIGHING_BINS_MANY
     merged = [by_mass(node, wanted) for node in fine]
     width = max(len(node.marginal) for node, _ in merged)
-    counts, _ = _count(rows, folds, bin_table, [into for _, into in merged], left, right, width)
+    counts, _ = reader.count([into for _, into in merged], left, right, width)
     weights, doubt = edge_weights(counts, left, right, [node for node, _ in merged])
-    required, forbidden = _site_says(rows.table)
+    required, forbidden = _site_says(reader.rows.table)
     paying = np.where(weights > LEAST_ERRORS * doubt, weights, -1.0)
     return weights, spanning_forest(paying, required, forbidden)
 
@@ -147,31 +265,39 @@ def by_mass(node: NodeBins, n_bins: int) -> tuple[CoarseNode, NDArray[np.uint8]]
     return CoarseNode(node.scores[ends], marginal, False), group.astype(np.uint8)
 
 
-def _count(
-    rows: Rows,
-    folds: tuple[int, ...],
-    bin_table: BinTable,
-    into: list[NDArray[np.uint8]],
-    left: Ints,
-    right: Ints,
-    width: int,
-) -> tuple[NDArray[np.int64], int]:
-    """Count pairs per fold, (n_folds, n_pairs, width + 1, width + 1), and the records.
+@dataclass(frozen=True)
+class _Reader:
+    """Counts pairs of bins over some rows, the given folds, and maybe one regime of them."""
 
-    The number `width` stands for a missing reading; its row and column are not used.
-    """
-    lookup = np.full((len(into), MISSING + 1), width, dtype=np.uint8)
-    for k, target in enumerate(into):
-        lookup[k, : len(target)] = target
-    counts = np.zeros((len(folds), len(left), width + 1, width + 1), dtype=np.int64)
-    n_records = 0
-    for chunk in rows.chunks():
-        columns = bin_table.columns(chunk.values)
-        coarse = np.stack([lookup[k][column] for k, column in enumerate(columns)])
-        for f, fold in enumerate(folds):
-            use = chunk.kept & (chunk.fold == fold)
-            if use.any():
-                part = np.ascontiguousarray(coarse[:, use])
-                count_pairs(part, left, right, width + 1, counts[f])
-                n_records += int(use.sum())
-    return counts, n_records
+    rows: Rows
+    folds: tuple[int, ...]
+    bin_table: BinTable
+    regime: tuple[int, ...] = ()
+    key: tuple[int, ...] = ()
+
+    def count(
+        self, into: list[NDArray[np.uint8]], left: Ints, right: Ints, width: int
+    ) -> tuple[NDArray[np.int64], int]:
+        """Count pairs per fold, (n_folds, n_pairs, width + 1, width + 1), and the records.
+
+        into: for each node the bin that each fine bin is counted as. The number `width`
+        stands for a missing reading; its row and column are not used.
+        """
+        lookup = np.full((len(into), MISSING + 1), width, dtype=np.uint8)
+        for k, target in enumerate(into):
+            lookup[k, : len(target)] = target
+        counts = np.zeros((len(self.folds), len(left), width + 1, width + 1), dtype=np.int64)
+        n_records = 0
+        for chunk in self.rows.chunks():
+            columns = self.bin_table.columns(chunk.values)
+            keep = chunk.kept.copy()
+            for node, bin_number in zip(self.regime, self.key, strict=True):
+                keep &= columns[node] == bin_number
+            coarse = np.stack([lookup[k][column] for k, column in enumerate(columns)])
+            for f, fold in enumerate(self.folds):
+                use = keep & (chunk.fold == fold)
+                if use.any():
+                    part = np.ascontiguousarray(coarse[:, use])
+                    count_pairs(part, left, right, width + 1, counts[f])
+                    n_records += int(use.sum())
+        return counts, n_records

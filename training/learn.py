@@ -19,7 +19,10 @@ from training.history.spool import Spool, spool_history
 from training.levels import Curve, set_levels
 from training.members import LEAST_OWN_RECORDS, Learned, learn_fleet, learn_member
 from training.progress import Progress
+from training.promise import Promise, promise_of
+from training.promise_words import promise_lines
 from training.rows import DEFAULT_STEP_S, Rows
+from training.season import slow_channels, unseen_nats
 from training.settings import LearnSettings, load_learn_settings
 from training.treetext import tree_lines
 
@@ -30,7 +33,8 @@ class LearnResult:
 
     model: Model
     learned: dict[str, Learned]
-    curves: dict[str, Curve]
+    curve: Curve | None
+    promise: Promise | None
     seconds: float
 
 
@@ -64,13 +68,15 @@ def learn_model(
             least_readings=max(1, round(settings.judging.least_share * len(table.instruments))),
         )
         members = {s: one.member for s, one in learned.items()}
-        levels, members, curves = set_levels(
-            rows,
-            members,
-            {s: one.held_out for s, one in learned.items()},
-            start,
-            settings.budget.alerts_per_day * len(enough) / max(len(spool.sources), 1),
-        )
+        # Sources without a member of their own are scored by the fleet's and take their
+        # share of the budget.
+        budget = settings.budget.alerts_per_day * len(enough) / max(len(spool.sources), 1)
+        held_out = {s: one.held_out for s, one in learned.items()}
+        levels, members, curve = set_levels(rows, members, held_out, start, budget)
+    promise = None
+    if curve is not None:
+        unseen = unseen_nats(members, held_out)
+        promise = promise_of(curve, levels, budget, slow_channels(rows), unseen)
     members = {s: replace(m, about=_about(rows, learned[s])) for s, m in members.items()}
     rests = [m.usual.sustained for m in members.values()] or [0.0]
     fleet = replace(fleet, usual=replace(fleet.usual, sustained=sum(rests) / len(rests)), source="")
@@ -81,22 +87,23 @@ def learn_model(
         "alerts_per_day": settings.budget.alerts_per_day,
         "first_ns": spool.report.first_ns,
         "last_ns": spool.report.last_ns,
+        "promise": promise.as_data() if promise else None,
     }
     model = Model(table, members, fleet, levels, about=about)
-    return LearnResult(model, learned, curves, time.perf_counter() - began)
+    return LearnResult(model, learned, curve, promise, time.perf_counter() - began)
 
 
 def _about(rows: Rows, one: Learned) -> dict[str, Any]:
     first, last = rows.spool.first_last_ns(one.member.source)
     return {
-        "n_records": one.density.n_records,
+        "n_records": one.density.plain.n_records,
         "first_ns": first,
         "last_ns": last,
         "held_out_records": one.held_out.n_scored,
         "held_out_surprise": round(one.held_out.density, 4),
-        "n_bins": one.density.choice.n_bins,
-        "share": one.density.choice.share,
-        "masses": one.density.choice.mass.tolist(),
+        "n_bins": one.density.plain.choice.n_bins,
+        "share": one.density.plain.choice.share,
+        "masses": one.density.plain.choice.mass.tolist(),
     }
 
 
@@ -185,6 +192,14 @@ def history_lines(spool: Spool) -> list[str]:
     return lines
 
 
+def _regime_words(result: LearnResult, one: Learned) -> str:
+    names = result.model.table.names
+    if not one.density.regimes:
+        return ""
+    by = " and ".join(names[node] for node in one.density.regime)
+    return f"{len(one.density.regimes)} trees by {by}, "
+
+
 def result_lines(result: LearnResult) -> list[str]:
     """Return what was learned: the tree, held-out figures, levels."""
     model = result.model
@@ -195,17 +210,15 @@ def result_lines(result: LearnResult) -> list[str]:
         lines.append(f"tree of {name} (nats on its edges):")
         lines += ["  " + line for line in tree_lines(model.table, shown.member.parts[0].tree)]
         for source, one in result.learned.items():
-            choice = one.density.choice
+            choice = one.density.plain.choice
             lines.append(
-                f"{source}: {one.density.n_records} records, "
-                f"{len(one.density.tree.edges)} edges, {choice.n_bins} bins, "
+                f"{source}: {one.density.plain.n_records} records, "
+                f"{len(one.density.plain.edges)} edges, {choice.n_bins} bins, "
+                f"{_regime_words(result, one)}"
                 f"held-out surprise {one.held_out.density:.2f} nats a record "
                 f"over {one.held_out.n_scored} records"
             )
-    days = result.curves["sustained"].days
-    lines.append(
-        f"levels for {model.about['alerts_per_day']:g} alerts a day: excess "
-        f"{model.levels.record:.2f}, sustained {model.levels.sustained:.2f} nats, "
-        f"from {days * 24:.1f} source-hours held out"
-    )
-    return lines
+    if result.promise is None:
+        lines.append("no source has history enough for levels of its own: no alert will be raised")
+        return lines
+    return lines + promise_lines(result.promise)

@@ -5,10 +5,13 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from pathlib import Path
 
+import numpy as np
+
+from scoring.channels import ChannelTable
 from scoring.model import Member
 from training.blocks import N_FOLDS
 from training.crossfit import HeldOut, hold_out, member_of, score_values, usual_of
-from training.fit import Density, fit
+from training.fit import Density, fit, fit_regimes
 from training.rows import Rows
 
 # A source with fewer records is scored by the fleet's member.
@@ -16,6 +19,8 @@ LEAST_OWN_RECORDS = 200
 # From this many records on, held-out tables keep the structure and choices that all
 # records chose: what that leaks is far below what it saves.
 SETTLED_RECORDS = 20_000
+# More state channels than this are not combined without the site's word.
+MAX_REGIME_STATES = 4
 
 
 @dataclass(frozen=True)
@@ -28,19 +33,72 @@ class Learned:
 
 
 def learn_member(rows: Rows, source: str, folder: Path) -> Learned:
-    """Learn one source's own member and score it on blocks of time it did not see."""
+    """Learn one source's own member and score it on blocks of time it did not see.
+
+    Where state channels may choose a regime, a tree for each combination is learned too,
+    and kept if held-out records are less surprising by more than the doubt of that.
+    """
     own = rows.of(source)
+    best, unseen = _plain(own, source, folder)
+    plain_density = best.density
+    for regime in regimes_to_try(rows.table):
+        density = fit_regimes(own, plain_density, regime)
+        if not density.regimes:
+            continue
+        settled = density if own.n_records >= SETTLED_RECORDS else None
+        members = [
+            member_of(source, fit_regimes(own, one, regime, _but(fold), settled))
+            for fold, one in enumerate(unseen)
+        ]
+        other = _measured(own, source, density, members, folder)
+        better = _pays(best.held_out, other.held_out)
+        (best if better else other).held_out.path.unlink()
+        best = other if better else best
+    return best
+
+
+def regimes_to_try(table: ChannelTable) -> list[tuple[int, ...]]:
+    """Return combinations of state channels that may choose a tree, as nodes.
+
+    What the site names in `regime` is the only one tried; an empty list there turns
+    regimes off. Otherwise all state instruments together, if they are few.
+    """
+    number = {channel.name: k for k, channel in enumerate(table.instruments)}
+    if table.regime is not None:
+        return [tuple(number[name] for name in table.regime)] if table.regime else []
+    states = tuple(k for k, channel in enumerate(table.instruments) if channel.is_state)
+    return [states] if 0 < len(states) <= MAX_REGIME_STATES else []
+
+
+def _plain(own: Rows, source: str, folder: Path) -> tuple[Learned, list[Density]]:
+    """Learn the plain density, and one without each fold."""
     density = fit(own)
-    settled = own.n_records >= SETTLED_RECORDS
-    edges = [(int(a), int(b)) for a, b in density.tree.edges] if settled else None
-    choice = density.choice if settled else None
-    unseen = [
-        member_of(source, fit(own, tuple(f for f in range(N_FOLDS) if f != fold), choice, edges))
-        for fold in range(N_FOLDS)
-    ]
+    settled = density if own.n_records >= SETTLED_RECORDS else None
+    unseen = [fit(own, _but(fold), settled) for fold in range(N_FOLDS)]
+    members = [member_of(source, one) for one in unseen]
+    return _measured(own, source, density, members, folder), unseen
+
+
+def _measured(
+    own: Rows, source: str, density: Density, unseen: list[Member], folder: Path
+) -> Learned:
     final = member_of(source, density)
-    held_out = hold_out(rows, source, unseen, final, folder)
+    held_out = hold_out(own, source, unseen, final, folder)
     return Learned(replace(final, usual=held_out.usual), density, held_out)
+
+
+def _but(fold: int) -> tuple[int, ...]:
+    return tuple(f for f in range(N_FOLDS) if f != fold)
+
+
+def _pays(plain: HeldOut, other: HeldOut) -> bool:
+    """Return whether the other's held-out surprise is lower by more than its doubt."""
+    there = (plain.by_block[:, 1] > 0) & (other.by_block[:, 1] > 0)
+    if there.sum() < 2:
+        return False
+    gain = plain.by_block[there] - other.by_block[there]
+    per_block = gain[:, 0] / plain.by_block[there, 1]
+    return bool(per_block.mean() > per_block.std(ddof=1) / np.sqrt(there.sum()))
 
 
 def learn_fleet(rows: Rows, only: Learned | None) -> Member:

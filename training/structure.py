@@ -25,6 +25,9 @@ Ints = NDArray[np.int64]
 # is weighed with the mass that suits it, since a short history says little by counts.
 WEIGHING_MASSES = np.array([30.0, 300.0, 3000.0, 100_000.0])
 WEIGHING_SHARE = 0.01
+# Sweeps of raking while tables are compared: what is left to rake then is far below the
+# differences between choices.
+ROUGH_SWEEPS = 3
 
 
 @dataclass(frozen=True)
@@ -156,32 +159,43 @@ def pair_shape(
 
 
 @njit(cache=True, nogil=True)
+def held_out_shapes(
+    counts: Floats, left: Floats, right: Floats, left_scores: Floats, right_scores: Floats
+) -> Floats:
+    """Return the shape of one pair's table made without each fold, (n_folds, n, m)."""
+    shapes = np.empty(counts.shape)
+    total = _over_folds(counts)
+    for f in range(counts.shape[0]):
+        shapes[f] = pair_shape(total - counts[f], left, right, left_scores, right_scores)
+    return shapes
+
+
+@njit(cache=True, nogil=True)
+def _over_folds(counts: Floats) -> Floats:
+    total = np.zeros(counts.shape[1:])
+    for f in range(counts.shape[0]):
+        total += counts[f]
+    return total
+
+
+@njit(cache=True, nogil=True)
 def held_out_gains(
-    counts: Floats,
-    left: Floats,
-    right: Floats,
-    left_scores: Floats,
-    right_scores: Floats,
-    masses: Floats,
-    shares: Floats,
+    counts: Floats, shapes: Floats, left: Floats, right: Floats, masses: Floats, shares: Floats
 ) -> Floats:
     """Return what one pair's table gains on folds that it did not see, in nats.
 
-    counts: (n_folds, n, m) records per cell. Tables are made from the other folds, for
-    each weight of the shape and each independent share.
+    counts: (n_folds, n, m) records per cell; shapes: as held_out_shapes gives them.
+    Tables are made from the other folds, for each weight of the shape and each share.
     Returns (n_folds, n_masses, n_shares), sums over the fold's records of
     ln(joint / (left * right)).
     """
     n_folds, n, m = counts.shape
-    total = np.zeros((n, m))
-    for f in range(n_folds):
-        total += counts[f]
+    total = _over_folds(counts)
     gains = np.zeros((n_folds, masses.shape[0], shares.shape[0]))
     for f in range(n_folds):
         seen = total - counts[f]
-        shape = pair_shape(seen, left, right, left_scores, right_scores)
         for k in range(masses.shape[0]):
-            joint = shaped_joint(seen, shape, masses[k], 0.0, left, right)
+            joint = shaped_joint(seen, shapes[f], masses[k], 0.0, left, right, ROUGH_SWEEPS)
             for i in range(n):
                 for j in range(m):
                     if counts[f, i, j] > 0.0:
@@ -215,9 +229,9 @@ def _weigh(
         empty = np.empty(0)
         left_scores = empty if is_state[a] else scores[a, : n - 1]
         right_scores = empty if is_state[b] else scores[b, : m - 1]
-        found = held_out_gains(
-            cells, marginal[a, :n], marginal[b, :m], left_scores, right_scores, masses, shares
-        )
+        own, other = marginal[a, :n], marginal[b, :m]
+        shapes = held_out_shapes(cells, own, other, left_scores, right_scores)
+        found = held_out_gains(cells, shapes, own, other, masses, shares)
         best = np.argmax(found[:, :, 0].sum(axis=0))
         gains[p] = found[:, best, 0]
 

@@ -22,15 +22,15 @@ MAX_SWEEPS = 500
 
 
 @njit(cache=True, nogil=True)
-def rake(joint: Floats, left: Floats, right: Floats) -> int:
+def rake(joint: Floats, left: Floats, right: Floats, most: int = MAX_SWEEPS) -> int:
     """Scale `joint` in place until its sums are the marginals `left` and `right`.
 
     joint: (n, m) positive. left: (n,), right: (m,) positive, each summing to 1.
-    Returns the number of sweeps.
+    most: sweeps at the most. Returns the number of sweeps.
     """
     n, m = joint.shape
     column = np.empty(m)
-    for sweep in range(MAX_SWEEPS):
+    for sweep in range(most):
         column[:] = 0.0
         worst = 0.0
         for i in range(n):
@@ -49,17 +49,24 @@ def rake(joint: Floats, left: Floats, right: Floats) -> int:
                 joint[i, j] *= column[j]
         if worst < RAKE_ERROR:
             return sweep + 1
-    return MAX_SWEEPS
+    return most
 
 
 @njit(cache=True, nogil=True)
 def shaped_joint(
-    counts: Floats, shape: Floats, mass: float, share: float, left: Floats, right: Floats
+    counts: Floats,
+    shape: Floats,
+    mass: float,
+    share: float,
+    left: Floats,
+    right: Floats,
+    most: int = MAX_SWEEPS,
 ) -> Floats:
     """Return the joint table of one pair, (n, m), with the given marginals.
 
     counts: (n, m) records per cell. shape: (n, m) summing to about 1, positive.
-    mass: weight of the shape in records. share: independent share, 0 to 1.
+    mass: weight of the shape in records. share: independent share, 0 to 1. most: sweeps
+        of raking at the most.
     """
     n, m = counts.shape
     joint = np.empty((n, m))
@@ -71,7 +78,7 @@ def shaped_joint(
         for j in range(m):
             # The floor keeps a cell that underflowed from turning the raking into 0 / 0.
             joint[i, j] = max((counts[i, j] + mass * shape[i, j]) / total, 1e-300)
-    rake(joint, left, right)
+    rake(joint, left, right, most)
     for i in range(n):
         for j in range(m):
             joint[i, j] = (1.0 - share) * joint[i, j] + share * left[i] * right[j]
