@@ -46,14 +46,13 @@ class Scored:
     @classmethod
     def empty(cls, n: int) -> Scored:
         """Return room for n records, nothing in it."""
-        nothing = [np.full(n, np.nan) for _ in range(7)]
-        surprise, excess, sustained, suspect_surprise, low, high, best = nothing
+        surprise, excess, sustained, own, low, high, best = np.full((7, n), np.nan)
         return cls(
             surprise=surprise,
             excess=excess,
             sustained=sustained,
             suspect=np.full(n, -1, dtype=np.int16),
-            suspect_surprise=suspect_surprise,
+            suspect_surprise=own,
             low=low,
             high=high,
             best=best,

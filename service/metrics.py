@@ -234,7 +234,9 @@ class _Collector:
         yield CounterMetricFamily(
             "oddbranch_readings", "Readings that could have come.", value=m.n_readings
         )
-        yield _histogram("excess_nats", "Excess of judged records, zero where less than usual.", m.excess)
+        yield _histogram(
+            "excess_nats", "Excess of judged records, zero where less than usual.", m.excess
+        )
         yield _histogram(
             "batch_records", "Items in a body or a piece of a stream.", m.batch_records
         )

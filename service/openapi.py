@@ -12,8 +12,8 @@ from fastapi import FastAPI
 from fastapi.openapi.utils import get_openapi
 from pydantic.json_schema import models_json_schema
 
+from service.careful import MAX_ABS_READING, MAX_NAME_CHARS, MAX_WORD_CHARS, QUALITIES
 from service.layout import ChannelLike
-from service.parse import MAX_ABS_READING, MAX_NAME_CHARS, MAX_WORD_CHARS, QUALITIES
 from service.problems import KINDS
 from service.running import Service
 from service.schemas import ADVICE, TIME_EXAMPLE, TIME_PATTERN, ProblemBody, ProblemItem, Score

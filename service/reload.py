@@ -14,6 +14,8 @@ from scoring.errors import OddbranchError
 from service.engine import Engine
 from service.logs import log_event
 from service.metrics import Metrics
+from service.parse import Parser
+from service.settings import LimitSettings
 
 _Mark = tuple[int, int, int, str]
 
@@ -21,9 +23,11 @@ _Mark = tuple[int, int, int, str]
 class ModelWatch:
     """Holds the model in use and looks for another at the same path."""
 
-    def __init__(self, path: Path, load: Callable[[Path], Engine], metrics: Metrics) -> None:
-        self.path, self.load, self.metrics = path, load, metrics
-        self._engine: Engine | None = None
+    def __init__(
+        self, path: Path, load: Callable[[Path], Engine], metrics: Metrics, limits: LimitSettings
+    ) -> None:
+        self.path, self.load, self.metrics, self.limits = path, load, metrics, limits
+        self._in_use: tuple[Engine, Parser] | None = None
         self._mark: _Mark | None = None
         # Why the model that lies there now is not in use, for the readiness answer.
         self.refusal: str | None = None
@@ -31,13 +35,18 @@ class ModelWatch:
     @property
     def engine(self) -> Engine:
         """The model in use."""
-        assert self._engine is not None, "open the service first"
-        return self._engine
+        return self.in_use[0]
+
+    @property
+    def in_use(self) -> tuple[Engine, Parser]:
+        """The model in use and the parser of its layout, which change together."""
+        assert self._in_use is not None, "open the service first"
+        return self._in_use
 
     def load_first(self) -> None:
         """Load the model or raise OddbranchError: without one there is nothing to serve."""
         self._mark = self._marked()
-        self._engine = self.load(self.path.resolve())
+        self._in_use = self._ready(self.load(self.path.resolve()))
 
     async def look(self) -> None:
         """Take a model that was published since the last look."""
@@ -56,7 +65,12 @@ class ModelWatch:
         if engine.name != self.engine.name:
             log_event("model_changed", model=engine.name, before=self.engine.name)
             self.metrics.reloads["taken"] += 1
-            self._engine = engine
+            self._in_use = self._ready(engine)
+
+    def _ready(self, engine: Engine) -> tuple[Engine, Parser]:
+        limits = self.limits
+        parser = Parser(engine.layout, n_batch_max=limits.n_batch, n_readings_max=limits.n_readings)
+        return engine, parser
 
     def _refuse(self, mark: _Mark, why: str) -> None:
         self._mark, self.refusal = mark, why

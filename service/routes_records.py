@@ -11,7 +11,6 @@ from starlette.types import Receive, Scope, Send
 from service.answers import batch_answers, problem_of, record_answers
 from service.bodies import BodyReader, ClientGone
 from service.nearest import nearest_of
-from service.parse import load_json, parse_items
 from service.pipeline import Job
 from service.problems import Problem
 from service.running import Service
@@ -54,20 +53,9 @@ class RecordsEndpoint:
         await send({"type": "http.response.body", "body": body})
 
     async def _answer(self, reader: BodyReader, request: str, channels: bool) -> bytes:
-        data = load_json(await reader.whole())
-        single = isinstance(data, dict)
-        if not single and not isinstance(data, list):
-            raise Problem("bad-record", "the body is one record (an object) or an array of records")
-        items = [data] if single else data
-        limits = self.service.settings.limits
-        if len(items) > limits.n_batch:
-            raise Problem(
-                "too-large",
-                f"the array has {len(items)} records; at most {limits.n_batch} are taken "
-                "(limits.n_batch); send several arrays, or stream them as application/x-ndjson",
-            )
-        engine = self.service.engine
-        batch = parse_items(items, engine.layout, limits.n_readings)
+        whole = await reader.whole()
+        engine, parser = self.service.models.in_use
+        batch, single = parser.body(whole)
         if batch.problems:
             self.service.metrics.refused(len(batch.problems))
             if single:

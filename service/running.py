@@ -14,6 +14,7 @@ from service.engine import Engine
 from service.logs import log_event
 from service.metrics import Metrics
 from service.pipeline import AlertSink, NoAlerts
+from service.quick import warm
 from service.reload import ModelWatch
 from service.retention import Retention
 from service.settings import Settings
@@ -49,7 +50,7 @@ class Service:
             per_source=settings.metrics.per_source, n_sources_max=settings.metrics.n_sources
         )
         self.tokens = Tokens(open_without=is_loopback(settings.server.host))
-        self.models = ModelWatch(settings.model.path, load, self.metrics)
+        self.models = ModelWatch(settings.model.path, load, self.metrics, settings.limits)
         self.writer = Writer(
             self.database,
             self.metrics,
@@ -76,6 +77,7 @@ class Service:
             with self.database.read.connect() as connection:
                 self.tokens.read(connection)
             self.models.load_first()
+            warm(self.engine.layout)
         except BaseException:
             self.database.close()
             raise

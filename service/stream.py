@@ -18,7 +18,6 @@ from starlette.types import Receive, Scope, Send
 
 from service.answers import batch_answers
 from service.bodies import BodyReader, ClientGone
-from service.parse import parse_lines
 from service.pipeline import Job, Outcome
 from service.problems import Problem
 from service.running import Service
@@ -104,13 +103,9 @@ async def _pieces(
 async def _answer_piece(
     service: Service, position: int, lines: list[bytes | Problem], request: str, channels: bool
 ) -> bytes:
-    engine = service.engine
+    engine, parser = service.models.in_use
     broken = {i: line for i, line in enumerate(lines) if isinstance(line, Problem)}
-    batch = parse_lines(
-        [b"null" if isinstance(line, Problem) else line for line in lines],
-        engine.layout,
-        service.settings.limits.n_readings,
-    )
+    batch = parser.lines([b"null" if isinstance(line, Problem) else line for line in lines])
     batch.problems.update(broken)
     if batch.problems:
         service.metrics.refused(len(batch.problems))

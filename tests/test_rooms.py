@@ -43,7 +43,8 @@ THIRD_PARTY = {
         *("click", "rich", "orjson", "sqlalchemy", "dask", "distributed"),
     },
     "service": {
-        *("numpy", "pydantic", "pydantic_settings", "pydantic_core", "fastapi", "starlette"),
+        *("numpy", "numba", "pydantic", "pydantic_settings", "pydantic_core", "fastapi"),
+        "starlette",
         *("uvicorn", "uvloop", "httptools", "orjson", "prometheus_client", "sqlalchemy"),
         *("alembic", "click", "psycopg"),
     },

@@ -11,8 +11,9 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from service.careful import load_json
 from service.layout import Layout
-from service.parse import Batch, load_json, parse_items, parse_lines
+from service.parse import Batch, parse_items, parse_lines
 from service.problems import Problem
 from tests.service_fakes import CHANNELS
 from tests.service_http import START_S, record

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import Any
 
 # Before any time that a record can have.
@@ -32,7 +32,10 @@ class SourceState:
 
     def copy(self) -> SourceState:
         """Return a copy to work on, so that a failed commit leaves this one as it was."""
-        return replace(self)
+        return SourceState(
+            self.id, self.name, self.newest_ns, self.last_ns, self.n_records, self.n_over_level,
+            self.model, self.excess, self.sustained, self.alert, self.standing, self.live,
+        )  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True)
