@@ -1,134 +1,77 @@
-"""Levels from held-out time: how often each level would have been crossed, in episodes.
+"""Levels for a budget of alert episodes, from held-out time.
 
-A level is the lowest such that it and every higher one keep to the alarm budget and to
-a limit on the time in alert. Beyond the highest value seen it goes on along the tail,
-and no further than ten times the held-out span can speak for.
+Two levels, one on excess and one on sustained, share one budget: an episode that passes
+both is one alert. They move together, each passed equally often by itself, and are the
+lowest such that they and all higher ones keep to the budget and to a limit on the time
+in alert. Beyond what was seen they follow the tail of episode maxima, no further than
+ten times the held-out span.
 """
 
 from __future__ import annotations
 
-import math
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
+from typing import Final
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from scoring.alert_settings import AlertSettings
 from scoring.model import Levels, Member
-from training.crossfit import Followed, HeldOut, follow
+from scoring.sustained import sustain
+from training.crossfit import HeldOut, follow
+from training.heldexcess import HeldExcess, keep_excess
 from training.rows import Rows
+from training.scale import ENOUGH_COUNTED, LEAST_COUNT, Scale, scale_of, threshold_of
+from training.sweep import Marks, Pairs, Sweep, cap_of
 
 Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
 
-S_PER_DAY = 86_400.0
-# Exceedances closer than this many usual intervals are one episode.
-EPISODE_STEPS = 30.0
-# No source may spend more than this share of its time in alert.
-MAX_TIME_SHARE = 0.01
-# A level may lie as far beyond the data as this many held-out spans speak for.
-MAX_REACH = 10.0
-# Values of the level that are tried.
-N_TRIED = 160
-# Rounds in which level and cap settle to each other.
-ROUNDS = 3
+DAY_NS: Final = 86_400_000_000_000
+# Together the sources may spend no more than this share of their time in alert.
+MAX_TIME_SHARE: Final = 0.01
+# Levels of each kind that are tried, and pairs.
+N_TRIED: Final = 120
+N_PAIRS: Final = 100
+# Pairs reach from this many times the budget down to less than one held-out episode.
+LOOSEST: Final = 20.0
+# No level is put below this share of the records of quiet time.
+_LOWEST_QUANTILE: Final = 0.9
+# What a single record may add to where sustained rests is cut off here.
+_CAP_QUANTILE: Final = 0.999
 
 
 @dataclass(frozen=True)
 class Curve:
-    """Episodes over level, from held-out records of all sources.
+    """Episodes over pairs of levels, from strict to loose, held-out time of all sources.
 
-    levels: (n,) rising. episodes, time_share: (n,) count and share of records above.
-    days: source-days that were held out. tail: mean excess of episode maxima over the
-    highest tenth, for going beyond the data.
+    record, sustained: (n,) nats, falling. alone: (n,) how often each kind of level would
+    be passed by itself. seen: (n,) episodes of the pair. expected: (n,) the same, along the
+    tail where too few were seen. time_share: (n,) of records that held an alert.
+    by_day: (n, n_days) seen episodes by day of held-out time.
+    source_days: judged time summed over sources. n_sources: how many those are.
+    chosen: the place that keeps the budget.
     """
 
-    levels: Floats
-    episodes: Floats
+    record: Floats
+    sustained: Floats
+    alone: Floats
+    seen: Ints
+    expected: Floats
     time_share: Floats
-    days: float
-    tail: float
+    by_day: Ints
+    source_days: float
+    n_sources: int
+    scales: tuple[Scale, Scale]
+    allowed: float
+    chosen: int
 
-    def lowest(self, per_source_day: float) -> float:
-        """Return the lowest level that, with every higher one, keeps to the budget."""
-        allowed = per_source_day * self.days
-        bad = (self.episodes > allowed) | (self.time_share > MAX_TIME_SHARE)
-        last_bad = int(np.flatnonzero(bad)[-1]) if bad.any() else -1
-        if last_bad + 1 < len(self.levels):
-            level = float(self.levels[last_bad + 1])
-        else:
-            level = float(self.levels[-1])
-        if allowed < 1.0:
-            # Less than one episode may be expected in all of the held-out time: the tail
-            # is followed on, by the span that the budget asks for.
-            reach = min(1.0 / max(allowed, 1e-9), MAX_REACH)
-            level = max(level, float(self.levels[-1])) + self.tail * math.log(reach)
-        return level
-
-
-@njit(cache=True, nogil=True)
-def count_episodes(
-    times_ns: NDArray[np.int64],
-    values: Floats,
-    levels: Floats,
-    gap_ns: int,
-    last_ns: NDArray[np.int64],
-    episodes: Floats,
-    above: Floats,
-) -> None:
-    """Add to `episodes` and `above` what each level would have seen in these records.
-
-    last_ns: (n_levels,) time of the last record above, carried from chunk to chunk.
-    """
-    for r in range(values.shape[0]):
-        x = values[r]
-        for k in range(levels.shape[0]):
-            if not x > levels[k]:
-                break
-            if times_ns[r] - last_ns[k] > gap_ns:
-                episodes[k] += 1.0
-            last_ns[k] = times_ns[r]
-            above[k] += 1.0
-
-
-def measure(
-    streams: Iterable[Iterator[Followed]], which: str, step_s: float, levels: Floats
-) -> Curve:
-    """Return the curve of episodes over level. which: "excess" or "sustained"."""
-    episodes, above = np.zeros(len(levels)), np.zeros(len(levels))
-    n_records, top = 0, []
-    gap_ns = int(EPISODE_STEPS * step_s * 1e9)
-    for stream in streams:
-        last_ns = np.full(len(levels), np.iinfo(np.int64).min // 2)
-        for part in stream:
-            values = part.excess if which == "excess" else part.sustained
-            judged = ~np.isnan(part.excess)
-            count_episodes(
-                part.times_ns[judged], values[judged], levels, gap_ns, last_ns, episodes, above
-            )
-            n_records += int(judged.sum())
-            if judged.any():
-                top.append(np.sort(values[judged])[-50:])
-    best = np.sort(np.concatenate(top or [np.zeros(1)]))[::-1][:30]
-    tail = float(max(best.mean() - best[-1], 0.1)) if len(best) > 1 else 1.0
-    share = above / max(n_records, 1)
-    return Curve(levels, episodes, share, n_records * step_s / S_PER_DAY, tail)
-
-
-def tried_levels(streams: Iterable[Iterator[Followed]], which: str) -> Floats:
-    """Return levels to try: the upper part of what was seen, and the highest value."""
-    sample: list[Floats] = []
-    high = -math.inf
-    for stream in streams:
-        for part in stream:
-            values = (part.excess if which == "excess" else part.sustained)[~np.isnan(part.excess)]
-            if len(values):
-                high = max(high, float(values.max()))
-                sample.append(values[:: max(1, len(values) // 4000)])
-    if not sample:
-        return np.array([1.0])
-    low = float(np.quantile(np.concatenate(sample), 0.9))
-    return np.linspace(low, max(high, low + 1e-6), N_TRIED)
+    def place(self, allowed: float) -> int:
+        """Return the loosest pair that, with every stricter one, keeps to a count."""
+        bad = (self.expected > allowed) | (self.seen > allowed) | (self.time_share > MAX_TIME_SHARE)
+        first_bad = int(np.argmax(bad)) if bad.any() else len(bad)
+        return max(first_bad - 1, 0)
 
 
 def set_levels(
@@ -137,41 +80,200 @@ def set_levels(
     held_out: dict[str, HeldOut],
     start: Levels,
     alerts_per_day: float,
-) -> tuple[Levels, dict[str, Member], dict[str, Curve]]:
-    """Return levels that keep to the budget, members with their usual sustained, curves.
+    settings: AlertSettings | None = None,
+) -> tuple[Levels, dict[str, Member], Curve | None]:
+    """Return levels that keep to the budget, members with their usual sustained, the curve.
 
-    alerts_per_day: over all of these sources. Half of the budget is for records, half for
-    sustained.
+    alerts_per_day: over all of these sources together. Files of 16 bytes a record are
+    written beside the held-out scores. Without any held-out record the levels stay as they
+    start, and there is no curve.
     """
-    n_sources = max(len(members), 1)
-    per_source_day = alerts_per_day / n_sources / 2
-
-    def streams(levels: Levels) -> Iterator[Iterator[Followed]]:
-        return (follow(rows, members[s], held_out[s], levels) for s in members)
-
-    levels = start
-    tried = tried_levels(streams(levels), "excess")
-    records = measure(streams(levels), "excess", levels.step_s, tried)
-    levels = replace(levels, record=records.lowest(per_source_day))
-    members = {s: _usual_sustained(rows, m, held_out[s], levels) for s, m in members.items()}
-    weight = 1.0 - math.exp(-levels.step_s / levels.tau_s)
-    curve = records
-    for _ in range(ROUNDS):
-        tried = tried_levels(streams(levels), "sustained")
-        curve = measure(streams(levels), "sustained", levels.step_s, tried)
-        level = curve.lowest(per_source_day)
-        usual = min(m.usual.sustained for m in members.values())
-        # From the usual value, one record can lift sustained to just under its level.
-        cap = usual + 0.95 * (level - usual) / weight
-        levels = replace(levels, sustained=level, cap=cap)
-    return levels, members, {"record": records, "sustained": curve}
+    kept = [_keep(rows, members[source], held_out[source], start) for source in members]
+    curve = curve_of(kept, start, alerts_per_day, settings or AlertSettings())
+    rest = {one.source: one.usual for one in kept}
+    members = {s: replace(m, usual=replace(m.usual, sustained=rest[s])) for s, m in members.items()}
+    return levels_at(curve, start, max(rest.values(), default=0.0)), members, curve
 
 
-def _usual_sustained(rows: Rows, member: Member, held_out: HeldOut, levels: Levels) -> Member:
-    """Return the member with the mean of capped excess as its usual sustained value."""
-    total, n = 0.0, 0
-    for part in follow(rows, member, held_out, levels):
-        judged = part.excess[~np.isnan(part.excess)]
-        total += float(np.minimum(judged, levels.record).sum())
-        n += len(judged)
-    return replace(member, usual=replace(member.usual, sustained=total / max(n, 1)))
+def levels_at(curve: Curve | None, start: Levels, usual: float) -> Levels:
+    """Return the levels at a curve's chosen place; as they start without a curve.
+
+    usual: the highest value at which sustained rests at any source.
+    """
+    if curve is None:
+        return start
+    level = curve.sustained[curve.chosen]
+    cap = cap_of(np.array([level]), usual, start.tau_s, start.step_s)
+    record = float(curve.record[curve.chosen])
+    return replace(start, record=record, sustained=float(level), cap=float(cap[0]))
+
+
+def curve_of(
+    kept: list[HeldExcess], start: Levels, alerts_per_day: float, settings: AlertSettings
+) -> Curve | None:
+    """Return how often pairs of levels are passed in held-out time, the budget's one chosen.
+
+    kept: one a source; where sustained rests is set on them. None without any record.
+    """
+    sources = [one for one in kept if one.n_judged]
+    if not sources:
+        return None
+    sustained, highest = _rest(sources, start)
+    excess = np.concatenate([one.sample for one in sources])
+    tried = (
+        _tried(excess, max(one.highest for one in sources)),
+        _tried(sustained, highest),
+    )
+    scales = _scales(sources, tried, start, settings)
+    return _curve(sources, scales, start, settings, alerts_per_day)
+
+
+def _keep(rows: Rows, member: Member, held_out: HeldOut, start: Levels) -> HeldExcess:
+    parts = ((part.times_ns, part.excess) for part in follow(rows, member, held_out, start))
+    path = held_out.path.with_suffix(".excess")
+    return keep_excess(member.source, held_out.n_records, parts, path)
+
+
+def _rest(sources: list[HeldExcess], start: Levels) -> tuple[Floats, float]:
+    """Set where each source's sustained rests; return a sample of sustained and its highest."""
+    cap = float(np.quantile(np.concatenate([one.sample for one in sources]), _CAP_QUANTILE))
+    sample, highest = [np.zeros(0)], -np.inf
+    for one in sources:
+        one.usual = float(np.minimum(one.sample, cap).mean()) if len(one.sample) else 0.0
+        last_ns, value = -1, one.usual
+        every = max(1, one.n_records // len(one.sample)) if len(one.sample) else 1
+        for times_ns, excess in one.chunks():
+            found, _, last_ns, value = sustain(
+                times_ns, excess, last_ns, value, one.usual, start.tau_s, start.step_s, np.inf
+            )
+            judged = found[~np.isnan(excess)]
+            sample.append(judged[::every])
+            highest = max(highest, float(judged.max(initial=-np.inf)))
+    return np.concatenate(sample), highest
+
+
+def _tried(sample: Floats, highest: float) -> Floats:
+    """Return levels from the upper tenth of what was seen to just over the highest.
+
+    Steps grow upwards, because a few far outliers must not take all the places.
+    """
+    low = float(np.quantile(sample, _LOWEST_QUANTILE))
+    span = max(highest - low, 1e-6) * (1.0 + 1e-9)
+    bend = max(span / max(float(np.quantile(sample, 0.999)) - low, 1e-6), 1.0 + 1e-6)
+    steps = (bend ** np.linspace(0.0, 1.0, N_TRIED) - 1.0) / (bend - 1.0)
+    return np.asarray(low + span * steps)
+
+
+def _scales(
+    sources: list[HeldExcess], tried: tuple[Floats, Floats], start: Levels, settings: AlertSettings
+) -> tuple[Scale, Scale]:
+    """Return how often each kind of level is passed by itself: record, sustained."""
+    usual = max(one.usual for one in sources)
+    n = N_TRIED
+    never = np.full(n, np.inf)
+    caps = cap_of(tried[1], usual, start.tau_s, start.step_s)
+    pairs = Pairs(
+        np.concatenate([tried[0], never]),
+        np.concatenate([never, tried[1]]),
+        np.concatenate([never, caps]),
+    )
+    sweep = Sweep(pairs, start, settings)
+    episodes = np.zeros(len(pairs), dtype=np.int64)
+    for marks in _marks(sweep, sources):
+        episodes += np.bincount(marks.pair[marks.raised], minlength=len(pairs))
+    at = [threshold_of(episodes[k * n : (k + 1) * n]) for k in range(2)]
+    peaks = _peaks(sources, pairs, [at[0], n + at[1]], start, settings)
+    record, sustained = (
+        scale_of(tried[k], episodes[k * n : (k + 1) * n], peaks[k], float(tried[k][at[k]]))
+        for k in range(2)
+    )
+    return record, sustained
+
+
+def _peaks(
+    sources: list[HeldExcess], pairs: Pairs, at: list[int], start: Levels, settings: AlertSettings
+) -> list[Floats]:
+    """Return the peak of every episode of some of the pairs."""
+    sweep = Sweep(Pairs(pairs.record[at], pairs.sustained[at], pairs.cap[at]), start, settings)
+    found: list[list[Floats]] = [[] for _ in at]
+    for marks in _marks(sweep, sources):
+        for k in range(len(at)):
+            found[k].append(marks.peak[~marks.raised & (marks.pair == k)])
+    pair, peak = sweep.still_open()
+    return [np.concatenate([*found[k], peak[pair == k]]) for k in range(len(at))]
+
+
+def _marks(sweep: Sweep, sources: list[HeldExcess]) -> Iterator[Marks]:
+    for one in sources:
+        for times_ns, excess in one.chunks():
+            yield sweep.add(one.source, one.usual, times_ns, excess)
+
+
+def _curve(
+    sources: list[HeldExcess],
+    scales: tuple[Scale, Scale],
+    start: Levels,
+    settings: AlertSettings,
+    alerts_per_day: float,
+) -> Curve:
+    usual = max(one.usual for one in sources)
+    source_days = sum(one.n_judged for one in sources) * start.step_s * 1e9 / DAY_NS
+    allowed = alerts_per_day * source_days / len(sources)
+    loosest = max(LOOSEST * allowed, 10.0 * LEAST_COUNT)
+    alone = np.geomspace(LEAST_COUNT, loosest, N_PAIRS)
+    record, sustained = (
+        # Where counting takes over from the tail a stricter level must not become lower.
+        np.minimum.accumulate(np.array([scale.level(float(c)) for c in alone]))
+        for scale in scales
+    )
+    # Where sustained passes, some record has passed as much: beyond the record level a
+    # level on sustained says nothing.
+    sustained = np.minimum(sustained, record)
+    pairs = Pairs(record, sustained, cap_of(sustained, usual, start.tau_s, start.step_s))
+    sweep = Sweep(pairs, start, settings)
+    by_day = _by_day(sweep, sources)
+    seen = by_day.sum(axis=1)
+    curve = Curve(
+        record=record,
+        sustained=sustained,
+        alone=alone,
+        seen=seen,
+        expected=_expected(alone, seen),
+        time_share=sweep.n_over / max(sweep.n_judged, 1),
+        by_day=by_day,
+        source_days=source_days,
+        n_sources=len(sources),
+        scales=scales,
+        allowed=allowed,
+        chosen=0,
+    )
+    return replace(curve, chosen=curve.place(allowed))
+
+
+def _by_day(sweep: Sweep, sources: list[HeldExcess]) -> Ints:
+    """Return episodes of each pair by day of the fleet, (n_pairs, n_days)."""
+    found: dict[int, Ints] = {}
+    for one in sources:
+        for times_ns, excess in one.chunks():
+            marks = sweep.add(one.source, one.usual, times_ns, excess)
+            for day in np.unique(times_ns[~np.isnan(excess)] // DAY_NS).tolist():
+                found.setdefault(day, np.zeros(len(sweep.pairs), dtype=np.int64))
+            days = times_ns[marks.row[marks.raised]] // DAY_NS
+            for day in np.unique(days).tolist():
+                pairs = marks.pair[marks.raised][days == day]
+                found[day] += np.bincount(pairs, minlength=len(sweep.pairs))
+    return np.stack([found[day] for day in sorted(found)], axis=1)
+
+
+def _expected(alone: Floats, seen: Ints) -> Floats:
+    """Return the episodes to expect of each pair in as long a time as was held out.
+
+    Where few are seen, both kinds of level share alerts as they do at the strictest pair
+    that saw enough to tell.
+    """
+    enough = seen >= ENOUGH_COUNTED
+    if not enough.any():
+        return np.asarray(np.maximum(2.0 * alone, seen))
+    first = int(np.argmax(enough))
+    ratio = min(max(float(seen[first] / alone[first]), 1.0), 2.0)
+    return np.asarray(np.where(enough, seen, np.maximum(ratio * alone, seen)))

@@ -1,0 +1,65 @@
+"""What moves more slowly than the history is long is named, what repeats daily is not."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from scoring.channels import ChannelTable, parse_channels
+from tests.spools import spool_of
+from training.rows import Rows
+from training.season import SLOW_SHARE, slow_channels, slow_share
+
+N = 20 * 1440
+MINUTES = np.arange(N)
+DAILY = 20.0 + 8.0 * np.sin(2 * np.pi * MINUTES / 1440)
+SLOW = 12.0 + 3.0 * np.sin(2 * np.pi * MINUTES / (25 * 1440))
+STEP = (MINUTES > N // 2).astype(float)
+
+
+def a_table() -> ChannelTable:
+    channels = [
+        {"name": "daily", "unit": "kW"},
+        {"name": "slow", "unit": "degC"},
+        {"name": "mode", "kind": "state", "words": ["a", "b"]},
+        {"name": "silent"},
+    ]
+    return parse_channels({"step_s": 60.0, "channel": channels}, "test")
+
+
+def records(seed: int) -> np.ndarray[tuple[int, int], np.dtype[np.float64]]:
+    rng = np.random.default_rng(seed)
+    noisy = 0.5 * rng.standard_normal((N, 2))
+    return np.column_stack([DAILY + noisy[:, 0], SLOW + noisy[:, 1], STEP, np.full(N, np.nan)])
+
+
+def test_the_slow_channel_is_named_with_what_was_seen(tmp_path: Path) -> None:
+    with spool_of({"a": records(1), "b": records(2)}, folder=tmp_path) as spool:
+        found = slow_channels(Rows(spool, a_table(), spool.sources, 60.0))
+    # The state changed once and the silent channel never came: neither is a season.
+    assert [(one.name, one.unit) for one in found] == [("slow", "degC")]
+    assert found[0].slow_share > 0.8
+    assert found[0].low == pytest.approx(SLOW.min(), abs=3.0)
+    assert found[0].high == pytest.approx(SLOW.max(), abs=3.0)
+
+
+def test_a_channel_slow_at_one_source_of_three_is_no_season(tmp_path: Path) -> None:
+    steady = records(1)
+    steady[:, 1] = steady[:, 0]
+    with spool_of({"a": records(1), "b": steady, "c": steady}, folder=tmp_path) as spool:
+        assert slow_channels(Rows(spool, a_table(), spool.sources, 60.0)) == ()
+
+
+def test_the_share_is_that_of_the_parts_means() -> None:
+    low, high = np.tile([0.0, 2.0], 50), np.tile([10.0, 12.0], 50)
+    # Means 1 and 11: 25 between, 1 within.
+    assert slow_share([low, high, low, high]) == pytest.approx(25 / 26)
+    assert slow_share([low, low, low]) == 0.0
+    assert slow_share(np.array_split(DAILY, 10)) < SLOW_SHARE / 10
+
+
+def test_too_little_to_tell_is_no_season() -> None:
+    assert slow_share([np.zeros(5), np.ones(5), np.ones(5)]) == 0.0
+    assert slow_share([np.full(100, 3.0)] * 10) == 0.0
