@@ -22,11 +22,11 @@ def test_a_count_to_come_lies_inside_as_often_as_it_says(size: int) -> None:
 
 
 def test_clusters_widen_both_intervals() -> None:
-    for single, clustered in (
-        (rate_limits(30.0, 10.0), rate_limits(30.0, 10.0, 5.0)),
-        (count_to_come(30.0, 10.0, 1.0), count_to_come(30.0, 10.0, 1.0, 5.0)),
+    for middle, single, clustered in (
+        (3.0, rate_limits(30.0, 10.0), rate_limits(30.0, 10.0, 5.0)),
+        (30.0, count_to_come(30.0, 10.0, 10.0), count_to_come(30.0, 10.0, 10.0, 5.0)),
     ):
-        assert clustered[0] < single[0] < 3.0 < single[1] < clustered[1]
+        assert clustered[0] < single[0] < middle < single[1] < clustered[1]
 
 
 def test_without_time_or_trials_nothing_is_known() -> None:
