@@ -7,7 +7,7 @@ calls is a few numbers a pair, so that streams of any length need no more memory
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numba import njit
@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from scoring import alert_kernel as kernel
 from scoring.alert_kernel import CLEARED, HELD, OPEN, RAISED, RECORD, follow_levels
+from scoring.alert_rules import level_knobs
 from scoring.alert_settings import AlertSettings
 from scoring.model import Levels
 
@@ -115,19 +116,9 @@ class Sweep:
 
     def _knobs(self, usual: float) -> Floats:
         """Return what the alert machine wants to know of each pair, (n_pairs, n_knobs)."""
-        levels, settings = self._levels, self._settings
-        sustained = self.pairs.sustained
-        kept = 1.0 - settings.deadband
-        knobs = np.zeros((len(self.pairs), kernel.N_KNOBS))
-        knobs[:, kernel.RECORD] = self.pairs.record
-        knobs[:, kernel.RECORD_OFF] = kept * self.pairs.record
-        knobs[:, kernel.SUSTAINED] = sustained
-        knobs[:, kernel.SUSTAINED_OFF] = usual + kept * (sustained - usual)
-        knobs[:, kernel.HALF] = usual + 0.5 * (sustained - usual)
-        knobs[:, kernel.RUN_LENGTH] = settings.record_run
-        knobs[:, kernel.ON_S] = settings.sustained_on_steps * levels.step_s
-        knobs[:, kernel.OFF_S] = settings.off_delay_steps * levels.step_s
-        return knobs
+        pairs = zip(self.pairs.record, self.pairs.sustained, strict=True)
+        levels = (replace(self._levels, record=r, sustained=s) for r, s in pairs)
+        return np.stack([level_knobs(one, self._settings, usual) for one in levels])
 
     def _part(self, name: str, times_ns: Ints, excess: Floats, start: int) -> tuple[Ints, Floats]:
         source, levels = self._sources[name], self._levels
