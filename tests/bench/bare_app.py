@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import socket
 import sys
 from typing import Any
 
@@ -46,7 +47,10 @@ async def many(request: Request) -> Response:
 
 
 if __name__ == "__main__":
-    uvicorn.run(
-        app, host="127.0.0.1", port=int(sys.argv[1]), loop="uvloop", http="httptools",
-        access_log=False, log_level="warning",
-    )  # fmt: skip
+    listener = socket.create_server(("127.0.0.1", 0))
+    sys.stdout.write(f"http://127.0.0.1:{listener.getsockname()[1]}\n")
+    sys.stdout.flush()
+    config = uvicorn.Config(
+        app, loop="uvloop", http="httptools", access_log=False, log_level="warning"
+    )
+    uvicorn.Server(config).run(sockets=[listener])
