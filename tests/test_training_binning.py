@@ -41,7 +41,7 @@ def a_sample(kind: str, n: int, seed: int) -> Floats:
     if kind == "nearly constant":
         return np.where(rng.random(n) < 0.01, 7.5 + 0.1 * np.abs(x), 7.5)
     if kind == "on and off":
-        return (rng.random(n) < 0.3) * 1.0
+        return (rng.random(n) < 0.3).astype(np.float64)
     if kind == "far from nought":
         return np.asarray(1e9 + 0.01 * x)
     if kind == "tiny":
