@@ -1,0 +1,117 @@
+"""The recipes of the README run as they are printed."""
+
+from __future__ import annotations
+
+import contextlib
+import json
+import re
+import signal
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import httpx
+import pytest
+from click.testing import CliRunner
+
+import oddbranch
+from tests.conftest import ROOT, need_program
+from tests.service_http import Server, record, serving
+
+README = (ROOT / "README.md").read_text(encoding="utf-8")
+
+
+def recipe(name: str) -> str:
+    """Return the block after a recipe's mark."""
+    found = re.search(rf"<!-- recipe: {name} -->\n```\w+\n(.*?)```", README, re.DOTALL)
+    assert found, f"the README has no recipe {name}"
+    return found.group(1)
+
+
+def n_stored(server: Server) -> int:
+    answer = httpx.get(f"{server.url}/sources").json()["items"]
+    return sum(item["records"] for item in answer)
+
+
+def test_the_curl_recipe_posts_a_record(tmp_path: Path) -> None:
+    need_program("curl")
+    with serving(tmp_path) as server:
+        text = recipe("curl").replace("http://127.0.0.1:8321", server.url)
+        done = subprocess.run(["sh", "-c", text], capture_output=True, check=True)
+        answer = json.loads(done.stdout)
+        assert answer["source"] == "mill-lane-2"
+        assert answer["suspect"]["reading"] == 241.3
+        assert n_stored(server) == 1
+
+
+def test_the_httpx_recipe_posts_an_array(tmp_path: Path) -> None:
+    with serving(tmp_path) as server:
+        text = recipe("httpx").replace("http://127.0.0.1:8321", server.url)
+        done = subprocess.run(
+            [sys.executable, "-c", text], capture_output=True, text=True, check=True
+        )
+        assert done.stdout == "24.13\n" * 5
+        assert n_stored(server) == 5
+
+
+def test_the_forwarder_is_twenty_lines_and_keeps_its_place(tmp_path: Path) -> None:
+    text = recipe("forwarder")
+    assert len([line for line in text.splitlines() if line.strip()]) <= 24
+    lines = tmp_path / "records.ndjson"
+    items = [json.dumps(record(i / 6)) for i in range(1200)]
+    items[700] = "nonsense"
+    lines.write_text("\n".join(items[:900]) + "\n", encoding="utf-8")
+    server = Server(tmp_path)
+    program = [sys.executable, "-c", text, str(lines), f"{server.url}/records"]
+    first = subprocess.Popen(program, stderr=subprocess.DEVNULL)
+    try:
+        assert reached(server, 899)
+        server.kill()
+        with lines.open("a", encoding="utf-8") as file:
+            file.write("\n".join(items[900:1100]) + "\n" + items[1100][:20])
+        time.sleep(0.5)
+        # The same port again, as after a restart of the service.
+        server = Server(tmp_path, f"server.port={server.port}")
+        assert reached(server, 1099)
+    finally:
+        end(first)
+    assert (tmp_path / "records.place").read_text() == str(len("\n".join(items[:1100])) + 1)
+    with lines.open("a", encoding="utf-8") as file:
+        file.write(items[1100][20:] + "\n" + "\n".join(items[1101:]) + "\n")
+    second = subprocess.Popen(program, stderr=subprocess.PIPE)
+    try:
+        assert reached(server, 1199)
+    finally:
+        end(second)
+        server.stop()
+
+
+def end(process: subprocess.Popen[bytes]) -> None:
+    process.send_signal(signal.SIGKILL)
+    process.wait(10)
+    if process.stderr is not None:
+        process.stderr.close()
+
+
+def reached(server: Server, n_records: int) -> bool:
+    end_s = time.monotonic() + 30
+    while time.monotonic() < end_s:
+        with contextlib.suppress(httpx.TransportError):
+            if n_stored(server) == n_records:
+                return True
+        time.sleep(0.05)
+    return False
+
+
+@pytest.mark.parametrize("role", ["send", "read", "operate"])
+def test_the_readme_names_every_role(role: str) -> None:
+    assert f"`{role}` may" in README
+
+
+def test_the_token_recipe_makes_a_token(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.chdir(tmp_path)
+    words = recipe("token").split()
+    assert words[0] == "oddbranch"
+    output = CliRunner().invoke(oddbranch.cli, words[1:], catch_exceptions=False).output
+    assert "shown only now" in output
