@@ -90,6 +90,16 @@ def test_other_budgets_cost_what_the_curve_says() -> None:
         assert one.expected <= one.alerts_per_day
 
 
+def test_the_curve_is_kept_with_the_chosen_pair_among_its_points() -> None:
+    promise = a_promise()
+    pairs = [(point.record, point.sustained) for point in promise.curve]
+    assert (promise.record, promise.sustained) in pairs
+    assert pairs == sorted(pairs, reverse=True)
+    at = pairs.index((promise.record, promise.sustained))
+    assert promise.curve[at].rate == promise.rate
+    assert 30 <= len(pairs) <= 50
+
+
 def test_a_promise_survives_the_model_directory() -> None:
     promise = a_promise()
     text = json.dumps(promise.as_data(), allow_nan=False)

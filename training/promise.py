@@ -49,6 +49,15 @@ class Budget:
 
 
 @dataclass(frozen=True, slots=True)
+class CurvePoint:
+    """A pair of levels, nats, and the episodes a source-day that pass it."""
+
+    record: float
+    sustained: float
+    rate: float
+
+
+@dataclass(frozen=True, slots=True)
 class Promise:
     """What may be expected at the model's levels.
 
@@ -63,6 +72,7 @@ class Promise:
     held_back: the time in alert, not the budget, decides.
     unseen_nats: how much more surprising a held-out record is than a fitted one.
     slow: channels that do not repeat within the history. budgets: others, strict to loose.
+    curve: episodes a source-day over pairs of levels, strict to loose.
     """
 
     alerts_per_day: float
@@ -85,6 +95,7 @@ class Promise:
     unseen_nats: float
     slow: tuple[SlowChannel, ...]
     budgets: tuple[Budget, ...]
+    curve: tuple[CurvePoint, ...]
 
     def per_day(self, n_sources: int | None = None) -> float:
         """Return the alerts to expect a day over a fleet, the learned one unless said."""
@@ -106,7 +117,8 @@ class Promise:
         """Return the promise that `as_data` gave."""
         budgets = tuple(Budget(**one) for one in data["budgets"])
         slow = tuple(SlowChannel(**one) for one in data["slow"])
-        return cls(**{**data, "budgets": budgets, "slow": slow})
+        curve = tuple(CurvePoint(**one) for one in data["curve"])
+        return cls(**{**data, "budgets": budgets, "slow": slow, "curve": curve})
 
 
 def promise_of(
@@ -145,7 +157,23 @@ def promise_of(
         unseen_nats=unseen_nats,
         slow=tuple(slow),
         budgets=tuple(_budget(curve, alerts_per_day * share) for share in OTHER_BUDGETS),
+        curve=_points(curve),
     )
+
+
+def _points(curve: Curve) -> tuple[CurvePoint, ...]:
+    """Return every other pair, the chosen one among them."""
+    places = range(curve.chosen % 2, len(curve.record), 2)
+    found = [
+        CurvePoint(
+            float(curve.record[k]),
+            float(curve.sustained[k]),
+            float(curve.expected[k]) / curve.source_days,
+        )
+        for k in places
+    ]
+    # Where few episodes were seen neighbouring pairs may be the same.
+    return tuple(dict.fromkeys(found))
 
 
 def _held_back(curve: Curve, k: int) -> bool:
