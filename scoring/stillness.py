@@ -39,6 +39,7 @@ class StillnessLimits:
         too little. The last column is of the source: nothing at all moved.
     away_s: (n_instruments + 1,) seconds without a usable reading; infinite for a channel
         that hardly ever comes. The last is of the source: seconds between two records.
+    present: (n_instruments,) share of records that have the reading.
     neighbours: see `neighbour_lists`.
     """
 
@@ -46,6 +47,7 @@ class StillnessLimits:
     still_s: Floats
     moving_s: Floats
     away_s: Floats
+    present: Floats
     neighbours: Ints
 
 
@@ -212,4 +214,5 @@ def widest(limits: Sequence[StillnessLimits], neighbours: Ints) -> StillnessLimi
         still[rows] = np.maximum(still[rows], one.still_s)
         moving[rows] = np.maximum(moving[rows], one.moving_s)
     away = np.max([one.away_s for one in limits], axis=0)
-    return StillnessLimits(codes, still, moving, away, neighbours)
+    present = np.min([one.present for one in limits], axis=0)
+    return StillnessLimits(codes, still, moving, away, present, neighbours)

@@ -33,6 +33,14 @@ SCORING_ORDER = (
     "artefact",
     "alert_settings",
     "alert_kernel",
+    "alert_rules",
+    "alerts",
+    "alert_standing",
+    "alert_turn",
+    "sentences",
+    "suspicion",
+    "attend",
+    "episodes",
 )
 
 # What each room may import beside the standard library.

@@ -182,12 +182,13 @@ def _limits(found: _Found, motion: Motion, neighbours: Ints) -> StillnessLimits:
     longest = np.where(unknown, np.inf, np.maximum(ended, cut))
     longest[:, :, motion.states[:, 0]] = np.inf
     away_s = found.away_s.copy()
-    rare = found.n_present < LEAST_PRESENT * max(int(found.n_records[0]), 1)
-    away_s[:-1][rare] = np.inf
+    present = found.n_present / max(int(found.n_records[0]), 1)
+    away_s[:-1][present < LEAST_PRESENT] = np.inf
     return StillnessLimits(
         codes=found.codes[kept],
         still_s=longest[:, 0, :],
         moving_s=longest[:, 1, :],
         away_s=away_s,
+        present=present,
         neighbours=neighbours,
     )
