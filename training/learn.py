@@ -24,6 +24,7 @@ from training.promise_words import promise_lines
 from training.rows import DEFAULT_STEP_S, Rows
 from training.season import slow_channels, unseen_nats
 from training.settings import LearnSettings, load_learn_settings
+from training.stillness import with_stillness
 from training.treetext import tree_lines
 
 
@@ -80,6 +81,7 @@ def learn_model(
     members = {s: replace(m, about=_about(rows, learned[s])) for s, m in members.items()}
     rests = [m.usual.sustained for m in members.values()] or [0.0]
     fleet = replace(fleet, usual=replace(fleet.usual, sustained=sum(rests) / len(rests)), source="")
+    members, fleet = with_stillness(rows, members, fleet)
     table = table.model_copy(update={"step_s": step_s})
     about = {
         "n_records": rows.n_records,

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
+from dataclasses import replace
 from typing import NamedTuple
 
 import numpy as np
@@ -10,6 +11,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from scoring.channels import ChannelTable
+from scoring.model import Member
 from scoring.stillness import (
     UNREAD,
     Motion,
@@ -19,7 +21,9 @@ from scoring.stillness import (
     neighbour_lists,
     passed_s,
     place_of,
+    widest,
 )
+from training.rows import Rows
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -168,6 +172,30 @@ def learn_stillness(
         _pass_over(times_ns, own, step_s, motion.rows, motion.states, neighbours, clocks, found)
     _cut_short(clocks, found)
     return _limits(found, motion, neighbours)
+
+
+def with_stillness(
+    rows: Rows, members: dict[str, Member], fleet: Member
+) -> tuple[dict[str, Member], Member]:
+    """Return each source's member, and the fleet's, with the limits of its records.
+
+    The fleet's limits hold for every source: what is still for hours at one of them may
+    be so at a source never seen.
+    """
+    found = {}
+    for source, member in members.items():
+        chunks = (
+            (chunk.times_ns[chunk.kept], chunk.values[chunk.kept])
+            for chunk in rows.of(source).chunks()
+        )
+        found[source] = learn_stillness(chunks, rows.table, _edges(member), rows.step_s)
+    members = {s: replace(member, stillness=found[s]) for s, member in members.items()}
+    limits = widest(list(found.values()), neighbour_lists(rows.table, _edges(fleet)))
+    return members, replace(fleet, stillness=limits)
+
+
+def _edges(member: Member) -> list[tuple[int, int]]:
+    return [(int(a), int(b)) for part in member.parts for a, b in part.tree.edges.tolist()]
 
 
 def _limits(found: _Found, motion: Motion, neighbours: Ints) -> StillnessLimits:
