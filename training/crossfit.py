@@ -1,8 +1,8 @@
 """Held-out scores: every block of time scored by bins and tables that never saw it.
 
-From them come what is usual for a source, and the excess and sustained values from
-which levels are set. Scores go to a file as they are made, so memory does not grow with
-the history.
+From them come what is usual for a source, the excess and sustained values from which
+levels are set, and what a report shows of them. Scores go to a file as they are made, so
+memory does not grow with the history.
 """
 
 from __future__ import annotations
@@ -21,9 +21,12 @@ from scoring.derived import groups
 from scoring.excess import ENOUGH_TRUE_ROWS, ExcessScale
 from scoring.model import Levels, Member, Usual
 from scoring.sustained import sustain
-from training.blocks import N_FOLDS
+from training.blocks import N_FOLDS, Blocks
+from training.coverage import Coverage, CoverageSample
 from training.fit import Density
-from training.rows import Rows
+from training.histograms import Histogram, Histograms
+from training.rows import Chunk, Rows
+from training.worst import Worst, WorstRecord
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -40,6 +43,7 @@ class HeldOut:
 
     density: mean held-out surprise in nats a record. n_scored: records clear of their
     block's guard. by_block: (n_blocks, 2) sum of surprise and number of records.
+    histograms: one a node. coverage: of expected intervals. worst: the most surprising.
     """
 
     path: Path
@@ -48,6 +52,10 @@ class HeldOut:
     density: float
     usual: Usual
     by_block: Floats
+    blocks: Blocks
+    histograms: list[Histogram]
+    coverage: Coverage
+    worst: list[WorstRecord]
 
     def surprise(self, start: int, stop: int) -> Floats:
         """Return held-out surprise of records start to stop, NaN within a guard."""
@@ -66,9 +74,8 @@ def hold_out(
     """
     with tempfile.NamedTemporaryFile(dir=folder, delete=False) as file:
         path = Path(file.name)
-        sampled = _Sampled(rows.of(source).n_records)
-        blocks = rows.blocks(source)
-        by_block, n_records = np.zeros((blocks.n_blocks, 2)), 0
+        seen = _Seen(rows, source, final)
+        n_records = 0
         for chunk in rows.of(source).chunks():
             surprise = np.full(len(chunk.times_ns), np.nan)
             own = np.full((len(surprise), len(rows.table.instruments)), np.nan)
@@ -77,23 +84,59 @@ def hold_out(
                 if use.any():
                     surprise[use], own[use] = score_values(members[fold], rows, chunk.values[use])
             file.write(surprise.tobytes())
-            there = ~np.isnan(surprise)
-            number = blocks.number(chunk.times_ns[there])
-            n_blocks = blocks.n_blocks
-            by_block[:, 0] += np.bincount(number, weights=surprise[there], minlength=n_blocks)
-            by_block[:, 1] += np.bincount(number, minlength=n_blocks)
             n_records += len(surprise)
-            bins = final.bin_table.rows(chunk.values[there])
-            sampled.add(surprise[there], own[there], bins)
-    total, n_scored = by_block.sum(axis=0)
-    density = float(total / max(n_scored, 1.0))
-    return HeldOut(path, n_records, int(n_scored), density, sampled.usual(), by_block)
+            seen.add(chunk, surprise, own)
+    return seen.held_out(path, n_records, members)
 
 
 def score_values(member: Member, rows: Rows, values: Floats) -> tuple[Floats, Floats]:
     """Return surprise (n,) and each instrument's own (n, n_instruments) of node values."""
     start, nodes = groups(rows.table)
     return removal_of(member, member.bin_table.rows(values), start, nodes)
+
+
+class _Seen:
+    """What is kept of one source's held-out records as they stream by."""
+
+    def __init__(self, rows: Rows, source: str, final: Member) -> None:
+        n_records = rows.of(source).n_records
+        self._final = final
+        self._blocks = rows.blocks(source)
+        self._by_block = np.zeros((self._blocks.n_blocks, 2))
+        self._sampled = _Sampled(n_records)
+        self._histograms = Histograms(final, n_records)
+        self._coverage = CoverageSample(rows.table, n_records)
+        self._worst = Worst(rows.table, self._blocks.n_blocks)
+
+    def add(self, chunk: Chunk, surprise: Floats, own: Floats) -> None:
+        """Take in a chunk. surprise: (n,) NaN = within a guard; own: (n, n_instruments)."""
+        there = ~np.isnan(surprise)
+        times_ns, fold, values = chunk.times_ns[there], chunk.fold[there], chunk.values[there]
+        surprise, own = surprise[there], own[there]
+        number, n_blocks = self._blocks.number(times_ns), self._blocks.n_blocks
+        self._by_block[:, 0] += np.bincount(number, weights=surprise, minlength=n_blocks)
+        self._by_block[:, 1] += np.bincount(number, minlength=n_blocks)
+        self._sampled.add(surprise, own, self._final.bin_table.rows(values))
+        self._histograms.add(values)
+        self._coverage.add(times_ns, fold, values)
+        self._worst.add(number, times_ns, fold, values, (surprise, own))
+
+    def held_out(self, path: Path, n_records: int, members: list[Member]) -> HeldOut:
+        """Return what was found; path, n_records: of the file of scores."""
+        total, n_scored = self._by_block.sum(axis=0)
+        usual = self._sampled.usual()
+        return HeldOut(
+            path,
+            n_records,
+            int(n_scored),
+            float(total / max(n_scored, 1.0)),
+            usual,
+            self._by_block,
+            self._blocks,
+            self._histograms.found(),
+            self._coverage.coverage(members),
+            self._worst.records(members, self._final, usual),
+        )
 
 
 class _Sampled:

@@ -89,12 +89,12 @@ class Rows:
         for chunk in self.chunks():
             use = chunk.kept & np.isin(chunk.fold, folds)
             if share < 1:
-                use &= _hashed(chunk.times_ns) < share
+                use &= hashed(chunk.times_ns) < share
             found.append(chunk.values[use])
         return np.concatenate(found)
 
 
-def _hashed(times_ns: Ints) -> Floats:
+def hashed(times_ns: Ints) -> Floats:
     """Return numbers in 0..1 that depend on nothing but the time (SplitMix64's mixer)."""
     x = times_ns.view(np.uint64) + np.uint64(0x9E3779B97F4A7C15)
     x = (x ^ (x >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
