@@ -9,14 +9,14 @@ from __future__ import annotations
 
 import json
 import struct
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from functools import cached_property
 from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
-from scoring.alert_kernel import LAST, N_FLOATS
+from scoring.alert_kernel import LAST, N_FLOATS, new_floats, new_ints
 from scoring.alerts import Alert, Suspect
 from scoring.errors import OddbranchError
 
@@ -131,6 +131,13 @@ class AlertStanding:
     def case(self, kind: str) -> Case | None:
         """Return the open case of a kind, if there is one."""
         return next((case for case in self.cases if case.alert.kind == kind), None)
+
+    def started_anew(self) -> AlertStanding:
+        """Return it with its clocks as for a source just met, its last record's time kept."""
+        n = self.floats.shape[1] - 1
+        ints = new_ints(n)
+        ints[LAST] = self.ints[LAST]
+        return replace(self, ints=ints, floats=new_floats(n))
 
     def __eq__(self, other: object) -> bool:
         """Two standings are equal if their bytes are."""

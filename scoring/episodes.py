@@ -114,7 +114,7 @@ class Episodes:
             # Put back just now: it gets the usual time before it is missed.
             standing = replace(standing, heard_ns=max(standing.heard_ns, now_ns))
         elif turn.is_out_of_service(now_ns):
-            standing = self._left_alone(standing)
+            standing = standing.started_anew()
             turn.clear_all(now_ns, WENT_OUT_OF_SERVICE)
         elif is_silent and SILENT not in turn.cases:
             turn.open(SILENT, now_ns, Case(self._silent(source, standing, now_ns), -1))
@@ -123,13 +123,6 @@ class Episodes:
         }:
             return standing, ()
         return replace(standing, **turn.left()), tuple(turn.events)
-
-    def _left_alone(self, standing: AlertStanding) -> AlertStanding:
-        """Return a standing whose clocks start anew after the time out of service."""
-        n = standing.floats.shape[1] - 1
-        ints = kernel.new_ints(n)
-        ints[kernel.LAST] = standing.ints[kernel.LAST]
-        return replace(standing, ints=ints, floats=kernel.new_floats(n))
 
     def _silent(self, source: str, standing: AlertStanding, now_ns: int) -> Alert:
         last_ns = standing.last_ns if standing.last_ns >= 0 else standing.heard_ns

@@ -41,6 +41,8 @@ SCORING_ORDER = (
     "suspicion",
     "attend",
     "episodes",
+    "alert_actions",
+    "flood",
 )
 
 # What each room may import beside the standard library.
