@@ -10,7 +10,7 @@ import pytest
 from scoring.channels import ChannelTable, parse_channels
 from tests.spools import spool_of
 from training.rows import Rows
-from training.season import SLOW_SHARE, slow_channels, slow_share
+from training.season import slow_channels
 
 N = 20 * 1440
 MINUTES = np.arange(N)
@@ -52,14 +52,20 @@ def test_a_channel_slow_at_one_source_of_three_is_no_season(tmp_path: Path) -> N
         assert slow_channels(Rows(spool, a_table(), spool.sources, 60.0)) == ()
 
 
-def test_the_share_is_that_of_the_parts_means() -> None:
-    low, high = np.tile([0.0, 2.0], 50), np.tile([10.0, 12.0], 50)
-    # Means 1 and 11: 25 between, 1 within.
-    assert slow_share([low, high, low, high]) == pytest.approx(25 / 26)
-    assert slow_share([low, low, low]) == 0.0
-    assert slow_share(np.array_split(DAILY, 10)) < SLOW_SHARE / 10
+def test_the_share_is_that_of_the_parts_means(tmp_path: Path) -> None:
+    table = parse_channels({"step_s": 60.0, "channel": [{"name": "x"}]}, "test")
+    # Tenths with means 1 and 11 in turn: 25 between, 1 within.
+    values = np.concatenate([np.tile([0.0, 2.0], 50) + 10.0 * (k % 2) for k in range(10)])
+    with spool_of({"a": values[:, None]}, folder=tmp_path) as spool:
+        found = slow_channels(Rows(spool, table, spool.sources, 60.0))
+    assert found[0].slow_share == pytest.approx(25 / 26)
+    assert (found[0].low, found[0].high) == (0.0, 12.0)
 
 
-def test_too_little_to_tell_is_no_season() -> None:
-    assert slow_share([np.zeros(5), np.ones(5), np.ones(5)]) == 0.0
-    assert slow_share([np.full(100, 3.0)] * 10) == 0.0
+@pytest.mark.parametrize("values", [np.arange(50.0), np.full(2000, 3.0), np.full(2000, np.nan)])
+def test_too_little_to_tell_is_no_season(
+    tmp_path: Path, values: np.ndarray[tuple[int], np.dtype[np.float64]]
+) -> None:
+    table = parse_channels({"step_s": 60.0, "channel": [{"name": "x"}]}, "test")
+    with spool_of({"a": values[:, None]}, folder=tmp_path) as spool:
+        assert slow_channels(Rows(spool, table, spool.sources, 60.0)) == ()

@@ -84,7 +84,7 @@ def set_levels(
 ) -> tuple[Levels, dict[str, Member], Curve | None]:
     """Return levels that keep to the budget, members with their usual sustained, the curve.
 
-    alerts_per_day: over all of these sources together. Files of 16 bytes a record are
+    alerts_per_day: over all of these sources together. Files of 24 bytes a record are
     written beside the held-out scores. Without any held-out record the levels stay as they
     start, and there is no curve.
     """

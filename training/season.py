@@ -7,7 +7,7 @@ nothing of the history was.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Final
 
@@ -16,7 +16,6 @@ from numpy.typing import NDArray
 
 from scoring.density import surprise_of
 from scoring.model import Member
-from training.blocks import N_FOLDS
 from training.crossfit import HeldOut
 from training.rows import Rows
 
@@ -28,6 +27,8 @@ _N_PARTS: Final = 10
 SLOW_SHARE: Final = 0.10
 # Records of a tenth that must be there to speak of its mean.
 _LEAST_ROWS: Final = 30
+# So many tenths must hold readings.
+_LEAST_PARTS: Final = 4
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,37 +49,71 @@ class SlowChannel:
 def slow_channels(rows: Rows) -> tuple[SlowChannel, ...]:
     """Return the channels that are slow at the middle one of the sources, slowest first."""
     channels = rows.table.instruments
-    shares = np.zeros((len(rows.sources), len(channels)))
-    low, high = np.full(len(channels), np.inf), np.full(len(channels), -np.inf)
-    for s, source in enumerate(rows.sources):
-        sample = rows.of(source).sample(tuple(range(N_FOLDS)))
-        for k, channel in enumerate(channels):
-            readings = sample[:, k]
-            if channel.is_state or not (~np.isnan(readings)).any():
-                continue
-            shares[s, k] = slow_share(np.array_split(readings, _N_PARTS))
-            low[k] = min(low[k], float(np.nanmin(readings)))
-            high[k] = max(high[k], float(np.nanmax(readings)))
-    middle = np.median(shares, axis=0) if len(shares) else np.zeros(len(channels))
+    found = [_Parts.of(rows, source) for source in rows.sources]
+    if not found:
+        return ()
+    middle = np.median([parts.slow_share() for parts in found], axis=0)
+    low = np.min([parts.low for parts in found], axis=0)
+    high = np.max([parts.high for parts in found], axis=0)
     slow = [
         SlowChannel(channel.name, channel.unit, float(middle[k]), float(low[k]), float(high[k]))
         for k, channel in enumerate(channels)
-        if middle[k] > SLOW_SHARE
+        if middle[k] > SLOW_SHARE and not channel.is_state
     ]
     return tuple(sorted(slow, key=lambda one: -one.slow_share))
 
 
-def slow_share(parts: Sequence[Floats]) -> float:
-    """Return the share of variance that lies between consecutive parts of a channel's readings.
+@dataclass(frozen=True)
+class _Parts:
+    """Sums over consecutive parts of one source's time: n, total, square (n_parts, n_channels).
 
-    parts: (n,) each, NaN = missing. 0 where too little is there to tell.
+    They are taken about the mean of the first records, so that squares keep their digits.
+    low, high: (n_channels,) of all readings, infinite without any.
     """
-    kept = [part[~np.isnan(part)] for part in parts]
-    kept = [part for part in kept if len(part) >= _LEAST_ROWS]
-    total = float(np.concatenate(kept).var()) if len(kept) > 2 else 0.0
-    if total <= 0.0:
-        return 0.0
-    return float(np.var([part.mean() for part in kept])) / total
+
+    n: Floats
+    total: Floats
+    square: Floats
+    low: Floats
+    high: Floats
+
+    @classmethod
+    def of(cls, rows: Rows, source: str) -> _Parts:
+        n_channels = len(rows.table.instruments)
+        first_ns, last_ns = rows.spool.first_last_ns(source)
+        length = (last_ns - first_ns) // _N_PARTS + 1
+        n, total, square = (np.zeros((_N_PARTS, n_channels)) for _ in range(3))
+        low, high = np.full(n_channels, np.inf), np.full(n_channels, -np.inf)
+        middle: Floats | None = None
+        for chunk in rows.of(source).chunks():
+            values = chunk.values[:, :n_channels]
+            there = ~np.isnan(values)
+            if middle is None:
+                middle = np.where(there, values, 0.0).sum(axis=0) / np.maximum(there.sum(axis=0), 1)
+            low = np.fmin(low, np.where(there, values, np.inf).min(axis=0))
+            high = np.fmax(high, np.where(there, values, -np.inf).max(axis=0))
+            moved = np.where(there, values - middle, 0.0)
+            part = (chunk.times_ns - first_ns) // length
+            for k in np.unique(part).tolist():
+                n[k] += there[part == k].sum(axis=0)
+                total[k] += moved[part == k].sum(axis=0)
+                square[k] += np.square(moved[part == k]).sum(axis=0)
+        return cls(n, total, square, low, high)
+
+    def slow_share(self) -> Floats:
+        """Return the share of each channel's variance that lies between parts, (n_channels,).
+
+        0 where too few parts hold readings, or nothing moves.
+        """
+        enough = self.n >= _LEAST_ROWS
+        n = np.where(enough, self.n, 0.0)
+        all_n = np.maximum(n.sum(axis=0), 1.0)
+        mean = np.where(enough, self.total, 0.0).sum(axis=0) / all_n
+        whole = np.where(enough, self.square, 0.0).sum(axis=0) / all_n - mean**2
+        apart = np.where(enough, self.total / np.maximum(self.n, 1.0) - mean, 0.0)
+        between = (n * apart**2).sum(axis=0) / all_n
+        told = (enough.sum(axis=0) >= _LEAST_PARTS) & (whole > 0)
+        return np.asarray(np.where(told, between / np.where(told, whole, 1.0), 0.0))
 
 
 def unseen_nats(members: Mapping[str, Member], held_out: Mapping[str, HeldOut]) -> float:
