@@ -161,13 +161,15 @@ def stored_answer(
         "alert": ALERT_WORDS[record.alert],
     }
     if 0 <= record.suspect < len(channels):
-        own, low, high, best = unpack_detail(record.suspect_detail)
+        detail = unpack_detail(record.suspect_detail)
         name = channels[record.suspect]["name"]
         answer["suspect"] = {
             "channel": name,
-            "surprise": _round_or_none(own),
+            "surprise": _round_or_none(detail.surprise),
             "reading": readings.get(name),
-            "expected": {"low": low, "high": high, "best": best},
+            "expected": {"low": detail.low, "high": detail.high, "best": detail.best}
+            if detail.words is None
+            else {"words": detail.words},
         }
     for flag, name, value in (
         (FLAG_LATE, "late", True),

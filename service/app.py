@@ -7,6 +7,7 @@ from contextlib import asynccontextmanager
 from importlib.metadata import PackageNotFoundError, version
 from typing import Any
 
+import sqlalchemy as sa
 from fastapi import FastAPI
 from fastapi.exceptions import RequestValidationError
 from starlette.exceptions import HTTPException
@@ -15,6 +16,7 @@ from starlette.responses import Response
 from starlette.types import ASGIApp
 
 from service.front import Front
+from service.logs import log_event
 from service.openapi import describe
 from service.page import page_router
 from service.problems import Problem
@@ -78,6 +80,11 @@ def _add_handlers(app: FastAPI) -> None:
     async def on_fault(_request: Request, _error: Exception) -> Response:
         # The framework raises it again after this answer, and the front logs it.
         return _response(Problem("internal", "the request could not be answered"))
+
+    @app.exception_handler(sa.exc.DBAPIError)
+    async def on_store(_request: Request, error: Exception) -> Response:
+        log_event("store_read_failed", error=type(error).__name__, detail=str(error))
+        return _response(Problem("store-away", "the store does not answer"))
 
     @app.exception_handler(RequestValidationError)
     async def on_bad_query(_request: Request, error: Exception) -> Response:

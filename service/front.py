@@ -29,7 +29,7 @@ ROLE_OF: Mapping[tuple[str, str], str | None] = {
 _OPEN_PREFIX = "/problems/"
 ROUTES = frozenset(
     (
-        "/", "/records", "/alerts", "/sources", "/model", "/pruned", "/metrics", "/docs",
+        "/", "/records", "/alerts", "/sources", "/model", "/pruned", "/metrics",
         "/openapi.json", "/health/live", "/health/ready",
     )
 )  # fmt: skip
@@ -58,6 +58,8 @@ class Front:
         self.hosts = frozenset(name.lower().strip("[]") for name in names)
         self.any_host = "*" in server.hosts
         self.log_all = service.settings.log.requests == "all"
+        self.n_running_max = service.settings.server.n_connections
+        self._n_running = 0
         self._prefix = secrets.token_hex(4)
         self._numbers = itertools.count(1)
 
@@ -68,6 +70,7 @@ class Front:
             return
         request = _Request(scope, send, self._request_id(scope))
         scope["state"] = {"request": request.id}
+        self._n_running += 1
         try:
             self._let_in(scope)
             app = self.quick.get((scope["method"], scope["path"]), self.app)
@@ -84,6 +87,8 @@ class Front:
                 place=f"{where.filename.rsplit('/', 1)[-1]}:{where.lineno}",
             )
             await request.refuse(Problem("internal", "the request could not be answered"))
+        finally:
+            self._n_running -= 1
         self._count(scope, request)
 
     def _request_id(self, scope: Scope) -> str:
@@ -106,6 +111,8 @@ class Front:
         if origin is not None and origin.partition(b"://")[2] != host:
             raise Problem("foreign-origin", "the request comes from a page of another origin")
         key = (scope["method"], scope["path"])
+        if self._n_running > self.n_running_max and not key[1].startswith("/health/"):
+            raise Problem("overload", f"{self.n_running_max} requests are being answered already")
         role = ROLE_OF.get(key, "operate" if key[0] not in ("GET", "HEAD") else "read")
         if role is not None and not key[1].startswith(_OPEN_PREFIX):
             self.service.tokens.check(

@@ -141,7 +141,10 @@ def _suspect(suspect: dict[str, Any] | None) -> str:
         return ""
     expected = suspect["expected"]
     text = f"; look at {escape(suspect['channel'])} first, it read {_number(suspect['reading'])}"
-    low, high = expected.get("low"), expected.get("high")
+    if "words" in expected:
+        likely = max(expected["words"], key=expected["words"].get, default="nothing")
+        return f"{text}, {escape(likely)} was expected"
+    low, high = expected["low"], expected["high"]
     if low == low and high == high and low is not None and high is not None:
         return f"{text}, {_number(low)} to {_number(high)} was expected"
     return text

@@ -7,7 +7,8 @@ and not ahead of the clock move it.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import math
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, Protocol
 
@@ -149,8 +150,10 @@ class GroupScorer:
         if stored.layout_id == layout_id:
             scored.suspect[row] = stored.suspect
             detail = unpack_detail(stored.suspect_detail)
-            scored.suspect_surprise[row], scored.low[row] = detail[0], detail[1]
-            scored.high[row], scored.best[row] = detail[2], detail[3]
+            scored.suspect_surprise[row], scored.low[row] = detail.surprise, detail.low
+            scored.high[row], scored.best[row] = detail.high, detail.best
+            if detail.words is not None:
+                scored.words[row] = detail.words
         else:
             self.sheet.model_of[row] = self.group.layout_model(stored.layout_id)
 
@@ -248,6 +251,12 @@ class GroupScorer:
              scored.best[order]]
         ).tobytes()  # fmt: skip
         readings = self.sheet.values[order].tobytes()
+        details = [detail[i : i + 32] for i in range(0, 32 * len(order), 32)]
+        if scored.words:
+            details = [
+                pack_words(part, scored.words[row]) if row in scored.words else part
+                for part, row in zip(details, order, strict=True)
+            ]
         width = self.sheet.values.shape[1] * 8
         layout_id = self._layout_id()
         extra = (
@@ -268,7 +277,7 @@ class GroupScorer:
                 scored.suspect[order].tolist(),
                 scored.alert[order].tolist(),
                 out.flags[order].tolist(),
-                [detail[i : i + 32] for i in range(0, 32 * len(order), 32)],
+                details,
                 [readings[i : i + width] for i in range(0, width * len(order), width)],
                 extra,
                 strict=True,
@@ -319,10 +328,35 @@ def _pack(extra: dict[str, Any] | None) -> bytes | None:
     return orjson.dumps(extra, option=orjson.OPT_SORT_KEYS) if extra else None
 
 
-def unpack_detail(stored: bytes | None) -> list[float]:
-    """Return surprise, low, high and best of a stored suspect, NaN where open."""
-    values: list[float] = np.frombuffer(stored or bytes(0), dtype=np.float64).tolist()
-    return values if len(values) == 4 else [float("nan")] * 4
+@dataclass(frozen=True, slots=True)
+class Detail:
+    """What is stored of a suspect: nats, and what it should have read, NaN = open or none."""
+
+    surprise: float = math.nan
+    low: float = math.nan
+    high: float = math.nan
+    best: float = math.nan
+    words: dict[str, float] | None = None
+
+
+def pack_words(detail: bytes, words: Mapping[str, float]) -> bytes:
+    """Return a state's detail: its surprise as before, then its words as JSON."""
+    text = orjson.dumps(words)
+    # Three float64 have this length too; a space more tells them apart.
+    return detail[:8] + (text + b" " if len(text) == _N_RANGE_BYTES else text)
+
+
+def unpack_detail(stored: bytes | None) -> Detail:
+    """Return the suspect's detail as it was stored."""
+    if not stored:
+        return Detail()
+    if len(stored) == 8 + _N_RANGE_BYTES:
+        return Detail(*np.frombuffer(stored, dtype=np.float64).tolist())
+    surprise = float(np.frombuffer(stored[:8], dtype=np.float64)[0])
+    return Detail(surprise, words=orjson.loads(stored[8:]))
+
+
+_N_RANGE_BYTES = 24
 
 
 def _nullable(values: NDArray[np.float64]) -> list[float | None]:

@@ -59,7 +59,9 @@ KINDS: Mapping[str, Kind] = {
         "Host is not served here",
         "Use a name listed in server.hosts, or let an operator add this one.",
     ),
-    "not-found": Kind(404, "Nothing is there", "Look at /docs for what this service answers."),
+    "not-found": Kind(
+        404, "Nothing is there", "Look at /openapi.json for what this service answers."
+    ),
     "bad-method": Kind(405, "Method is not for this path", "Use a method named in Allow."),
     "slow-body": Kind(408, "Body came too slowly", "Send the body again without pauses."),
     "too-large": Kind(

@@ -62,7 +62,8 @@ def run(service: Service, listener: socket.socket) -> None:
             log_level="warning",
             server_header=False,
             proxy_headers=False,
-            limit_concurrency=server.n_connections,
+            # The front refuses with a reason before this does it without one.
+            limit_concurrency=2 * server.n_connections + 16,
             timeout_graceful_shutdown=int(server.drain_s),
             ssl_certfile=server.tls_certificate,
             ssl_keyfile=server.tls_key,

@@ -49,7 +49,9 @@ class ServerSettings(_Section):
     hosts: tuple[str, ...] = Field((), description="names that clients may use beside host")
     tls_certificate: Path | None = Field(None, description="file with the certificate chain")
     tls_key: Path | None = Field(None, description="file with the private key")
-    n_connections: int = Field(1000, ge=1, le=100_000, description="open connections at most")
+    n_connections: int = Field(
+        1000, ge=1, le=100_000, description="requests answered at the same time"
+    )
     drain_s: float = Field(10.0, ge=0, le=600, description="time for running requests at a stop")
 
 

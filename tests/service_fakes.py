@@ -92,6 +92,12 @@ class FakeEngine:
             step = scored.excess[row] if scored.judged[row] else 0.0
             sustained += 0.1 * (min(step, 30.0) - sustained)
             scored.sustained[row] = sustained
+        if 2 in self.layout.states:
+            # A word never seen is the suspect, so that a state is one at times.
+            for row in np.flatnonzero(used[:, 2] == 2).tolist():
+                scored.suspect[row] = 2
+                scored.low[row] = scored.best[row] = np.nan
+                scored.words[row] = {"running": 0.75, "stopped": 0.25}
         over = scored.judged & (scored.excess > self.levels["record"])
         scored.alert = np.where(over, 1, 0).astype(np.uint8)
         if channels:

@@ -2,19 +2,23 @@
 
 from __future__ import annotations
 
+import asyncio
 import gzip
 import json
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 import orjson
 import pytest
+import sqlalchemy as sa
 from pydantic import TypeAdapter
 
 from service import schemas
-from service.pipeline import AHEAD_NS
+from service.pipeline import AHEAD_NS, Detail, Run, pack_words, unpack_detail
 from service.problems import KINDS
+from service.store.group import Group
 from tests.service_fakes import FakeEngine
 from tests.service_http import NOW_NS, START_S, Api, record, running
 from tests.service_postgres import Cluster, cluster
@@ -23,6 +27,13 @@ from tests.service_postgres import Cluster, cluster
 @pytest.fixture(scope="module")
 def postgres() -> Iterator[Cluster]:
     with cluster() as found:
+        yield found
+
+
+@pytest.fixture
+def local(tmp_path: Path) -> Iterator[Api]:
+    """For tests to which the store does not matter."""
+    with running(tmp_path) as found:
         yield found
 
 
@@ -134,6 +145,23 @@ def test_an_unseen_word_makes_a_record_another_one(api: Api) -> None:
     assert stored(api)[0]["readings"]["pump"] == "creeping"
 
 
+def test_a_suspect_state_is_expected_in_words_then_and_later(api: Api) -> None:
+    expected = {"words": {"running": 0.75, "stopped": 0.25}}
+    for answer in (api.post(record(0, pump="creeping")), api.post(record(0, pump="creeping"))):
+        suspect = answer.json()["suspect"]
+        assert (suspect["channel"], suspect["reading"]) == ("pump", "creeping")
+        assert suspect["expected"] == expected
+    suspect = stored(api)[0]["suspect"]
+    assert (suspect["reading"], suspect["expected"]) == ("creeping", expected)
+
+
+@pytest.mark.parametrize("n_letters", range(1, 20))
+def test_words_of_any_length_come_back_from_the_store(n_letters: int) -> None:
+    words = {"w" * n_letters: 0.5}
+    packed = pack_words(np.array([1.5, 1, 2, 3]).tobytes(), words)
+    assert unpack_detail(packed) == Detail(1.5, words=words)
+
+
 def test_a_late_record_is_scored_and_leaves_the_standing_alone(api: Api) -> None:
     api.post(record(5))
     before = api.get("/sources").json()["items"][0]
@@ -172,18 +200,18 @@ def test_bad_quality_and_out_of_span_count_as_missing(api: Api) -> None:
     assert item["readings"]["flow"] == 900.0
 
 
-def test_every_channel_comes_when_asked_for(api: Api) -> None:
-    answer = api.post(record(), "/records?channels=true").json()
+def test_every_channel_comes_when_asked_for(local: Api) -> None:
+    answer = local.post(record(), "/records?channels=true").json()
     assert [c["channel"] for c in answer["channels"]] == ["flow", "power", "pump", "speed"]
-    assert "channels" not in api.post(record(1), "/records?channels=false").json()
+    assert "channels" not in local.post(record(1), "/records?channels=false").json()
 
 
 @pytest.mark.parametrize(
     ("query", "message"),
     [("chanels=true", "channels=true is the only one, is it meant"), ("channels=ja", "neither")],
 )
-def test_a_query_that_is_not_known_is_refused(api: Api, query: str, message: str) -> None:
-    answer = api.post(record(), f"/records?{query}")
+def test_a_query_that_is_not_known_is_refused(local: Api, query: str, message: str) -> None:
+    answer = local.post(record(), f"/records?{query}")
     assert answer.status_code == 422
     assert message in answer.json()["detail"]
 
@@ -203,8 +231,8 @@ def test_gzip_bodies_are_unpacked(api: Api) -> None:
         (gzip.compress(b" " * 40_000_000), "too-large"),
     ],
 )
-def test_a_packed_body_that_cannot_be_used_is_refused(api: Api, body: bytes, kind: str) -> None:
-    answer = api.post(body, headers={"content-encoding": "gzip"})
+def test_a_packed_body_that_cannot_be_used_is_refused(local: Api, body: bytes, kind: str) -> None:
+    answer = local.post(body, headers={"content-encoding": "gzip"})
     assert answer.json()["type"] == f"/problems/{kind}"
     assert answer.status_code == KINDS[kind].status
 
@@ -220,12 +248,12 @@ def test_a_packed_body_that_cannot_be_used_is_refused(api: Api, body: bytes, kin
     ],
 )
 def test_a_header_that_cannot_be_taken_is_refused(
-    api: Api, headers: dict[str, str], status: int, message: str
+    local: Api, headers: dict[str, str], status: int, message: str
 ) -> None:
-    answer = api.post(record(), headers=headers)
+    answer = local.post(record(), headers=headers)
     assert answer.status_code == status
     assert message in answer.json()["detail"]
-    assert not stored(api)
+    assert not stored(local)
 
 
 def test_a_body_over_the_limit_is_refused_with_the_way_out(tmp_path: Path) -> None:
@@ -258,10 +286,10 @@ def test_a_full_queue_answers_503_with_retry_after(tmp_path: Path) -> None:
         assert api.service.n_body_bytes == 0
 
 
-def test_an_empty_array_is_answered_with_one(api: Api) -> None:
-    assert api.post([]).json() == []
-    assert api.post(b"[1]").json()[0]["problem"]["status"] == 422
-    assert api.post(b"3").status_code == 422
+def test_an_empty_array_is_answered_with_one(local: Api) -> None:
+    assert local.post([]).json() == []
+    assert local.post(b"[1]").json()[0]["problem"]["status"] == 422
+    assert local.post(b"3").status_code == 422
 
 
 def test_a_fault_in_one_request_harms_no_other_and_tells_nothing(tmp_path: Path) -> None:
@@ -327,8 +355,8 @@ def test_all_records_come_as_lines_when_asked_for(api: Api) -> None:
         ("/model?source=", "source"),
     ],
 )
-def test_a_page_that_cannot_be_given_says_why(api: Api, path: str, message: str) -> None:
-    answer = api.get(path)
+def test_a_page_that_cannot_be_given_says_why(local: Api, path: str, message: str) -> None:
+    answer = local.get(path)
     assert answer.status_code == 422
     assert answer.headers["content-type"] == "application/problem+json"
     assert message in answer.json()["detail"]
@@ -366,35 +394,35 @@ def test_answers_are_as_they_are_described(api: Api) -> None:
     TypeAdapter(list[schemas.Score | schemas.ProblemItem]).validate_python(answers)
 
 
-def test_what_is_not_there_is_a_problem_too(api: Api) -> None:
+def test_what_is_not_there_is_a_problem_too(local: Api) -> None:
     for method, path, status in (
         ("GET", "/nothing", 404),
         ("DELETE", "/records", 405),
         ("PUT", "/sources", 405),
         ("GET", "/problems/none", 404),
     ):
-        answer = api.request(method, path)
+        answer = local.request(method, path)
         assert answer.status_code == status
         assert answer.headers["content-type"] == "application/problem+json"
-    assert "GET" in api.request("PUT", "/sources").headers["allow"]
+    assert "GET" in local.request("PUT", "/sources").headers["allow"]
 
 
-@pytest.mark.parametrize("kind", KINDS)
-def test_every_kind_of_problem_is_explained(api: Api, kind: str) -> None:
-    answer = api.get(f"/problems/{kind}")
-    assert answer.status_code == 200
-    assert KINDS[kind].way_out in answer.text
+def test_every_kind_of_problem_is_explained(local: Api) -> None:
+    for name, kind in KINDS.items():
+        answer = local.get(f"/problems/{name}")
+        assert answer.status_code == 200
+        assert kind.way_out in answer.text
 
 
-def test_no_page_of_another_origin_is_let_in(api: Api) -> None:
-    answer = api.request("OPTIONS", "/records", headers={"origin": "http://127.0.0.1:8321"})
+def test_no_page_of_another_origin_is_let_in(local: Api) -> None:
+    answer = local.request("OPTIONS", "/records", headers={"origin": "http://127.0.0.1:8321"})
     assert "access-control-allow-origin" not in answer.headers
     assert answer.status_code == 405
 
 
-def test_the_page_shows_sources_against_their_level_and_the_caution(api: Api) -> None:
-    api.post([record(i, "<b>mill</b>", flow=390.0) for i in range(30)])
-    page = api.get("/")
+def test_the_page_shows_sources_against_their_level_and_the_caution(local: Api) -> None:
+    local.post([record(i, "<b>mill</b>", flow=390.0) for i in range(30)])
+    page = local.get("/")
     assert page.status_code == 200
     assert schemas.ADVICE in page.text
     assert "&lt;b&gt;mill&lt;/b&gt;" in page.text
@@ -403,15 +431,15 @@ def test_the_page_shows_sources_against_their_level_and_the_caution(api: Api) ->
     assert "http" not in page.text.replace("http-equiv", "")
 
 
-def test_the_description_names_every_channel_with_its_unit(api: Api) -> None:
-    document = api.get("/openapi.json").json()
+def test_the_description_names_every_channel_with_its_unit(local: Api) -> None:
+    document = local.get("/openapi.json").json()
     readings = document["components"]["schemas"]["Record"]["properties"]["readings"]["properties"]
     assert readings["flow"]["description"] == "measurement, unit m3/h"
     assert readings["pump"]["description"] == "state, no unit; words: running, stopped"
 
 
-def test_every_field_is_described_with_a_unit_and_an_example(api: Api) -> None:
-    schemas_found = api.get("/openapi.json").json()["components"]["schemas"]
+def test_every_field_is_described_with_a_unit_and_an_example(local: Api) -> None:
+    schemas_found = local.get("/openapi.json").json()["components"]["schemas"]
     wanting = []
     units = ("no unit", "nats", "unit", "RFC 3339", "count", "ratio")
     for name, schema in schemas_found.items():
@@ -434,6 +462,67 @@ def test_a_restarted_service_has_every_record_and_standing(tmp_path: Path) -> No
         assert first + api.post(items[17:]).json() == unbroken
         assert api.get("/sources").json() == standing
         assert len(stored(api)) == 40
+
+
+class Gatherer:
+    """An alert sink that notes what it was given, and may refuse it."""
+
+    def __init__(self) -> None:
+        self.seen: list[tuple[str, list[int], list[int]]] = []
+        self.fail = False
+
+    def take(self, group: Group, runs: Sequence[Run]) -> None:
+        if self.fail:
+            raise RuntimeError("the sink was told to fail")
+        count = group.connection.exec_driver_sql("SELECT count(*) FROM record").scalar_one()
+        assert count > 0, "the records are in the same transaction"
+        for run in runs:
+            minutes = ((run.times_ns // 10**9 - START_S) // 60).tolist()
+            self.seen.append((run.source.name, minutes, run.scored.alert.tolist()))
+
+
+def test_an_alert_sink_gets_what_moved_a_standing_in_order(tmp_path: Path) -> None:
+    sink = Gatherer()
+    with running(tmp_path, sink=sink) as api:
+        items = [record(m, flow=390.0 if m == 6 else 120.0) for m in (5, 6, 2, 900, 6, 7)]
+        api.post([*items, record(1, "b")])
+        assert sink.seen == [
+            ("mill-lane-2", [5, 6], [0, 1]),
+            ("mill-lane-2", [7], [0]),
+            ("b", [1], [0]),
+        ]
+        sink.fail = True
+        assert api.post(record(8)).status_code == 500
+        sink.fail = False
+        # What the sink refused is not stored either.
+        assert "known" not in api.post(record(8)).json()
+
+
+def test_more_requests_at_once_than_the_limit_get_503(tmp_path: Path) -> None:
+    with running(tmp_path, server={"n_connections": 2}) as api:
+
+        async def many() -> list[int]:
+            calls = [api.client.get("/sources") for _ in range(30)]
+            return [answer.status_code for answer in await asyncio.gather(*calls)]
+
+        statuses = api.call(many())
+        assert set(statuses) == {200, 503}
+        assert api.get("/health/live").status_code == 200
+
+
+def test_a_store_that_cannot_be_read_answers_503(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def fail(*_words: object, **_more: object) -> None:
+        raise sa.exc.OperationalError("SELECT", {}, Exception("gone away, password hush"))
+
+    with running(tmp_path) as api:
+        monkeypatch.setattr("service.store.pages.sources_page", fail)
+        for path in ("/sources", "/"):
+            answer = api.get(path)
+            assert answer.status_code == 503
+            assert answer.headers["retry-after"] == "5"
+            assert "hush" not in answer.text
 
 
 def test_logs_hold_ids_and_no_readings(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:

@@ -63,7 +63,8 @@ record = sa.Table(
     sa.Column("alert", sa.SmallInteger, nullable=False),
     # FLAG_* below, added up.
     sa.Column("flags", sa.SmallInteger, nullable=False),
-    # Four float64: surprise of the suspect, expected low, high, best.
+    # The suspect's surprise as float64, then what it should have read: low, high and best as
+    # float64, or for a state its words with their probabilities as JSON.
     sa.Column("suspect_detail", sa.LargeBinary),
     sa.Column("readings", sa.LargeBinary, nullable=False),
     sa.Column("extra", sa.LargeBinary),
