@@ -250,7 +250,7 @@ class Attendance:
 
     def _refresh(self) -> None:
         """Bring the open scored alert up to what has been summed up."""
-        if self.inquiry.is_fresh or SCORED not in self.turn.cases:
+        if SCORED not in self.turn.cases:
             return
         self.turn.change(SCORED, **self.inquiry.shown(self._stuck()))
         case = self.turn.cases[SCORED]

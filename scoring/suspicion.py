@@ -78,8 +78,7 @@ def sum_rows(own: Floats, rows: Ints, middle: Floats, cap: Floats, sums: Floats)
 class Inquiry:
     """What an open scored alert is about, summed up as its records come.
 
-    over: (n,) rows of the batch that are over a level. is_fresh: `shown` would give what
-    it gave last.
+    over: (n,) rows of the batch that are over a level.
     """
 
     def __init__(self, scorer: Scorer, rules: Rules, batch: Batch, case: Case | None) -> None:
@@ -89,7 +88,7 @@ class Inquiry:
         self.over = self._use & (
             (scores.excess > knobs[kernel.RECORD]) | (scores.sustained > knobs[kernel.SUSTAINED])
         )
-        self._is_open, self.is_fresh = False, True
+        self._is_open = False
         self._others: dict[str, float] = {}
         self._evidence: dict[str, Evidence] = {}
         self._crossings: list[int] = []
@@ -118,7 +117,7 @@ class Inquiry:
         recent: (n_instruments + 1,) what the last few records, this one with them, say.
         """
         time_ns = int(self._batch.times_ns[row])
-        self._is_open, self.is_fresh = True, False
+        self._is_open = True
         self._sums = recent[:-1].copy()
         self._others, self._evidence, self._crossings = {}, {}, [time_ns]
         self._is_over, self._over_ns, self._raised_ns = True, time_ns, time_ns
@@ -134,7 +133,7 @@ class Inquiry:
 
     def drop(self) -> None:
         """End the inquiry: its alert is cleared."""
-        self._is_open, self.is_fresh = False, True
+        self._is_open = False
 
     def sum_up(self, start: int, stop: int) -> None:
         """Take in the rows from start to before stop."""
@@ -143,7 +142,6 @@ class Inquiry:
         rows = start + np.flatnonzero(self._use[start:stop])
         if not len(rows):
             return
-        self.is_fresh = False
         scores, times_ns = self._batch.scores, self._batch.times_ns
         middle, cap = self._rules.rows[kernel.MIDDLE], self._rules.rows[kernel.CAP]
         sum_rows(scores.channel_surprise, rows, middle, cap, self._sums)
@@ -204,7 +202,6 @@ class Inquiry:
 
     def shown(self, stuck: tuple[str, ...]) -> dict[str, Any]:
         """Return the alert's fields. stuck: channels known to be stuck just now."""
-        self.is_fresh = True
         tally = self.tally()
         suspects = ranked(tally)
         first = suspects[0].channel if suspects else ""
