@@ -87,6 +87,13 @@ class Cluster:
         """Return the URL of one of its databases."""
         return f"postgresql://odd@127.0.0.1:{self.port}/{database}"
 
+    def emptied_database(self) -> str:
+        """Return the URL of one database, emptied: quicker than a new one for every test."""
+        with psycopg.connect(self.url("postgres"), autocommit=True) as connection:
+            connection.execute("DROP SCHEMA public CASCADE")
+            connection.execute("CREATE SCHEMA public")
+        return self.url("postgres")
+
     def new_database(self) -> str:
         """Make an empty database and return its URL."""
         name = f"odd_{next(self._numbers)}"

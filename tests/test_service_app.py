@@ -41,7 +41,7 @@ def local(tmp_path: Path) -> Iterator[Api]:
 def api(tmp_path: Path, request: pytest.FixtureRequest) -> Iterator[Api]:
     store: dict[str, Any] = {}
     if request.param == "postgresql":
-        store["url"] = request.getfixturevalue("postgres").new_database()
+        store["url"] = request.getfixturevalue("postgres").emptied_database()
     with running(tmp_path, store=store) as found:
         yield found
 
