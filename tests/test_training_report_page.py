@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from html import escape
 from html.parser import HTMLParser
 from pathlib import Path
 
@@ -69,7 +70,7 @@ def test_the_advice_stands_on_top_and_at_the_end() -> None:
 
 def test_nothing_is_loaded_and_nothing_may_be() -> None:
     page = a_page()
-    assert not re.search(r"https?:|src=|href=|@import|url\(", page)
+    assert not re.search(r"https?:|src=|href=\"[^#]|@import|url\(", page)
     assert "default-src 'none'" in page
 
 
@@ -78,6 +79,22 @@ def test_numbers_are_flushed_right_and_words_are_not() -> None:
         r"<td([^>]*)>([^<]*)", table(["a", "b", "c"], [["x", "1", "y"]], words=(0, 2))
     )
     assert cells == [("", "x"), (' class="number"', "1"), ("", "y")]
+
+
+def test_words_that_must_not_be_broken_stay_on_one_line() -> None:
+    made = table(["a", "b", "n"], [["x", "y", "1"]], words=(0, 1), whole=(1,), wide=True)
+    assert re.findall(r"<td([^>]*)>", made) == ["", ' class="whole"', ' class="number"']
+    assert '<div class="scroll wide">' in made
+
+
+def test_a_long_page_begins_with_a_list_of_its_parts() -> None:
+    titles = ["one", "two", "three", "four", SPITEFUL]
+    page = html_page("t", "l", [Section(title, ()) for title in titles], "m")
+    found = re.findall(r'<a href="#([^"]+)">([^<]*)</a>', page)
+    assert [words for _, words in found] == [*titles[:4], escape(SPITEFUL)]
+    for target, words in found:
+        assert f'<h2 id="{target}">{words}</h2>' in page
+    assert "<nav" not in html_page("t", "l", [Section("one", ())], "m")
 
 
 def test_no_lines_make_no_list() -> None:

@@ -19,6 +19,9 @@ ADVICE = (
     "local codes and licensed practice decide."
 )
 
+# A page of this many sections or more begins with a list of them.
+_MANY_SECTIONS = 5
+
 # Nothing may be loaded and nothing run, also if a name in the records were markup.
 _POLICY = "default-src 'none'; style-src 'unsafe-inline'"
 
@@ -46,16 +49,20 @@ dt { font-size: .85rem; opacity: .8; }
 dd { margin: 0; font-size: 1.2rem; font-variant-numeric: tabular-nums; overflow-wrap: anywhere; }
 figure { margin: 1rem 0; }
 figure svg { width: 100%; height: auto; max-width: 40rem; display: block; }
+nav ul { padding: 0; list-style: none; display: flex; flex-wrap: wrap; gap: .1rem 1.1rem; }
+a { color: var(--teal); }
 .scroll { overflow-x: auto; }
+@media (min-width: 76rem) { .wide { margin-right: -15rem; } }
 table { border-collapse: collapse; font-size: .92rem; min-width: 60%; }
 caption { text-align: left; opacity: .8; padding-bottom: .3rem; }
 th, td { text-align: left; padding: .25rem .8rem .25rem 0; border-bottom: 1px solid var(--rule);
   vertical-align: top; }
 th { font-weight: 600; }
-.number { text-align: right; font-variant-numeric: tabular-nums; white-space: nowrap; }
+.number { text-align: right; font-variant-numeric: tabular-nums; }
+.number, .whole { white-space: nowrap; }
 ul { padding-left: 1.1rem; }
 footer { border-top: 1px solid var(--rule); font-size: .9rem; }
-@media print { header { background: none; } h2 { break-after: avoid; }
+@media print { header { background: none; } nav { display: none; } h2 { break-after: avoid; }
   figure { break-inside: avoid; } }
 """
 
@@ -82,7 +89,8 @@ def html_page(title: str, lead: str, sections: Iterable[Section], made_by: str) 
     lead: one or two sentences that say the result. made_by: the last line: which model,
     which records, when.
     """
-    body = "\n".join(_section(section) for section in sections)
+    sections = list(sections)
+    body = "\n".join(_section(k, section) for k, section in enumerate(sections))
     return f"""<!doctype html>
 <html lang="en"><head><meta charset="utf-8"><title>{escape(title)}</title>
 <meta name="viewport" content="width=device-width, initial-scale=1">
@@ -91,15 +99,26 @@ def html_page(title: str, lead: str, sections: Iterable[Section], made_by: str) 
 <header><div><h1>{escape(title)}</h1><p>{escape(lead)}</p>
 <p class="advice">{escape(ADVICE)}</p></div></header>
 <main>
-{body}
+{_contents(sections)}{body}
 </main>
 <footer><p>{escape(made_by)}</p><p class="advice">{escape(ADVICE)}</p></footer>
 </body></html>
 """
 
 
-def _section(section: Section) -> str:
-    return f"<section><h2>{escape(section.title)}</h2>\n{''.join(section.pieces)}</section>"
+def _section(k: int, section: Section) -> str:
+    title = f'<h2 id="part-{k}">{escape(section.title)}</h2>'
+    return f"<section>{title}\n{''.join(section.pieces)}</section>"
+
+
+def _contents(sections: Sequence[Section]) -> str:
+    if len(sections) < _MANY_SECTIONS:
+        return ""
+    items = "".join(
+        f'<li><a href="#part-{k}">{escape(section.title)}</a></li>'
+        for k, section in enumerate(sections)
+    )
+    return f'<nav aria-label="contents"><ul>{items}</ul></nav>\n'
 
 
 def paragraph(text: str, *, quiet: bool = False) -> str:
@@ -133,13 +152,16 @@ def table(
     rows: Iterable[Sequence[str]],
     *,
     words: Sequence[int] = (0,),
+    whole: Sequence[int] = (),
     caption: str = "",
+    wide: bool = False,
 ) -> str:
     """Return a table that scrolls sideways by itself on a narrow screen.
 
-    words: the columns that hold words; all others are numbers, flushed right.
+    words: the columns that hold words; all others are numbers, flushed right. whole: those
+    of them whose cells stay on one line. wide: may reach beyond the text on a wide screen.
     """
-    kinds = ["" if k in words else ' class="number"' for k in range(len(heading))]
+    kinds = [_kind(k in words, k in whole) for k in range(len(heading))]
     head = "".join(f"<th{k}>{escape(h)}</th>" for k, h in zip(kinds, heading, strict=True))
     body = "".join(
         "<tr>"
@@ -149,9 +171,16 @@ def table(
     )
     title = f"<caption>{escape(caption)}</caption>" if caption else ""
     return (
-        f'<div class="scroll"><table>{title}<thead><tr>{head}</tr></thead>\n'
+        f'<div class="scroll{" wide" if wide else ""}"><table>{title}'
+        f"<thead><tr>{head}</tr></thead>\n"
         f"<tbody>{body}</tbody></table></div>\n"
     )
+
+
+def _kind(is_words: bool, is_whole: bool) -> str:
+    if not is_words:
+        return ' class="number"'
+    return ' class="whole"' if is_whole else ""
 
 
 def write_text(path: Path, text: str) -> None:
