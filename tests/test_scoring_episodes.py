@@ -269,9 +269,11 @@ def test_open_alerts_are_one_a_kind_and_cleared_only_after_raised(
         assert {alert.kind: alert.id for alert in fed.standing.open} == now_open
 
 
+LEVELS = a_model().levels
+
+
 def time_in_alert(excess: list[float], sustained: list[float], levels: tuple[float, float]) -> int:
-    model = a_model()
-    at = replace(model.levels, record=levels[0], sustained=levels[1])
+    at = replace(LEVELS, record=levels[0], sustained=levels[1])
     found = find_episodes(times(len(excess)), np.array(excess), np.array(sustained), at)
     return int((found[:, 1] - found[:, 0]).sum())
 
