@@ -28,6 +28,7 @@ COMMANDS = {
     "drill": ("training.drill", "drill_command", "Find out which faults a model would catch."),
     "serve": ("service.serve", "serve_command", "Score records over HTTP."),
     "token": ("service.access", "token_command", "Make and revoke access tokens."),
+    "export": ("service.export", "export_command", "Write stored records as CSV."),
     "nightly": ("training.nightly", "nightly_command", "Renew the model from stored records."),
     "models": ("training.models", "models_command", "List, compare and choose kept models."),
     "settings": ("service.settings", "settings_command", "Show what the settings are, and why."),

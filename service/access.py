@@ -68,9 +68,14 @@ class Tokens:
         self._known = known
 
     @property
+    def any_known(self) -> bool:
+        """Whether there is a token at all."""
+        return bool(self._known)
+
+    @property
     def are_needed(self) -> bool:
         """Whether a request without a token is refused."""
-        return bool(self._known) or not self.open_without
+        return self.any_known or not self.open_without
 
     def check(self, authorization: str | None, role: str) -> str:
         """Return the name of the token that has a role; raises Problem."""
@@ -126,7 +131,7 @@ def is_loopback(host: str) -> bool:
 
 def require_tokens_off_loopback(settings: Settings, tokens: Tokens) -> None:
     """Refuse to listen beyond this machine while everyone would be let in."""
-    if not is_loopback(settings.server.host) and not tokens._known:
+    if not is_loopback(settings.server.host) and not tokens.any_known:
         raise OddbranchError(
             f"server.host = {settings.server.host} can be reached from other machines, and there "
             "is no token yet, so everyone could send and read; make one with "

@@ -8,7 +8,6 @@ bounded. The model's name is in one info metric only.
 from __future__ import annotations
 
 import threading
-import time
 from collections import Counter
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from typing import Any
@@ -352,8 +351,3 @@ def _histogram(name: str, help_text: str, histogram: Histogram) -> Metric:
     return HistogramMetricFamily(
         f"oddbranch_{name}", help_text, buckets=histogram.buckets(), sum_value=histogram.sum
     )
-
-
-def now_s() -> float:
-    """Return the wall clock in seconds."""
-    return time.time()
