@@ -168,6 +168,21 @@ class Event:
     details: dict[str, Any] = field(default_factory=dict)
 
 
+def blank_alert(source: str, kind: str, level: str, since_ns: int, at_ns: int, model: str) -> Alert:
+    """Return an alert of which only source, kind and times are known."""
+    return Alert(
+        id="",
+        source=source,
+        kind=kind,
+        likely=kind,
+        state=RAISED,
+        level=level,
+        since_ns=since_ns,
+        raised_ns=at_ns,
+        model=model,
+    )
+
+
 def alert_id(source: str, kind: str, raised_ns: int) -> str:
     """Return an alert's name: the same for the same source, kind and time, always."""
     text = f"{source}\n{kind}\n{raised_ns}".encode()

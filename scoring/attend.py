@@ -14,16 +14,16 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scoring import alert_kernel as kernel
-from scoring import alerts
 from scoring.alert_rules import Rules
 from scoring.alert_settings import AlertSettings
 from scoring.alert_standing import AlertStanding, Case
-from scoring.alert_turn import NEVER_NS, NO_LONGER_WATCHED, NS_PER_S, WENT_OUT_OF_SERVICE, Turn
-from scoring.alerts import ABSENT, CLOCK, SCORED, SILENT, SPAN, STUCK, Alert, Suspect
+from scoring.alert_turn import NEVER_NS, NS_PER_S, WENT_OUT_OF_SERVICE, Turn
+from scoring.alerts import ABSENT, CLOCK, SCORED, SILENT, SPAN, STUCK, Alert, blank_alert
+from scoring.channel_alerts import ChannelAlerts
 from scoring.channels import Channel
 from scoring.scorer import Scorer
-from scoring.sentences import absent_text, clock_text, span_text, stuck_text
-from scoring.suspicion import N_SUSPECTS, Batch, Inquiry
+from scoring.sentences import clock_text
+from scoring.suspicion import Batch, Inquiry
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -63,6 +63,10 @@ def laid_out(
         for name in case.active:
             if name in place:
                 ints[kernel.N_INTS + place[name]] = _FLAGS[case.alert.kind]
+        for one in case.alert.suspects if case.alert.kind == STUCK else ():
+            if one.channel in place and isinstance(one.reading, float):
+                # What it goes on repeating is no motion under the new model either.
+                floats[kernel.ANCHOR, place[one.channel]] = one.reading
     return replace(standing, channels=key, ints=ints, floats=floats)
 
 
@@ -86,8 +90,9 @@ class Attendance:
         self.turn = Turn(batch.source, standing, settings, rules.hold_s)
         self.ints, self.floats = standing.ints.copy(), standing.floats.copy()
         self.inquiry = Inquiry(scorer, rules, batch, standing.case(SCORED))
-        self.place = {channel.name: i for i, channel in enumerate(scorer.instruments)}
-        self.place[""] = len(scorer.instruments)
+        self.channels = ChannelAlerts(
+            self.turn, rules, batch, scorer.instruments, scorer.model.name
+        )
         self._on_time = np.flatnonzero(batch.on_time)
         self._over = np.flatnonzero(self.inquiry.over)
 
@@ -116,11 +121,7 @@ class Attendance:
         if SILENT in self.turn.cases:
             raised_ns = self.turn.cases[SILENT].alert.raised_ns
             self.turn.clear(SILENT, max(at_ns, raised_ns))
-        for kind in (STUCK, ABSENT, SPAN):
-            case = self.turn.cases.get(kind)
-            if case is not None and not all(name in self.place for name in case.active):
-                active = tuple(name for name in case.active if name in self.place)
-                self._set_active(kind, at_ns, active, NO_LONGER_WATCHED)
+        self.channels.drop_unknown(at_ns)
 
     def _arrived_ns(self, time_ns: int) -> int:
         """Return when something happened whose record's own time cannot be relied on."""
@@ -151,8 +152,9 @@ class Attendance:
         for row in np.unique(marks[:, 0]).tolist():
             self._watch(start, row + 1, self.ints, self.floats)
             self._pass(start, row + 1)
-            for _, what, channel in marks[marks[:, 0] == row].tolist():
-                self._settle(row, what, channel)
+            here = marks[marks[:, 0] == row]
+            for what in dict.fromkeys(here[:, 1].tolist()):
+                self._settle(row, what, here[here[:, 1] == what, 2].tolist())
             start = row + 1
         if start < stop:
             self._watch(start, stop, self.ints, self.floats)
@@ -202,19 +204,16 @@ class Attendance:
                 found = int(near[k])
         return found
 
-    def _settle(self, row: int, what: int, channel: int) -> None:
-        """Do what one mark says."""
+    def _settle(self, row: int, what: int, channels: list[int]) -> None:
+        """Do what the marks of one sort at a row say, of all channels at once."""
         time_ns = int(self.batch.times_ns[row])
         if what in _BEGINS:
             kind, clock = _BEGINS[what]
-            since_ns = time_ns - int(self.floats[clock, channel] * NS_PER_S)
-            self._join(kind, row, channel, since_ns)
+            lasted_s = float(self.floats[clock, channels].max())
+            since_ns = time_ns - int(lasted_s * NS_PER_S)
+            self.channels.join(kind, row, channels, since_ns, int(self.ints[kernel.CODE]))
         elif what in _ENDS:
-            kind = _ENDS[what]
-            if kind in self.turn.cases:
-                name = self._name(channel)
-                active = tuple(one for one in self.turn.cases[kind].active if one != name)
-                self._set_active(kind, time_ns, active, "")
+            self.channels.leave(_ENDS[what], time_ns, channels, int(self.ints[kernel.CODE]))
         elif what == kernel.CLOCK_ON:
             self._clock_begins(row)
         elif what == kernel.CLOCK_OFF:
@@ -260,44 +259,6 @@ class Attendance:
         case = self.turn.cases.get(STUCK)
         return case.active if case is not None else ()
 
-    def _join(self, kind: str, row: int, channel: int, since_ns: int) -> None:
-        """Let a channel be part of its kind's alert, which is raised for the first."""
-        time_ns, name = int(self.batch.times_ns[row]), self._name(channel)
-        suspects = (self._reading_of(row, channel),) if name else ()
-        case = self.turn.cases.get(kind)
-        if case is None:
-            alert = replace(
-                self._blank(kind, "", since_ns, time_ns),
-                suspects=suspects,
-                channels=(name,) if name else (),
-                neighbours=self.rules.beside[channel] if name else (),
-            )
-            alert = replace(alert, sentence=self._sentence(alert, (name,)))
-            self.turn.open(kind, time_ns, Case(alert, -1, (name,)))
-            return
-        if name in case.active:
-            return
-        active, alert = (*case.active, name), case.alert
-        known = {one.channel for one in alert.suspects}
-        more = tuple(one for one in suspects if one.channel not in known)
-        alert = replace(
-            alert,
-            suspects=(*alert.suspects, *more)[:N_SUSPECTS],
-            channels=tuple(dict.fromkeys([*alert.channels, *([name] if name else [])])),
-        )
-        alert = replace(alert, sentence=self._sentence(alert, active))
-        self.turn.cases[kind] = replace(case, alert=alert, active=active)
-        self.turn.worsen(kind, time_ns, "grown")
-
-    def _set_active(self, kind: str, at_ns: int, active: tuple[str, ...], why: str) -> None:
-        """Leave an alert to the channels it still concerns; with none it is cleared."""
-        if not active:
-            self.turn.clear(kind, at_ns, why)
-            return
-        case = self.turn.cases[kind]
-        alert = replace(case.alert, sentence=self._sentence(case.alert, active))
-        self.turn.cases[kind] = replace(case, alert=alert, active=active)
-
     def _clock_begins(self, row: int) -> None:
         time_ns = int(self.batch.times_ns[row])
         at_ns = self._arrived_ns(time_ns)
@@ -308,56 +269,8 @@ class Attendance:
             self.turn.open(CLOCK, at_ns, Case(replace(alert, sentence=sentence), -1))
 
     def _blank(self, kind: str, level: str, since_ns: int, at_ns: int) -> Alert:
-        """Return an alert with what is known before anything is said of channels."""
-        return Alert(
-            id="",
-            source=self.batch.source,
-            kind=kind,
-            likely=kind,
-            state=alerts.RAISED,
-            level=level,
-            since_ns=since_ns,
-            raised_ns=at_ns,
-            model=self.scorer.model.name,
-        )
-
-    def _name(self, channel: int) -> str:
-        instruments = self.scorer.instruments
-        return instruments[channel].name if channel < len(instruments) else ""
-
-    def _channel(self, name: str) -> Channel | None:
-        i = self.place.get(name, -1)
-        return self.scorer.instruments[i] if 0 <= i < len(self.scorer.instruments) else None
-
-    def _reading_of(self, row: int, channel: int) -> Suspect:
-        value, instrument = float(self.batch.values[row, channel]), self.scorer.instruments[channel]
-        reading = value if np.isfinite(value) else None
-        time_ns = int(self.batch.times_ns[row])
-        return Suspect(
-            instrument.name, instrument.unit, reading, None, None, None, None, time_ns, 0.0
-        )
-
-    def _sentence(self, alert: Alert, active: tuple[str, ...]) -> str:
-        source, first = alert.source, active[0]
-        readings = {one.channel: one.reading for one in alert.suspects}
-        reading = readings.get(first)
-        number = reading if isinstance(reading, float) else None
-        if alert.kind == ABSENT:
-            return absent_text(source, active, alert.since_ns)
-        if alert.kind == SPAN:
-            return span_text(source, active, number, self._channel(first))
-        return stuck_text(
-            source, active, number, self._channel(first), alert.since_ns, self._normal_s(first)
-        )
-
-    def _normal_s(self, name: str) -> float:
-        """Return a channel's longest normal stillness under the present states, inf if unknown."""
-        i = self.place.get(name, -1)
-        where = np.flatnonzero(self.rules.codes == self.ints[kernel.CODE])
-        if i < 0 or not len(where):
-            return float("inf")
-        still_s, moving_s = self.rules.longest[where[0], :, i]
-        return float(still_s if np.isfinite(still_s) else moving_s)
+        model = self.scorer.model.name
+        return blank_alert(self.batch.source, kind, level, since_ns, at_ns, model)
 
 
 def watch(

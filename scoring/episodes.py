@@ -14,12 +14,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scoring import alert_kernel as kernel
-from scoring import alerts
 from scoring.alert_rules import Rules, channels_key, level_knobs, rules_of
 from scoring.alert_settings import AlertSettings
 from scoring.alert_standing import AlertStanding, Case
 from scoring.alert_turn import NS_PER_S, WENT_OUT_OF_SERVICE, Turn
-from scoring.alerts import SILENT, Alert, Event
+from scoring.alerts import SILENT, Alert, Event, blank_alert
 from scoring.attend import Attendance, laid_out
 from scoring.model import Levels
 from scoring.scorer import Scorer, Scores
@@ -126,18 +125,8 @@ class Episodes:
 
     def _silent(self, source: str, standing: AlertStanding, now_ns: int) -> Alert:
         last_ns = standing.last_ns if standing.last_ns >= 0 else standing.heard_ns
-        return Alert(
-            id="",
-            source=source,
-            kind=SILENT,
-            likely=SILENT,
-            state=alerts.RAISED,
-            level="",
-            since_ns=standing.heard_ns,
-            raised_ns=now_ns,
-            model=self.scorer.model.name,
-            sentence=silent_text(source, last_ns),
-        )
+        alert = blank_alert(source, SILENT, "", standing.heard_ns, now_ns, self.scorer.model.name)
+        return replace(alert, sentence=silent_text(source, last_ns))
 
     def _rules_for(self, source: str) -> Rules:
         member = self.scorer.model.member(source)

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from scoring.alert_settings import AlertSettings
 from scoring.alert_standing import AlertStanding
-from scoring.alerts import Event
+from scoring.alerts import Alert, Event
 from scoring.episodes import Episodes
 from scoring.model import Model
 from scoring.scorer import Scorer, Scores
@@ -30,16 +30,13 @@ STEP_NS = int(STEP_S) * S
 N_CHANNELS = 4
 USUAL = np.array([12.0, 14.0, 15.0, 0.0])
 
-# Of the small model: no channel is called stuck, so that tests may repeat readings.
-NEVER_STILL = (np.inf, np.inf)
-
 
 def limits_of(
     model: Model, still_s: float = np.inf, moving_s: float = np.inf, away_s: float = 0.0
 ) -> StillnessLimits:
     """Return limits that are alike for all measurements under `running` and none else."""
     still, moving = np.full((1, 5), still_s), np.full((1, 5), moving_s)
-    still[0, 3] = moving[0, 3] = np.inf
+    still[0, 3] = moving[0, 3] = moving[0, 4] = np.inf
     neighbours = neighbour_lists(model.table, EDGES)
     return StillnessLimits(np.array([0]), still, moving, np.full(5, away_s), np.ones(4), neighbours)
 
@@ -160,6 +157,11 @@ class Fed:
             found += events
         self.events += found
         return found
+
+    @property
+    def open(self) -> tuple[Alert, ...]:
+        """The alerts that are open now."""
+        return self.standing.open if self.standing else ()
 
     def tick(self, now_ns: int) -> list[Event]:
         """Let time pass without records."""

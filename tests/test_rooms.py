@@ -39,6 +39,7 @@ SCORING_ORDER = (
     "alert_turn",
     "sentences",
     "suspicion",
+    "channel_alerts",
     "attend",
     "episodes",
     "alert_actions",
