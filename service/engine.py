@@ -23,7 +23,9 @@ ALERT_WORDS = (None, "record", "sustained")
 
 @dataclass(slots=True)
 class Scored:
-    """Scores of n records; every array is (n,), nats or channel units, NaN = none or open.
+    """Scores of n records; every array is (n,), nats or channel units, NaN = none.
+
+    low, high: infinite on an open side, which is stored and answered as NaN.
 
     suspect: column of the channel, -1 where there is none. alert: 0 none, 1 record,
     2 sustained. words: row -> probabilities of a suspect state's words. every: per row a
@@ -59,6 +61,11 @@ class Scored:
             alert=np.zeros(n, dtype=np.uint8),
             judged=np.ones(n, dtype=np.bool_),
         )
+
+    def close_open_sides(self) -> None:
+        """Put NaN where an expected interval is open, which JSON answers as null."""
+        for bounds in (self.low, self.high):
+            bounds[np.isinf(bounds)] = np.nan
 
     def put(self, rows: NDArray[np.int64] | slice, other: Scored, places: Sequence[int]) -> None:
         """Copy another's rows to these; places: the same rows as a list."""

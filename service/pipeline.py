@@ -104,6 +104,7 @@ class GroupScorer:
                 self.kept.append((state, fresh))
         self._copy_repeats()
         if self.kept:
+            self.sheet.scored.close_open_sides()
             self.group.insert(self._rows())
             self.group.save([state for state, _ in self.kept])
             sink.take(self.group, self.runs)

@@ -56,8 +56,8 @@ class ScoringEngine:
             sustained=scores.sustained,
             suspect=scores.suspect,
             suspect_surprise=scores.suspect_surprise,
-            low=_or_open(scores.expected_low),
-            high=_or_open(scores.expected_high),
+            low=scores.expected_low,
+            high=scores.expected_high,
             best=scores.expected_best,
             alert=scores.alert,
             judged=scores.judged,
@@ -158,11 +158,6 @@ def _edges(model: Model, member: Member) -> list[dict[str, Any]]:
         for part in member.parts
         for (left, right), nats in zip(part.tree.edges, part.tree.nats, strict=True)
     ]
-
-
-def _or_open(bounds: Floats) -> Floats:
-    """Return bounds with an open side as NaN, which JSON answers as null."""
-    return np.where(np.isinf(bounds), np.nan, bounds)
 
 
 def _finite_or_none(value: float) -> float | None:

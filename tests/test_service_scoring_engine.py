@@ -51,6 +51,7 @@ def test_scores_are_the_scorers_and_open_sides_are_none(engine: ScoringEngine) -
         (found.best, wanted.expected_best),
     ):
         np.testing.assert_array_equal(ours, theirs)
+    found.close_open_sides()
     for ours, theirs in ((found.low, wanted.expected_low), (found.high, wanted.expected_high)):
         np.testing.assert_array_equal(ours, np.where(np.isinf(theirs), np.nan, theirs))
     assert engine.standing_bytes(live) == standing.to_bytes()
