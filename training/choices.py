@@ -27,6 +27,11 @@ Unions = tuple[list[NodeBins], list[NDArray[np.uint8]]]
 N_BINS = (12, 16, 24, 32, 48)
 MASSES = (10.0, 50.0, 250.0, 1250.0, 6000.0, 100_000.0)
 SHARES = (0.03, 0.01, 0.003, 0.001, 0.0003)
+# Bins with fewer records than this each are not tried. Borders come from all records, so with
+# hardly more records than bins every held-out pair lies in a row and a column that no other
+# record uses, and raking puts the one into the other: 41 records of two independent channels
+# seemed to gain 0.7 nats on 48 bins.
+LEAST_RECORDS_A_BIN = 4
 
 
 @dataclass(frozen=True)
@@ -126,6 +131,8 @@ def choose(
     unions: gives the nodes on a wanted number of bins.
     """
     n_rows = max(1, int(counts.sum(axis=(0, 2, 3)).max(initial=0)))
+    enough = tuple(k for k in n_bins_tried if k * LEAST_RECORDS_A_BIN <= n_rows)
+    n_bins_tried = enough or n_bins_tried[:1]
     if not len(left):
         return Choice(n_bins_tried[len(n_bins_tried) // 2], np.zeros(0), SHARES[2])
     masses, shares = np.array(MASSES), np.array(SHARES)
