@@ -11,10 +11,14 @@ import networkx as nx
 import numpy as np
 import pytest
 
+from scoring.channels import ChannelTable
 from tests.published.exact import chow_liu, divergence, exact_tree, expected_surprise, weights_of
 from tests.published.networks import entropy, load, pair, single
 from tests.spools import spool_of, states
+from training.fit import fit
+from training.history.spool import Spool
 from training.learn import learn_model
+from training.rows import Rows
 from training.settings import LearnSettings
 from training.structure import spanning_forest, suzuki_weight
 
@@ -120,20 +124,23 @@ def test_sachs_is_two_blocks_of_nine_edges_under_the_penalty() -> None:
     assert len(edges) == 9
 
 
-def learned_edges(name: str, n: int, seed: int) -> set[tuple[str, str]]:
-    """Return the edges learned from n records, by the same way as from a plant's history."""
+def sampled(name: str, n: int, seed: int) -> tuple[Spool, ChannelTable]:
+    """Return n records of a network as a history of states."""
     network = load(name)
     values = network.sample(np.random.default_rng(seed), n)
-    table = states(*network.sizes)
-    with spool_of({name: values}, step_s=60.0) as spool:
-        model = learn_model(spool, table, LearnSettings()).model
-    return named(name, model.members[name].parts[-1].tree.edges)
+    return spool_of({name: values}), states(*network.sizes)
 
 
 @pytest.mark.parametrize("name", ["asia", "cancer", "earthquake"])
 def test_two_hundred_thousand_records_give_the_exact_tree_back(name: str) -> None:
-    assert learned_edges(name, 200_000, seed=1968) == set(EDGES[name])
+    spool, table = sampled(name, 200_000, seed=1968)
+    with spool:
+        density = fit(Rows(spool, table, spool.sources, 60.0))
+    assert named(name, density.parts[-1].tree.edges) == set(EDGES[name])
 
 
-def test_the_blocks_of_sachs_stay_apart_when_learned() -> None:
-    assert learned_edges("sachs", 20_000, seed=7) == set(EDGES["sachs"])
+def test_a_whole_learning_keeps_the_blocks_of_sachs_apart() -> None:
+    spool, table = sampled("sachs", 20_000, seed=7)
+    with spool:
+        model = learn_model(spool, table, LearnSettings()).model
+    assert named("sachs", model.members["sachs"].parts[-1].tree.edges) == set(EDGES["sachs"])
