@@ -12,17 +12,18 @@ from scoring.channels import Channel
 MOST_NAMED = 3
 # Digits of a reading whose instrument's resolution is not known.
 UNKNOWN_DIGITS = 5
+MAX_DECIMALS = 9
 
 
 def number_text(value: float, resolution: float | None) -> str:
     """Return a number with the decimals that its instrument's resolution has."""
     if resolution is None:
         return f"{value:.{UNKNOWN_DIGITS}g}"
-    decimals = 0
-    while decimals < 9 and not math.isclose(
-        resolution * 10**decimals, round(resolution * 10**decimals), rel_tol=1e-6, abs_tol=1e-6
+    decimals, steps = 0, resolution
+    while decimals < MAX_DECIMALS and not (
+        round(steps) >= 1 and math.isclose(steps, round(steps), rel_tol=1e-6)
     ):
-        decimals += 1
+        decimals, steps = decimals + 1, steps * 10
     return f"{value:.{decimals}f}"
 
 
