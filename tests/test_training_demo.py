@@ -18,15 +18,20 @@ from training.demo import (
     FIGURE_SEED,
     LIVE_DAYS,
     N_STATIONS,
+    RECOVERY_NS,
     START,
     add_data_sheets,
+    call_of,
     joined,
+    judge_all,
     over_level_of,
     post_live,
     simulate_plant,
+    truth_of,
 )
 from training.history.times import parse_time
 from training.served import Served
+from training.stretches import OverLevel, Stretch
 
 ANSWER = {
     "source": "mill-lane",
@@ -141,6 +146,50 @@ def test_joining_keeps_every_record_of_a_source_in_order() -> None:
     assert sum(len(times_ns) for times_ns, _ in records.values()) == sum(
         len(chunk.times_ns) for chunk in plant.live
     )
+
+
+def test_a_stretch_is_judged_by_its_start_and_its_suspects_in_order() -> None:
+    over = [
+        OverLevel("mill-lane", 5, "record", "power", 2.0),
+        OverLevel("mill-lane", 9, "sustained", "flow", 3.0),
+    ]
+    call = call_of(Stretch("mill-lane", tuple(over)))
+    assert (call.raised_ns, call.cleared_ns, call.at_first) == (5, 9, "power")
+    assert (call.suspects, call.kind) == (("flow", "power"), "sustained")
+
+
+def test_methods_are_judged_on_the_same_live_days() -> None:
+    plant = simulate_plant(7, 1, 1)
+    incident = plant.incidents[0]
+    at_ns = (incident.start_ns + incident.end_ns) // 2
+    inside = Stretch(incident.source, (OverLevel(incident.source, at_ns, "record", "flow"),))
+    judged = judge_all(plant, {"one": [inside], "none": []})
+    assert [len(one.verdict.caught) for one in judged.values()] == [1, 0]
+    assert {len(one.verdict.findings) for one in judged.values()} == {len(plant.incidents)}
+    assert judged["one"].quiet_share == judged["none"].quiet_share == 0.0
+
+
+def test_a_method_over_its_level_all_day_is_over_it_in_quiet_time() -> None:
+    plant = simulate_plant(7, 1, 1)
+    always = [
+        Stretch(chunk.source, tuple(OverLevel(chunk.source, int(t)) for t in chunk.times_ns))
+        for chunk in plant.live
+    ]
+    judged = judge_all(plant, {"always": always})["always"]
+    # Silent lines leave some grid points without a record.
+    assert judged.quiet_share == pytest.approx(1.0, abs=0.05)
+
+
+def test_the_truth_of_a_stretch_is_the_incident_it_touches() -> None:
+    plant = simulate_plant(7, 1, 1)
+    incident = plant.incidents[0]
+    for at_ns, touches in (
+        (incident.start_ns, True),
+        (incident.end_ns + RECOVERY_NS - 1, True),
+        (incident.start_ns - 1, False),
+    ):
+        stretch = Stretch(incident.source, (OverLevel(incident.source, at_ns),))
+        assert (truth_of(stretch, [incident]) is incident) == touches
 
 
 def test_figures_are_published_with_a_seed_kept_for_them() -> None:

@@ -12,7 +12,7 @@ import signal
 import sys
 import tempfile
 import time
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from pathlib import Path
@@ -23,12 +23,15 @@ import numpy as np
 
 from training.demo_text import (
     OURS,
+    Judged,
     incident_table,
     method_table,
     stretch_lines,
     where_others_win,
 )
 from training.history.times import parse_time
+from training.judging import Call, Judge
+from training.known import Known
 from training.learn import learn_command
 from training.plant.channels import INSTRUMENTS, NAMES
 from training.plant.draw import IncidentRates
@@ -43,7 +46,6 @@ from training.served import Served, serve
 from training.settings import LearnSettings
 from training.stretches import OverLevel, Stretch, Stretches
 from training.survey import survey_command
-from training.verdicts import Judgement, judge, truth_of
 
 # Figures are published with seeds from 9000 up, which nobody looks at while tuning.
 FIGURE_SEED = 9001
@@ -74,9 +76,9 @@ class Plant:
     incidents: tuple[Incident, ...]
 
 
-def simulate_plant(seed: int, history_days: int, live_days: int) -> Plant:
-    """Return the utility's history and live days."""
-    config = PlantConfig(
+def plant_config(seed: int, history_days: int, live_days: int) -> PlantConfig:
+    """Return what to simulate: quiet history, then days with incidents."""
+    return PlantConfig(
         seed=seed,
         n_stations=N_STATIONS,
         start=START,
@@ -85,6 +87,11 @@ def simulate_plant(seed: int, history_days: int, live_days: int) -> Plant:
         rates=IncidentRates(per_station_day=INCIDENTS_PER_STATION_DAY),
         quiet_days=history_days,
     )
+
+
+def simulate_plant(seed: int, history_days: int, live_days: int) -> Plant:
+    """Return the utility's history and live days."""
+    config = plant_config(seed, history_days, live_days)
     chunks = tuple(simulate(config, chunk_hours=24.0))
     border = history_days * N_STATIONS
     return Plant(chunks[:border], chunks[border:], incidents_of(config))
@@ -175,13 +182,50 @@ def rival_stretches(plant: Plant, settings: LearnSettings) -> dict[str, list[Str
     return found
 
 
-def judge_all(plant: Plant, found: Mapping[str, Sequence[Stretch]]) -> dict[str, Judgement]:
-    """Return every method's judgement on the live days."""
-    n_source_ns = sum(len(chunk.times_ns) for chunk in plant.live) * STEP_S * 10**9
-    return {
-        name: judge(plant.incidents, stretches, RECOVERY_NS, n_source_ns)
-        for name, stretches in found.items()
+def judge_all(plant: Plant, found: Mapping[str, Sequence[Stretch]]) -> dict[str, Judged]:
+    """Return every method's verdict on the live days."""
+    spans = {
+        source: (int(times_ns[0]), int(times_ns[-1]))
+        for source, (times_ns, _) in joined(plant.live).items()
     }
+    judge = Judge(known_of(plant.incidents), RECOVERY_NS, spans, STEP_S * 10**9)
+    judged = {}
+    for name, stretches in found.items():
+        verdict = judge.verdict(call_of(stretch) for stretch in stretches)
+        over = (Call(o.source, o.time_ns, o.time_ns) for s in stretches for o in s.over)
+        n_quiet = verdict.quiet_days * 86_400 / STEP_S
+        judged[name] = Judged(verdict, len(judge.verdict(over).false) / n_quiet)
+    return judged
+
+
+def known_of(incidents: Iterable[Incident]) -> tuple[Known, ...]:
+    """Return incidents as a site would know them, in order of source and start."""
+    found = [Known(i.source, i.start_ns, i.end_ns, i.kind, i.size, i.channels) for i in incidents]
+    return tuple(sorted(found, key=lambda one: (one.source, one.start_ns)))
+
+
+def call_of(stretch: Stretch) -> Call:
+    """Return a stretch as far as judging it needs."""
+    return Call(
+        stretch.source,
+        stretch.start_ns,
+        stretch.end_ns,
+        stretch.over[0].suspect,
+        stretch.suspects,
+        stretch.kind,
+    )
+
+
+def truth_of(stretch: Stretch, incidents: Iterable[Incident]) -> Incident | None:
+    """Return the first incident that a stretch touches, its recovery included."""
+    touched = (
+        incident
+        for incident in incidents
+        if incident.source == stretch.source
+        and stretch.end_ns >= incident.start_ns
+        and stretch.start_ns < incident.end_ns + RECOVERY_NS
+    )
+    return min(touched, key=lambda incident: incident.start_ns, default=None)
 
 
 @click.command("demo")
@@ -241,7 +285,7 @@ def _show_live(served: Served, plant: Plant) -> list[Stretch]:
     found = []
     for stretch in post_live(served, plant):
         found.append(stretch)
-        truth = truth_of(stretch, plant.incidents, RECOVERY_NS)
+        truth = truth_of(stretch, plant.incidents)
         click.echo("\n".join(stretch_lines(stretch, truth)))
     took_s = time.perf_counter() - began_s
     click.echo(
@@ -251,7 +295,7 @@ def _show_live(served: Served, plant: Plant) -> list[Stretch]:
     return found
 
 
-def _show_tables(judged: Mapping[str, Judgement], seed: int) -> None:
+def _show_tables(judged: Mapping[str, Judged], seed: int) -> None:
     budget = LearnSettings().budget.alerts_per_day
     click.echo(
         f"\nIncidents by kind and size, seed {seed}. Sizes in spreads: multiples of the "
@@ -261,7 +305,7 @@ def _show_tables(judged: Mapping[str, Judgement], seed: int) -> None:
     )
     click.echo(incident_table(judged))
     click.echo()
-    click.echo(method_table(judged, N_STATIONS, STEP_S))
+    click.echo(method_table(judged))
     click.echo()
     click.echo("\n".join(where_others_win(judged)))
 

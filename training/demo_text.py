@@ -8,17 +8,50 @@ from __future__ import annotations
 import math
 import textwrap
 from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
 from datetime import UTC, datetime
 
 from training.channel_toml import text_table
+from training.judging import Sum, Verdict
+from training.known import Known
 from training.plant.channels import INSTRUMENTS
 from training.plant.incidents import KINDS, Incident
 from training.stretches import OverLevel, Stretch
-from training.verdicts import BANDS, Judgement, Verdict, band_of
 
 _UNITS = {instrument.name: instrument.unit for instrument in INSTRUMENTS}
-# The table's order, and how the methods are called in it.
 OURS = "oddbranch"
+# Sizes in spreads; the kinds without a size are a band of their own.
+BANDS = ("below 3", "3 to 6", "6 and more", "no size")
+# How the rows of the second table begin.
+METHOD_ROWS = (
+    *(f"caught, {band}" for band in BANDS),
+    "caught, all",
+    "caught with the right suspect",
+    "median delay",
+    "false in",
+    "false a day",
+    "quiet time over the level",
+)
+
+
+@dataclass(frozen=True, slots=True)
+class Judged:
+    """One method's verdict. quiet_share: of the time in which a stretch would have been
+    false, the part it was over its level; a method over it all day has few stretches."""
+
+    verdict: Verdict
+    quiet_share: float
+
+    def summed(self, at: Iterable[int]) -> Sum:
+        """Return the sums over some incidents, by their place."""
+        return self.verdict.summed([self.verdict.findings[i] for i in at])
+
+
+def band_of(size: float | None) -> str:
+    """Return the band of an incident's size."""
+    if size is None:
+        return BANDS[3]
+    return BANDS[0] if size < 3 else BANDS[1] if size < 6 else BANDS[2]
 
 
 def stamp(time_ns: int) -> str:
@@ -73,6 +106,8 @@ def truth_words(stretch: Stretch, truth: Incident | None) -> str:
     part = stretch.within(truth.start_ns, truth.end_ns)
     if part is None:
         return f"{incident_words(truth)}, over since {stamp(truth.end_ns)}"
+    if stretch.start_ns < truth.start_ns:
+        return f"{incident_words(truth)}, begun at {stamp(truth.start_ns)}, later than this"
     before = duration((part.start_ns - truth.start_ns) / 1e9)
     right = "right" if part.suspect in truth.channels else "wrong"
     return f"{incident_words(truth)}, begun {before} before; suspect {right}"
@@ -88,85 +123,74 @@ def incident_words(incident: Incident) -> str:
     return f"{kind} of {' and '.join(incident.channels)}{size}"
 
 
-def incident_table(judged: Mapping[str, Judgement]) -> str:
+def incident_table(judged: Mapping[str, Judged]) -> str:
     """Return the incidents by kind and size, a row each; judged: by method, ours among them."""
     rivals = [name for name in judged if name != OURS]
     heading = ["kind", "spreads", "n", "caught", "median delay", "suspect right", *rivals]
-    ours = judged[OURS].verdicts
+    ours = judged[OURS].verdict.findings
     rows = []
     for kind in KINDS:
         for band in BANDS:
-            at = [i for i, v in enumerate(ours) if _is(v, kind, band)]
+            at = [i for i, finding in enumerate(ours) if _is(finding.incident, kind, band)]
             if at:
                 rows.append(_incident_row(kind, band, at, judged, rivals))
     return text_table(heading, rows, left=2)
 
 
-def _is(verdict: Verdict, kind: str, band: str) -> bool:
-    return verdict.incident.kind == kind and band_of(verdict.incident) == band
+def _is(incident: Known, kind: str, band: str) -> bool:
+    return incident.kind == kind and band_of(incident.size) == band
 
 
 def _incident_row(
-    kind: str, band: str, at: Sequence[int], judged: Mapping[str, Judgement], rivals: Sequence[str]
+    kind: str, band: str, at: Sequence[int], judged: Mapping[str, Judged], rivals: Sequence[str]
 ) -> list[str]:
-    part = {name: _part(judgement, at) for name, judgement in judged.items()}
+    part = {name: one.summed(at) for name, one in judged.items()}
     ours = part[OURS]
     return [
         kind.replace("_", " "),
         band,
-        str(len(at)),
+        str(ours.n),
         str(ours.n_caught),
         "" if ours.delay_s is None else duration(ours.delay_s),
-        str(ours.n_right),
+        str(ours.n_first),
         *(str(part[name].n_caught) for name in rivals),
     ]
 
 
-def _part(judgement: Judgement, at: Sequence[int]) -> Judgement:
-    return Judgement(tuple(judgement.verdicts[i] for i in at))
-
-
-def method_table(judged: Mapping[str, Judgement], n_sources: int, step_s: float) -> str:
+def method_table(judged: Mapping[str, Judged]) -> str:
     """Return the methods side by side: caught by size, suspects, delay, false stretches."""
     every = list(judged.values())
-    verdicts = every[0].verdicts
+    first = every[0].verdict
     rows = []
     for band in BANDS:
-        at = [i for i, v in enumerate(verdicts) if band_of(v.incident) == band]
+        at = [i for i, one in enumerate(first.findings) if band_of(one.incident.size) == band]
         unit = "" if band == BANDS[-1] else " spreads"
-        counts = [str(_part(judgement, at).n_caught) for judgement in every]
+        counts = [str(one.summed(at).n_caught) for one in every]
         rows.append([f"caught, {band}{unit} ({len(at)})", *counts])
-    delays = ["" if j.delay_s is None else duration(j.delay_s) for j in every]
-    quiet_days = every[0].quiet_days
-    shares = [j.n_quiet_over * step_s / 864 / max(quiet_days, step_s / 86_400) for j in every]
+    sums = [one.verdict.summed() for one in every]
+    delays = ["" if one.delay_s is None else duration(one.delay_s) for one in sums]
+    false = [one.verdict.false for one in every]
     rows += [
-        [f"caught, all ({len(verdicts)})", *(str(j.n_caught) for j in every)],
-        ["caught with the right suspect", *(str(j.n_right) for j in every)],
+        [f"caught, all ({len(first.findings)})", *(str(one.n_caught) for one in sums)],
+        ["caught with the right suspect", *(str(one.n_first) for one in sums)],
         ["median delay", *delays],
-        [f"false stretches in {quiet_days:.1f} days", *(str(len(j.false)) for j in every)],
-        [f"false a day, {n_sources} stations", *(_a_day(j, n_sources) for j in every)],
-        ["time over the level, quiet", *(f"{share:.2f} %" for share in shares)],
+        [f"false in {first.quiet_days:.1f} quiet station-days", *(str(len(f)) for f in false)],
+        ["false a day", *(f"{one.verdict.false_per_day:.1f}" for one in every)],
+        ["quiet time over the level", *(f"{100 * one.quiet_share:.2f} %" for one in every)],
     ]
     return text_table(["", *judged], rows)
 
 
-def _a_day(judgement: Judgement, n_sources: int) -> str:
-    """Return false stretches a day of the whole fleet, were it always without trouble."""
-    if not judgement.quiet_days:
-        return ""
-    return f"{len(judgement.false) / judgement.quiet_days * n_sources:.1f}"
-
-
-def where_others_win(judged: Mapping[str, Judgement]) -> list[str]:
+def where_others_win(judged: Mapping[str, Judged]) -> list[str]:
     """Return a sentence for each rival: what it caught that ours missed, and the reverse."""
-    ours = judged[OURS]
+    ours = judged[OURS].verdict.findings
     lines = []
-    for name, judgement in judged.items():
+    for name, one in judged.items():
         if name == OURS:
             continue
-        pairs = list(zip(ours.verdicts, judgement.verdicts, strict=True))
-        theirs = [b.incident for a, b in pairs if b.caught and not a.caught]
-        n_ours = sum(a.caught and not b.caught for a, b in pairs)
+        pairs = list(zip(ours, one.verdict.findings, strict=True))
+        theirs = [b.incident for a, b in pairs if b.call is not None and a.call is None]
+        n_ours = sum(a.call is not None and b.call is None for a, b in pairs)
         line = (
             f"{name} caught {len(theirs)} that {OURS} missed{_listed(theirs)}, and missed {n_ours}"
         )
@@ -174,10 +198,10 @@ def where_others_win(judged: Mapping[str, Judgement]) -> list[str]:
     return lines
 
 
-def _listed(incidents: Iterable[Incident]) -> str:
+def _listed(incidents: Iterable[Known]) -> str:
     counted: dict[str, int] = {}
     for incident in incidents:
-        words = f"{incident.kind.replace('_', ' ')} {band_of(incident)}"
+        words = f"{incident.kind.replace('_', ' ')} {band_of(incident.size)}"
         counted[words] = counted.get(words, 0) + 1
     listed = ", ".join(f"{n} {words}" if n > 1 else words for words, n in counted.items())
     return f" ({listed})" if listed else ""

@@ -60,13 +60,18 @@ class Stretch:
         return "sustained" if any(o.kind == "sustained" for o in self.over) else "record"
 
     @property
-    def suspect(self) -> str:
-        """The most suspicious channel over the whole stretch, "" for none."""
+    def suspects(self) -> tuple[str, ...]:
+        """The channels that were suspected, the most suspicious over the whole stretch first."""
         summed: dict[str, float] = {}
         for over in self.over:
             if over.suspect:
                 summed[over.suspect] = summed.get(over.suspect, 0.0) + over.weight
-        return max(summed, key=lambda name: summed[name], default="")
+        return tuple(sorted(summed, key=lambda name: -summed[name]))
+
+    @property
+    def suspect(self) -> str:
+        """The first of the suspects, "" for none."""
+        return next(iter(self.suspects), "")
 
     @property
     def worst(self) -> OverLevel:
