@@ -26,6 +26,9 @@ LADDER = np.array([0.0, 0.25, 0.5, 1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 8.0])
 # No score lies beyond this: a reading further out is as impossible as one that far, so that
 # no single channel outweighs a whole record, and no bin is rarer than the normal's tail there.
 FARTHEST, LEAST_MARGINAL = 13.0, 1e-38
+# However far the blocks of time lie apart, no more than this share of readings is expected
+# beyond either end: a short history must not make its own range meaningless.
+MOST_UNSEEN = 0.01
 # A value that makes up this share of the readings, relative to one equal-frequency bin,
 # has a bin of its own.
 REPEAT_SHARE = 0.5
@@ -76,16 +79,46 @@ class _Modes:
     """Stretches of readings parted by wide gaps.
 
     gaps: (n_gaps,) a gap lies between distinct values k and k + 1. spreads: (n_gaps + 1,)
+    ends: readings' worth of probability beyond either end.
     """
 
     gaps: NDArray[np.int64]
     spreads: Floats
+    ends: tuple[float, float]
 
 
-def choose_bins(sample: Floats, channel: Channel, n_bins: int = FINE_BINS) -> NodeBins:
+def unseen_ends(sample: Floats, blocks: NDArray[np.int64]) -> tuple[float, float]:
+    """Return how many readings lie beyond the range of all other blocks of time.
+
+    sample: (n,) readings, blocks: (n,) the block of each. Slow channels leave a range that
+    thousands of readings agree on, because those readings are near copies; what one block
+    would have been to the others is what the next block may be to all.
+    Returns readings below and above, at least half a one, at most MOST_UNSEEN of all.
+    """
+    if not len(sample):
+        return 0.5, 0.5
+    numbers, group = np.unique(blocks, return_inverse=True)
+    if len(numbers) < 2:
+        return 0.5, 0.5
+    low, high = np.full(len(numbers), np.inf), np.full(len(numbers), -np.inf)
+    np.minimum.at(low, group, sample)
+    np.maximum.at(high, group, sample)
+    below = int((sample < np.sort(low)[1]).sum())
+    above = int((sample > np.sort(high)[-2]).sum())
+    most = MOST_UNSEEN * len(sample)
+    return max(0.5, min(float(below), most)), max(0.5, min(float(above), most))
+
+
+def choose_bins(
+    sample: Floats,
+    channel: Channel,
+    n_bins: int = FINE_BINS,
+    ends: tuple[float, float] = (0.5, 0.5),
+) -> NodeBins:
     """Return the bins of one channel from a sample of its readings.
 
     sample: (n,) readings, no NaN; the number of the word for a state.
+    ends: readings' worth of probability beyond either end (see unseen_ends).
     n_bins: wanted number of equal-frequency bins; values that repeat and gaps add to it.
     """
     if channel.is_state:
@@ -93,7 +126,7 @@ def choose_bins(sample: Floats, channel: Channel, n_bins: int = FINE_BINS) -> No
     values, counts = np.unique(sample, return_counts=True)
     if not len(values):
         return _never_read()
-    modes = _modes(values, counts, channel)
+    modes = _modes(values, counts, channel, ends)
     found = _measured_bins(values, counts, modes, channel, n_bins)
     while found.n_bins > MOST_FINE_BINS and n_bins > 8:
         n_bins //= 2
@@ -142,7 +175,9 @@ def _measured_bins(
     return NodeBins(Bins(borders), scores, marginal, np.concatenate([always, firm, always]))
 
 
-def within(node: NodeBins, sample: Floats, channel: Channel) -> NodeBins:
+def within(
+    node: NodeBins, sample: Floats, channel: Channel, ends: tuple[float, float] = (0.5, 0.5)
+) -> NodeBins:
     """Return the same bins with the scores and marginal of some of the readings.
 
     sample: (n,) readings, no NaN, for example those of one regime: beyond their own range
@@ -153,7 +188,9 @@ def within(node: NodeBins, sample: Floats, channel: Channel) -> NodeBins:
     values, counts = np.unique(sample, return_counts=True)
     if not len(values):
         return node
-    scores, marginal = _placed(node.bins.borders, values, counts, _modes(values, counts, channel))
+    scores, marginal = _placed(
+        node.bins.borders, values, counts, _modes(values, counts, channel, ends)
+    )
     return NodeBins(node.bins, scores, marginal, node.firm)
 
 
@@ -162,7 +199,7 @@ def _placed(
 ) -> tuple[Floats, Floats]:
     """Return borders' normal scores and bins' probabilities for some readings.
 
-    Inside their range by counts; an empty bin, like each end, gets half a record. Beyond
+    Inside their range by counts, an empty bin half a record. Beyond
     it the normal tails go on by the spread of the outermost stretch.
     """
     below = np.concatenate([[0], np.cumsum(counts)])
@@ -170,12 +207,12 @@ def _placed(
     first, last = int((borders <= values[0]).sum()), int((borders <= values[-1]).sum())
     inside = np.diff(np.concatenate([[0], under[first:last], [below[-1]]])).astype(float)
     inside[inside == 0] = 0.5
-    total = inside.sum() + 1.0
-    end = ndtri(0.5 / total)
+    total = inside.sum() + sum(modes.ends)
+    share_below, share_above = modes.ends[0] / total, modes.ends[1] / total
     scores = np.empty(len(borders))
-    scores[:first] = end - (values[0] - borders[:first]) / modes.spreads[0]
-    scores[first:last] = ndtri((0.5 + np.cumsum(inside)[:-1]) / total)
-    scores[last:] = -end + (borders[last:] - values[-1]) / modes.spreads[-1]
+    scores[:first] = ndtri(share_below) - (values[0] - borders[:first]) / modes.spreads[0]
+    scores[first:last] = ndtri((modes.ends[0] + np.cumsum(inside)[:-1]) / total)
+    scores[last:] = (borders[last:] - values[-1]) / modes.spreads[-1] - ndtri(share_above)
     scores = np.clip(scores, -FARTHEST, FARTHEST)
     marginal = np.empty(len(borders) + 1)
     low, high = ndtr(scores[:first]), ndtr(-scores[last:])
@@ -183,8 +220,8 @@ def _placed(
     marginal[first : last + 1] = inside / total
     marginal[last + 1 :] = -np.diff(high, append=0.0)
     # What lies between the range's end and the nearest border belongs to the end's bin.
-    marginal[first] += 0.5 / total - (low[-1] if first else 0.0)
-    marginal[last] += 0.5 / total - (high[0] if last < len(borders) else 0.0)
+    marginal[first] += share_below - (low[-1] if first else 0.0)
+    marginal[last] += share_above - (high[0] if last < len(borders) else 0.0)
     return _rising(scores), np.asarray(np.maximum(marginal, LEAST_MARGINAL) / marginal.sum())
 
 
@@ -206,29 +243,31 @@ def _never_read() -> NodeBins:
     return NodeBins(Bins(np.zeros(1)), np.zeros(1), np.array([0.5, 0.5]), np.full(1, np.inf))
 
 
-def _modes(values: Floats, counts: NDArray[np.int64], channel: Channel) -> _Modes:
+def _modes(
+    values: Floats, counts: NDArray[np.int64], channel: Channel, ends: tuple[float, float]
+) -> _Modes:
     """Find the wide gaps and the spread of each stretch between them."""
     # A channel that hardly moves is known no better than it is read.
     scale = max(abs(values[0]), abs(values[-1]), 1e-12)
     least = max(channel.resolution or 0.0, 1e-9 * scale)
     if len(values) < 2:
         only = least if channel.resolution else max(channel.accuracy or 0.0, 0.01 * scale)
-        return _Modes(np.zeros(0, dtype=np.int64), np.array([only]))
+        return _Modes(np.zeros(0, dtype=np.int64), np.array([only]), ends)
     steps = np.diff(values)
     # Where most readings are one value the others still speak of the spread.
     least = max(least, (values[-1] - values[0]) / 100, float(np.median(steps)) / 2)
     whole = max(_half_width(values, counts), least)
     wide = np.flatnonzero(steps > max(GAP_SPREADS * whole, GAP_SPACINGS * float(np.median(steps))))
     gaps = np.sort(wide[np.argsort(-steps[wide], kind="stable")[:MAX_GAPS]])
-    ends = np.concatenate([[0], gaps + 1, [len(values)]])
+    cuts = np.concatenate([[0], gaps + 1, [len(values)]])
     total = counts.sum()
     spreads = [
         max(_half_width(values[a:b], counts[a:b]), least)
         if counts[a:b].sum() >= MODE_SHARE * total
         else whole
-        for a, b in pairwise(ends.tolist())
+        for a, b in pairwise(cuts.tolist())
     ]
-    return _Modes(gaps, np.array(spreads))
+    return _Modes(gaps, np.array(spreads), ends)
 
 
 def _half_width(values: Floats, counts: NDArray[np.int64]) -> float:

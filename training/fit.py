@@ -19,7 +19,7 @@ from scoring.channels import Channel, ChannelTable
 from scoring.kernels import evidence_rows
 from scoring.model import Part
 from scoring.tree import Tree
-from training.binning import NodeBins, choose_bins, coarsen, merge_bins, within
+from training.binning import NodeBins, choose_bins, coarsen, merge_bins, unseen_ends, within
 from training.blocks import N_FOLDS
 from training.choices import N_BINS, Choice, Unions, choose, merge_counts
 from training.counts import count_pairs
@@ -104,11 +104,13 @@ def fit(
 
     like: a density whose structure and choices are taken over.
     """
-    sample = rows.sample(folds)
+    sample, blocks = rows.sample(folds)
     fine = []
     for k, channel in enumerate(rows.table.nodes):
-        readings = sample[:, k]
-        fine.append(choose_bins(readings[~np.isnan(readings)], channel))
+        there = ~np.isnan(sample[:, k])
+        readings = sample[there, k]
+        ends = unseen_ends(readings, blocks[there])
+        fine.append(choose_bins(readings, channel, ends=ends))
     reader = _Reader(rows, folds, BinTable.of(tuple(node.bins for node in fine)))
     plain = _fit_tree(reader, fine, partial(_unions, fine), like.plain if like else None)
     return Density(fine, plain)
@@ -126,7 +128,7 @@ def fit_regimes(
     regime: nodes of state channels. density: the plain one of the same rows and folds.
     like: a density whose regimes, structures and choices are taken over.
     """
-    sample = rows.sample(folds)
+    sample, blocks = rows.sample(folds)
     codes = sample[:, list(regime)]
     n_bins = density.plain.choice.n_bins
     into = _unions(density.fine, n_bins)[1]
@@ -134,7 +136,7 @@ def fit_regimes(
     regimes = {}
     for key in list(like.regimes) if like else _common(codes):
         holds = (codes == np.array(key)).all(axis=1)
-        nodes = _within(density.fine, sample[holds], rows.table.nodes, regime, key)
+        nodes = _within(density.fine, sample[holds], blocks[holds], rows.table.nodes, regime, key)
         merged = [merge_bins(node, i) for node, i in zip(nodes, into, strict=True)]
         regimes[key] = _fit_tree(
             _Reader(rows, folds, bin_table, regime, key),
@@ -167,6 +169,7 @@ def _common(codes: Floats) -> list[tuple[int, ...]]:
 def _within(
     fine: list[NodeBins],
     sample: Floats,
+    blocks: Ints,
     channels: tuple[Channel, ...],
     regime: tuple[int, ...],
     key: tuple[int, ...],
@@ -174,8 +177,9 @@ def _within(
     """Return the fine bins with scores and marginals of one regime's records."""
     nodes = []
     for k, (node, channel) in enumerate(zip(fine, channels, strict=True)):
-        readings = sample[:, k]
-        nodes.append(within(node, readings[~np.isnan(readings)], channel))
+        there = ~np.isnan(sample[:, k])
+        readings = sample[there, k]
+        nodes.append(within(node, readings, channel, unseen_ends(readings, blocks[there])))
         if k in regime:
             # In its own regime the channel has one value, whatever else was smoothed.
             only = np.full(node.n_bins, 1e-300)

@@ -110,6 +110,6 @@ def learn_fleet(rows: Rows, only: Learned | None) -> Member:
         return replace(only.member, source="", tables="shared")
     density = fit(rows)
     member = member_of("", density)
-    sample = rows.sample(tuple(range(N_FOLDS)))
+    sample, _ = rows.sample(tuple(range(N_FOLDS)))
     usual = usual_of(*score_values(member, rows, sample), member.bin_table.rows(sample))
     return replace(member, usual=usual, tables="shared")

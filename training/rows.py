@@ -20,6 +20,8 @@ Floats = NDArray[np.float64]
 DEFAULT_STEP_S = 60.0
 # A sample of this many records settles where bins lie; tables count every record.
 MAX_SAMPLE = 40_000
+# No source has this many blocks of time.
+MAX_BLOCKS = 1_000_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -79,19 +81,23 @@ class Rows:
                     source, times_ns, nodes, blocks.fold(times_ns), blocks.clear(times_ns), kept
                 )
 
-    def sample(self, folds: tuple[int, ...]) -> Floats:
+    def sample(self, folds: tuple[int, ...]) -> tuple[Floats, Ints]:
         """Return (m, n_nodes) records of the given folds, at most about MAX_SAMPLE.
 
+        The second result is the block of time of each, (m,), no two sources' alike.
         Chosen by a hash of their time, so that neither order nor chunking matters.
         """
         share = MAX_SAMPLE / max(self.n_records, 1)
-        found = []
+        found, blocks = [], []
+        number = {source: k for k, source in enumerate(self.sources)}
         for chunk in self.chunks():
             use = chunk.kept & np.isin(chunk.fold, folds)
             if share < 1:
                 use &= hashed(chunk.times_ns) < share
             found.append(chunk.values[use])
-        return np.concatenate(found)
+            block = self.blocks(chunk.source).number(chunk.times_ns[use])
+            blocks.append(number[chunk.source] * MAX_BLOCKS + block)
+        return np.concatenate(found), np.concatenate(blocks)
 
 
 def hashed(times_ns: Ints) -> Floats:

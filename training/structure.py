@@ -27,7 +27,7 @@ WEIGHING_MASSES = np.array([30.0, 300.0, 3000.0, 100_000.0])
 WEIGHING_SHARE = 0.01
 # Sweeps of raking while tables are compared: what is left to rake then is far below the
 # differences between choices.
-ROUGH_SWEEPS = 3
+ROUGH_SWEEPS = 6
 
 
 @dataclass(frozen=True)
