@@ -22,6 +22,9 @@ REGULAR_SHARE = 0.5
 # One record counts for no more than this many of a channel's spreads above its usual
 # surprise, so that one glitch does not decide who is suspected.
 CAP_SPREADS = 5.0
+# But for as many nats as this: a state that follows from the others has hardly a spread, and
+# is all the odder when it does not follow.
+LEAST_CAP = 10.0
 
 
 @dataclass(frozen=True)
@@ -93,7 +96,9 @@ def rules_of(model: Model, member: Member, levels: Levels, settings: AlertSettin
     middle = usual.channel_median if len(usual.channel_median) == n else np.zeros(n)
     return Rules(
         knobs=level_knobs(levels, settings, usual.sustained),
-        rows=np.vstack([motion.rows, middle, CAP_SPREADS * spread, away[:n]]),
+        rows=np.vstack(
+            [motion.rows, middle, np.maximum(CAP_SPREADS * spread, LEAST_CAP), away[:n]]
+        ),
         limits=np.maximum(settings.stuck_factor * longest, least_s),
         longest=longest,
         codes=codes,

@@ -2,10 +2,14 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+from pathlib import Path
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
 
+from scoring.artefact import read_model, write_model
 from scoring.stillness import (
     MAX_STEP,
     UNREAD,
@@ -146,3 +150,16 @@ def test_a_source_never_seen_may_be_still_as_long_as_any() -> None:
     assert both.moving_s[:, 0].tolist() == [20.0, 10.0]
     assert both.away_s.tolist() == [100.0] * 5
     assert widest([], short.neighbours) is None
+
+
+def test_limits_travel_with_the_model(tmp_path: Path) -> None:
+    model = a_model()
+    member = replace(model.members["a"], stillness=limits_of(model, 30.0, 20.0, 100.0))
+    written = write_model(replace(model, members={"a": member}), tmp_path / "model")
+    read = read_model(tmp_path / "model")
+    assert read.name == written.name != write_model(model, tmp_path / "other").name
+    assert read.fleet.stillness is None
+    found, given_ = read.members["a"].stillness, member.stillness
+    assert found is not None
+    for name in StillnessLimits.__dataclass_fields__:
+        np.testing.assert_array_equal(getattr(found, name), getattr(given_, name), err_msg=name)

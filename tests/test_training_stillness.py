@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from itertools import pairwise
 
 import numpy as np
@@ -11,8 +12,10 @@ from hypothesis import strategies as st
 
 from scoring.stillness import StillnessLimits
 from tests.alert_tools import S
-from tests.models import EDGES, a_channel_table
-from training.stillness import LEAST_MOVES, MAX_KEPT, learn_stillness
+from tests.models import EDGES, a_channel_table, a_model
+from tests.spools import spool_of
+from training.rows import Rows
+from training.stillness import LEAST_MOVES, MAX_KEPT, learn_stillness, with_stillness
 
 TABLE = a_channel_table()
 IN, OUT, POWER, PUMP = range(4)
@@ -108,3 +111,19 @@ def test_only_the_combinations_with_most_time_are_kept() -> None:
     assert len(limits.codes) == MAX_KEPT
     assert (np.diff(limits.codes) > 0).all()
     assert 0 in limits.codes
+
+
+def test_every_member_gets_its_limits_and_the_fleet_the_widest() -> None:
+    model = a_model()
+    _, values = machine_history()
+    shorter = values.copy()
+    shorter[:, OUT] = np.where(shorter[:, PUMP] == 1.0, 0.0, np.arange(4000))
+    with spool_of({"a": values, "b": shorter}, 10.0) as spool:
+        rows = Rows(spool, TABLE, ("a", "b"), 10.0)
+        members = {"a": model.members["a"], "b": replace(model.members["a"], source="b")}
+        found, fleet = with_stillness(rows, members, model.fleet)
+    a, b = found["a"].stillness, found["b"].stillness
+    assert a is not None
+    assert b is not None
+    assert fleet.stillness is not None
+    assert b.still_s[0, OUT] < a.still_s[0, OUT] == fleet.stillness.still_s[0, OUT]
