@@ -345,3 +345,10 @@ def test_scores_of_a_real_scorer_go_through(model: object) -> None:
         assert 0 < sum(one.share for one in alert.suspects) <= 1 + 1e-9
         assert alert.worst_excess is not None
     assert AlertStanding.from_bytes(standing.to_bytes()) == standing
+
+
+def test_a_machine_can_be_warmed_before_its_first_record() -> None:
+    machine = episodes()
+    machine.warm()
+    fed = Fed(machine)
+    assert told(fed.feed([OVER])) == [("raised", SCORED)]
