@@ -51,7 +51,7 @@ THIRD_PARTY = {
     "scoring": {"numpy", "numba", "pydantic"},
     "training": {
         *("numpy", "numba", "scipy", "pandas", "pyarrow", "pydantic", "pydantic_settings"),
-        *("click", "rich", "orjson", "sqlalchemy", "dask", "distributed"),
+        *("click", "rich", "orjson", "sqlalchemy", "dask", "distributed", "matplotlib"),
     },
     "service": {
         *("numpy", "numba", "pydantic", "pydantic_settings", "pydantic_core", "fastapi"),

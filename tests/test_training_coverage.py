@@ -9,6 +9,7 @@ import pytest
 
 from scoring.bins import MISSING
 from scoring.derived import derive
+from scoring.expected import shortest_interval
 from scoring.model import Model
 from scoring.scorer import Scorer
 from tests.models import a_channel_table, a_model, a_regime_model, some_records
@@ -112,8 +113,7 @@ def test_nothing_held_out_is_nothing_covered() -> None:
 def test_the_usual_range_is_of_the_channel_by_itself() -> None:
     member = a_model().members["a"]
     widths = usual_widths(member, TABLE)
-    marginal = np.exp(member.parts[0].tree.log_marginals[0])
+    logs = member.parts[0].tree.log_marginals[1]
+    low, high, _ = shortest_interval(np.exp(logs), member.bins[1].borders, 0.0)
+    assert widths[1] == pytest.approx(high - low)
     assert np.isnan(widths[3:]).all()
-    assert 0 < widths[0] <= member.bins[0].borders[-1] - member.bins[0].borders[0] or (
-        marginal[0] + marginal[-1] > 0.05
-    )

@@ -26,6 +26,8 @@ def test_text_stays_text_in_the_ink_of_the_page() -> None:
     picture = a_picture()
     assert "level, nats" in picture
     assert "currentColor" in picture
+    assert "font-family" not in picture
+    assert "rotate(-0" not in picture
     assert "#010203" not in picture
 
 

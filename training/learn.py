@@ -16,11 +16,13 @@ from scoring.model import Levels, Model
 from training.history.files import history_n_bytes
 from training.history.flags import history_flags, history_options
 from training.history.spool import Spool, spool_history
+from training.learn_report import learn_page
 from training.levels import Curve, set_levels
 from training.members import LEAST_OWN_RECORDS, Learned, learn_fleet, learn_member
 from training.progress import Progress
 from training.promise import Promise, promise_of
 from training.promise_words import promise_lines
+from training.report.page import write_text
 from training.rows import DEFAULT_STEP_S, Rows
 from training.season import slow_channels, unseen_nats
 from training.settings import LearnSettings, load_learn_settings
@@ -138,6 +140,12 @@ def _about(rows: Rows, one: Learned) -> dict[str, Any]:
     help="Periods to leave out: source,start,end,reason.",
 )
 @click.option(
+    "--report",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="HTML page to write: the tree, bins, held-out records, levels.",
+)
+@click.option(
     "--rejected",
     type=click.Path(path_type=Path),
     metavar="FILE",
@@ -150,6 +158,7 @@ def learn_command(
     out: Path,
     config: Path | None,
     exclude: Path | None,
+    report: Path | None,
     rejected: Path | None,
     **flags: Any,
 ) -> None:
@@ -168,7 +177,23 @@ def learn_command(
     model = write_model(result.model, out)
     for line in result_lines(result):
         click.echo(line)
+    if report is not None:
+        write_report(replace(result, model=model), spool, report)
+        click.echo(f"report written to {report}")
     click.echo(f"model {model.name} written to {out} in {time.perf_counter() - began:.1f} s")
+
+
+def write_report(result: LearnResult, spool: Spool, path: Path) -> None:
+    """Write the page on what was learned; raises BadReport."""
+    page = learn_page(
+        result.model,
+        result.learned,
+        result.promise,
+        spool.sources,
+        history_lines(spool),
+        result.seconds,
+    )
+    write_text(path, page)
 
 
 def history_lines(spool: Spool) -> list[str]:

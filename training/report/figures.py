@@ -89,6 +89,9 @@ def _inline(svg: str, alt: str) -> str:
     # Its style would hold for the whole page.
     svg = re.sub(r"<defs>\s*<style.*?</style>\s*</defs>", "", svg, flags=re.DOTALL)
     svg = _UNUSED_ID.sub("", svg).replace(_INK, "currentColor")
+    # Text is in the page's own font, and most of it is not turned.
+    svg = re.sub(r'font-family: [^;"]*;? ?', "", svg)
+    svg = re.sub(r' transform="rotate\(-0 [^"]*"', "", svg)
     box = re.search(r'viewBox="[^"]*"', svg)
     assert box is not None
     label = escape(alt, quote=True)

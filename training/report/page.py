@@ -38,7 +38,8 @@ header > div, main, footer { max-width: 44rem; margin: 0 auto; padding: 1rem; }
 h1 { font-size: 1.45rem; line-height: 1.2; margin: 0 0 .4rem; }
 h2 { font-size: 1.12rem; margin: 2.2rem 0 .4rem; padding-top: .5rem;
   border-top: 1px solid var(--rule); }
-p { margin: .5rem 0; overflow-wrap: anywhere; }
+p { margin: .5rem 0; }
+h1, h2, p, li { overflow-wrap: anywhere; }
 .advice { border-left: .3rem solid var(--rust); padding-left: .6rem; }
 .quiet, figcaption { opacity: .8; font-size: .9rem; }
 .warning { border-left: .3rem solid var(--rust); padding-left: .6rem; font-weight: 600; }
@@ -52,7 +53,9 @@ figure svg { width: 100%; height: auto; max-width: 40rem; display: block; }
 nav ul { padding: 0; list-style: none; display: flex; flex-wrap: wrap; gap: .1rem 1.1rem; }
 a { color: var(--teal); }
 .scroll { overflow-x: auto; }
-@media (min-width: 76rem) { .wide { margin-right: -15rem; } }
+@media (min-width: 79rem) { .wide { margin-right: -17rem; } }
+.wide td:not(.number, .whole) { min-width: 11rem; }
+.wide table { font-size: .88rem; }
 table { border-collapse: collapse; font-size: .92rem; min-width: 60%; }
 caption { text-align: left; opacity: .8; padding-bottom: .3rem; }
 th, td { text-align: left; padding: .25rem .8rem .25rem 0; border-bottom: 1px solid var(--rule);
