@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from scoring.bins import MAX_BINS, BinTable
 from scoring.channels import Channel
 from tests.strategies import SEEDS
-from training.binning import NodeBins, choose_bins, coarsen
+from training.binning import LADDER, NodeBins, choose_bins, coarsen, unseen_ends
 from training.choices import N_BINS
 
 Floats = NDArray[np.float64]
@@ -247,6 +247,32 @@ def test_beyond_the_range_scores_go_on_by_the_spread_of_the_channel() -> None:
             surprise(choose_bins(sample, MEASURED), sample.max() + np.array([0.4, 1.2, 4.0])),
             rtol=1e-6,
         )
+
+
+def test_what_blocks_of_time_put_beyond_each_other_is_expected_beyond_the_range() -> None:
+    # A slow climb: each block of 100 lies beyond all before it.
+    sample = np.arange(1000.0)
+    blocks = np.repeat(np.arange(10), 100)
+    assert unseen_ends(sample, blocks) == (10.0, 10.0)
+    # Blocks that agree leave half a reading at either end.
+    mixed = np.random.default_rng(1).permutation(sample)
+    below, above = unseen_ends(mixed, blocks)
+    assert 0.5 <= below <= 10.0
+    assert 0.5 <= above <= 10.0
+    assert unseen_ends(np.tile(sample[:100], 10), blocks) == (0.5, 0.5)
+    assert unseen_ends(sample[:0], blocks[:0]) == unseen_ends(sample, blocks * 0) == (0.5, 0.5)
+
+
+@pytest.mark.parametrize("n", [200, 5000])
+def test_a_range_that_blocks_do_not_agree_on_is_less_of_an_end(n: int) -> None:
+    sample = a_sample("normal", n, 17)
+    out = sample.max() + np.array([0.1, 0.5, 2.0])
+    firm = choose_bins(sample, MEASURED)
+    loose = choose_bins(sample, MEASURED, ends=(5.0, 0.01 * n))
+    assert np.all(surprise(loose, out) < surprise(firm, out))
+    assert not bins_at(loose, sample) & bins_at(loose, out)
+    below = float(loose.marginal[: len(LADDER)].sum())
+    assert below == pytest.approx(5.0 / n, rel=0.1)
 
 
 def a_state(*words: str) -> Channel:

@@ -52,18 +52,26 @@ def test_sources_come_one_after_the_other_and_look_back_no_further(rows: Rows) -
 
 def test_a_sample_is_of_its_folds_alone_and_bounded(rows: Rows) -> None:
     known = np.concatenate([c.values[c.fold == 2] for c in rows.of("long").chunks()])
-    sample = rows.of("long").sample((2,))
+    sample, _ = rows.of("long").sample((2,))
     assert np.isin(sample[:, 1], known[:, 1]).all()
-    everything = rows.sample(tuple(range(N_FOLDS)))
+    everything, _ = rows.sample(tuple(range(N_FOLDS)))
     assert 0.9 * MAX_SAMPLE < len(everything) < 1.1 * MAX_SAMPLE
-    assert len(rows.of("short").sample(tuple(range(N_FOLDS)))) == 50
+    assert len(rows.of("short").sample(tuple(range(N_FOLDS)))[0]) == 50
+
+
+def test_a_sample_says_which_block_of_time_each_record_is_from(rows: Rows) -> None:
+    _, blocks = rows.of("short").sample(tuple(range(N_FOLDS)))
+    np.testing.assert_array_equal(blocks, rows.blocks("short").number(times(50)))
+    _, both = rows.sample((0,))
+    long, short = (set(rows.of(s).sample((0,))[1].tolist()) for s in ("long", "short"))
+    assert len(set(both.tolist())) == len(long) + len(short)
 
 
 def test_a_sample_depends_on_times_alone(rows: Rows) -> None:
     rng = np.random.default_rng(1)
     with spool_of({"long": rng.normal(size=(70_000, 2))}) as again:
         other = Rows(again, TABLE, ("long",), 60.0).sample((0, 1))
-    np.testing.assert_array_equal(rows.of("long").sample((0, 1)), other)
+    np.testing.assert_array_equal(rows.of("long").sample((0, 1))[0], other[0])
 
 
 def test_stretches_left_out_are_marked_and_not_sampled(spool: Spool) -> None:
@@ -71,7 +79,7 @@ def test_stretches_left_out_are_marked_and_not_sampled(spool: Spool) -> None:
     rows = Rows(spool, TABLE, ("short",), 60.0, {"short": np.array([[first, last]])})
     (chunk,) = rows.chunks()
     assert np.flatnonzero(~chunk.kept).tolist() == list(range(10, 21))
-    assert len(rows.sample(tuple(range(N_FOLDS)))) == 39
+    assert len(rows.sample(tuple(range(N_FOLDS)))[0]) == 39
     # Left out of the tables, never of the levels: the records themselves still come.
     assert len(chunk.times_ns) == 50
 

@@ -207,6 +207,12 @@ def held_out_gains(
     return gains
 
 
+@njit(cache=True, nogil=True)
+def _moves(counts: Floats) -> bool:
+    """Return whether more than one bin was met: a constant channel goes with nothing."""
+    return int((counts > 0.0).sum()) > 1
+
+
 @njit(cache=True, parallel=True)
 def _weigh(
     counts: NDArray[np.int64],
@@ -229,6 +235,9 @@ def _weigh(
         empty = np.empty(0)
         left_scores = empty if is_state[a] else scores[a, : n - 1]
         right_scores = empty if is_state[b] else scores[b, : m - 1]
+        total = _over_folds(cells)
+        if not (_moves(total.sum(axis=1)) and _moves(total.sum(axis=0))):
+            continue
         own, other = marginal[a, :n], marginal[b, :m]
         shapes = held_out_shapes(cells, own, other, left_scores, right_scores)
         found = held_out_gains(cells, shapes, own, other, masses, shares)
