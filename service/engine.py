@@ -97,8 +97,8 @@ class Engine(Protocol):
         """Level by kind of alert, nats: `record` and `sustained`."""
 
     @property
-    def about(self) -> Mapping[str, Any]:
-        """Figures for people: when it was learned, held-out figures."""
+    def figures(self) -> Mapping[str, float]:
+        """What the model says of itself, by the names in metrics.FIGURE_HELP."""
 
     def score(
         self,

@@ -10,7 +10,6 @@ from __future__ import annotations
 import threading
 from collections import Counter
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
-from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -311,10 +310,8 @@ class _Collector:
         yield info
         if engine is None:
             return
-        for key, help_text in _ABOUT_HELP.items():
-            figure = _figure(engine.about, key)
-            if figure is not None:
-                yield GaugeMetricFamily(f"oddbranch_{key}", help_text, value=figure)
+        for key, figure in engine.figures.items():
+            yield GaugeMetricFamily(f"oddbranch_{key}", FIGURE_HELP[key], value=figure)
 
 
 _GAUGE_HELP = {
@@ -323,21 +320,16 @@ _GAUGE_HELP = {
     "queue_records": "Records that wait for their commit.",
     "body_memory_bytes": "Bodies held in memory.",
     "start_timestamp_seconds": "When the service started.",
+    "model_published_timestamp_seconds": "When the model in use was published.",
 }
-# Figures that a model may carry about itself, by the name of their metric.
-_ABOUT_HELP = {
-    "model_created_timestamp_seconds": "When the model was learned.",
-    "model_held_out_density_nats": "Held-out log density per record and unit.",
+# What a model may say of itself, by the name of its metric.
+FIGURE_HELP = {
+    "model_history_end_timestamp_seconds": "Time of the last record that the model learned from.",
+    "model_history_records": "Records that the model learned from.",
+    "model_members": "Sources that the model knows themselves.",
+    "model_held_out_surprise_nats": "Mean surprise of a record held out from learning.",
     "alarm_budget_alerts_per_day": "Alerts a day that the crew can follow up.",
-    "model_expected_alerts_per_day": "Alerts a day that the model expects.",
 }
-
-
-def _figure(about: Mapping[str, Any], key: str) -> float | None:
-    value = about.get(key.removeprefix("model_"), about.get(key))
-    if isinstance(value, bool) or not isinstance(value, int | float):
-        return None
-    return float(value)
 
 
 def _counter(name: str, help_text: str, label: str, counts: Mapping[str, int]) -> Metric:

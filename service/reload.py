@@ -29,6 +29,7 @@ class ModelWatch:
         self.path, self.load, self.metrics, self.limits = path, load, metrics, limits
         self._in_use: tuple[Engine, Parser] | None = None
         self._mark: _Mark | None = None
+        self._published_s = 0.0
         # Why the model that lies there now is not in use, for the readiness answer.
         self.refusal: str | None = None
 
@@ -42,6 +43,11 @@ class ModelWatch:
         """The model in use and the parser of its layout, which change together."""
         assert self._in_use is not None, "open the service first"
         return self._in_use
+
+    @property
+    def published_s(self) -> float:
+        """When the model in use was published, seconds since 1970."""
+        return self._published_s
 
     def load_first(self) -> None:
         """Load the model or raise OddbranchError: without one there is nothing to serve."""
@@ -68,6 +74,8 @@ class ModelWatch:
             self._in_use = self._ready(engine)
 
     def _ready(self, engine: Engine) -> tuple[Engine, Parser]:
+        if self._mark is not None:
+            self._published_s = self._mark[1] / 1e9
         limits = self.limits
         parser = Parser(engine.layout, n_batch_max=limits.n_batch, n_readings_max=limits.n_readings)
         return engine, parser

@@ -129,6 +129,7 @@ class Service:
             "queue_records": float(self.writer.n_waiting),
             "body_memory_bytes": float(self.n_body_bytes),
             "start_timestamp_seconds": self.started_s,
+            "model_published_timestamp_seconds": self.models.published_s,
         }
         size = self.database.n_bytes()
         if size is not None:

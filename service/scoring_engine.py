@@ -33,7 +33,7 @@ class ScoringEngine:
             "record": model.levels.record,
             "sustained": model.levels.sustained,
         }
-        self.about: Mapping[str, Any] = model.about
+        self.figures: Mapping[str, float] = _figures(model)
         self._scorer = Scorer(model)
         self._scorer.warm()
         self._neighbours = lru_cache(maxsize=_N_CACHED_NEIGHBOURS)(self._find_neighbours)
@@ -149,6 +149,28 @@ class ScoringEngine:
 def load_engine(path: Path) -> ScoringEngine:
     """Return the model of a directory, ready to score; raises BadArtefact."""
     return ScoringEngine(read_model(path))
+
+
+def _figures(model: Model) -> dict[str, float]:
+    """Return what the model says of itself; a figure it does not have is left out."""
+    about = model.about
+    figures = {"model_members": float(len(model.members))}
+    for name, key, scale in (
+        ("model_history_records", "n_records", 1.0),
+        ("model_history_end_timestamp_seconds", "last_ns", 1e-9),
+        ("alarm_budget_alerts_per_day", "alerts_per_day", 1.0),
+    ):
+        if about.get(key) is not None:
+            figures[name] = about[key] * scale
+    held_out = [
+        (member.about["held_out_records"], member.about["held_out_surprise"])
+        for member in model.members.values()
+        if member.about.get("held_out_records")
+    ]
+    if held_out:
+        n_records = sum(n for n, _ in held_out)
+        figures["model_held_out_surprise_nats"] = sum(n * x for n, x in held_out) / n_records
+    return figures
 
 
 def _edges(model: Model, member: Member) -> list[dict[str, Any]]:

@@ -60,7 +60,7 @@ class FakeEngine:
         self.name = name
         self.layout = Layout(channels)
         self.levels: Mapping[str, float] = {"record": 30.0, "sustained": 20.0}
-        self.about: Mapping[str, Any] = {"created_timestamp_seconds": 1.8e9}
+        self.figures: Mapping[str, float] = {"alarm_budget_alerts_per_day": 2.0}
         self.fail_on: str | None = None
 
     def score(

@@ -105,10 +105,12 @@ def test_requests_are_counted_by_route_and_unknown_paths_are_one(api: Api) -> No
     assert value(api, "batch_records_sum") == 1
 
 
-def test_the_model_and_the_store_are_shown(api: Api) -> None:
+def test_the_model_and_the_store_are_shown(api: Api, tmp_path: Path) -> None:
     assert value(api, "model_info", model="0123456789abcdef") == 1
     assert value(api, "level_nats", kind="record") == 30
-    assert value(api, "model_created_timestamp_seconds") == 1.8e9
+    assert value(api, "alarm_budget_alerts_per_day") == 2
+    published = value(api, "model_published_timestamp_seconds")
+    assert published == pytest.approx((tmp_path / "model" / "model.json").stat().st_mtime)
     size, free, queue = (
         value(api, n) for n in ("store_size_bytes", "store_free_bytes", "queue_records")
     )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -12,6 +13,7 @@ from scoring.artefact import write_model
 from scoring.errors import BadArtefact
 from scoring.scorer import Scorer
 from scoring.standing import Standing
+from service.metrics import FIGURE_HELP
 from service.scoring_engine import ScoringEngine, load_engine
 from service.times import format_time
 from tests.models import a_model, some_records
@@ -96,6 +98,22 @@ def test_neighbours_and_edges_are_the_trees(engine: ScoringEngine) -> None:
     pairs = [(edge["left"], edge["right"]) for edge in described["edges"]]
     assert pairs[0] == ("in", "out")
     assert described["levels"] == {"record": 12.0, "sustained": 3.0}
+
+
+def test_a_model_says_of_itself_what_it_has() -> None:
+    model = a_model()
+    assert ScoringEngine(model).figures == {"model_members": 1.0}
+    member = replace(model.members["a"], about={"held_out_records": 100, "held_out_surprise": 7.5})
+    about = {"n_records": 9, "alerts_per_day": 2.0, "last_ns": 5 * 10**9}
+    engine = ScoringEngine(replace(model, members={"a": member}, about=about))
+    assert engine.figures == {
+        "model_members": 1.0,
+        "model_history_records": 9.0,
+        "model_history_end_timestamp_seconds": 5.0,
+        "alarm_budget_alerts_per_day": 2.0,
+        "model_held_out_surprise_nats": 7.5,
+    }
+    assert set(engine.figures) <= set(FIGURE_HELP)
 
 
 def test_over_http_the_answers_are_the_scorers(path: Path, tmp_path: Path) -> None:
