@@ -23,11 +23,16 @@ from training.progress import Progress
 from training.promise import Promise, promise_of
 from training.promise_words import promise_lines
 from training.report.page import write_text
+from training.report.readings import time_text
 from training.rows import DEFAULT_STEP_S, Rows
 from training.season import slow_channels, unseen_nats
 from training.settings import LearnSettings, load_learn_settings
 from training.stillness import with_stillness
 from training.treetext import tree_lines
+from training.trouble import as_left_out
+
+# Stretches left out that the terminal lists; the report has them all.
+MAX_STRETCHES_SHOWN = 12
 
 
 @dataclass(frozen=True)
@@ -75,7 +80,10 @@ def learn_model(
         # share of the budget.
         budget = settings.budget.alerts_per_day * len(enough) / max(len(spool.sources), 1)
         held_out = {s: one.held_out for s, one in learned.items()}
-        levels, members, curve = set_levels(rows, members, held_out, start, budget)
+        left_out = {s: as_left_out(one.left_out) for s, one in learned.items() if one.left_out}
+        levels, members, curve = set_levels(
+            rows, members, held_out, start, budget, left_out=left_out
+        )
     promise = None
     if curve is not None:
         unseen = unseen_nats(members, held_out)
@@ -227,6 +235,25 @@ def _regime_words(result: LearnResult, one: Learned) -> str:
     return f"{len(one.density.regimes)} trees by {by}, "
 
 
+def left_out_lines(result: LearnResult) -> list[str]:
+    """Return which stretches the tables did not use, and both alert rates."""
+    stretches = [stretch for one in result.learned.values() for stretch in one.left_out]
+    if not stretches or result.curve is None:
+        return []
+    days = result.curve.source_days / result.curve.n_sources
+    seen = int(result.curve.seen[result.curve.chosen])
+    lines = [
+        f"{len(stretches)} stretches ({100 * result.curve.left_share:.2f} % of the records) are "
+        "far more surprising than the rest: tables do not use them, levels do; at these levels "
+        f"{seen / days:.2f} alerts a day with them, {result.curve.seen_without / days:.2f} without"
+    ]
+    return lines + [
+        f"  {stretch.source}: {time_text(stretch.start_ns)} to {time_text(stretch.end_ns)}, "
+        f"{stretch.n_records} records, up to {stretch.peak:.0f} nats above the usual"
+        for stretch in sorted(stretches, key=lambda s: -s.peak)[:MAX_STRETCHES_SHOWN]
+    ]
+
+
 def result_lines(result: LearnResult) -> list[str]:
     """Return what was learned: the tree, held-out figures, levels."""
     model = result.model
@@ -245,6 +272,7 @@ def result_lines(result: LearnResult) -> list[str]:
                 f"held-out surprise {one.held_out.density:.2f} nats a record "
                 f"over {one.held_out.n_scored} records"
             )
+    lines += left_out_lines(result)
     if result.promise is None:
         lines.append("no source has history enough for levels of its own: no alert will be raised")
         return lines

@@ -51,7 +51,8 @@ class Curve:
     tail where too few were seen. time_share: (n,) of records that held an alert.
     by_day: (n, n_days) seen episodes by day of held-out time.
     source_days: judged time summed over sources. n_sources: how many those are.
-    chosen: the place that keeps the budget.
+    chosen: the place that keeps the budget. left_share: share of the records that lie in
+    stretches left out of the tables; seen_without: episodes of the chosen pair without them.
     """
 
     record: Floats
@@ -66,10 +67,14 @@ class Curve:
     scales: tuple[Scale, Scale]
     allowed: float
     chosen: int
+    left_share: float = 0.0
+    seen_without: int = 0
 
     def place(self, allowed: float) -> int:
         """Return the loosest pair that, with every stricter one, keeps to a count."""
-        bad = (self.expected > allowed) | (self.seen > allowed) | (self.time_share > MAX_TIME_SHARE)
+        # Stretches of trouble are in alert and should be; the limit is for the rest.
+        too_long = self.time_share > MAX_TIME_SHARE + self.left_share
+        bad = (self.expected > allowed) | (self.seen > allowed) | too_long
         first_bad = int(np.argmax(bad)) if bad.any() else len(bad)
         return max(first_bad - 1, 0)
 
@@ -81,6 +86,7 @@ def set_levels(
     start: Levels,
     alerts_per_day: float,
     settings: AlertSettings | None = None,
+    left_out: dict[str, Ints] | None = None,
 ) -> tuple[Levels, dict[str, Member], Curve | None]:
     """Return levels that keep to the budget, members with their usual sustained, the curve.
 
@@ -89,7 +95,7 @@ def set_levels(
     start, and there is no curve.
     """
     kept = [_keep(rows, members[source], held_out[source], start) for source in members]
-    curve = curve_of(kept, start, alerts_per_day, settings or AlertSettings())
+    curve = curve_of(kept, start, alerts_per_day, settings or AlertSettings(), left_out or {})
     rest = {one.source: one.usual for one in kept}
     members = {s: replace(m, usual=replace(m.usual, sustained=rest[s])) for s, m in members.items()}
     return levels_at(curve, start, max(rest.values(), default=0.0)), members, curve
@@ -109,7 +115,11 @@ def levels_at(curve: Curve | None, start: Levels, usual: float) -> Levels:
 
 
 def curve_of(
-    kept: list[HeldExcess], start: Levels, alerts_per_day: float, settings: AlertSettings
+    kept: list[HeldExcess],
+    start: Levels,
+    alerts_per_day: float,
+    settings: AlertSettings,
+    left_out: dict[str, Ints] | None = None,
 ) -> Curve | None:
     """Return how often pairs of levels are passed in held-out time, the budget's one chosen.
 
@@ -125,7 +135,7 @@ def curve_of(
         _tried(sustained, highest),
     )
     scales = _scales(sources, tried, start, settings)
-    return _curve(sources, scales, start, settings, alerts_per_day)
+    return _curve(sources, scales, start, settings, alerts_per_day, left_out or {})
 
 
 def _keep(rows: Rows, member: Member, held_out: HeldOut, start: Levels) -> HeldExcess:
@@ -215,6 +225,7 @@ def _curve(
     start: Levels,
     settings: AlertSettings,
     alerts_per_day: float,
+    left_out: dict[str, Ints],
 ) -> Curve:
     usual = max(one.usual for one in sources)
     source_days = sum(one.n_judged for one in sources) * start.step_s * 1e9 / DAY_NS
@@ -246,15 +257,45 @@ def _curve(
         scales=scales,
         allowed=allowed,
         chosen=0,
+        left_share=_left_share(sources, left_out),
     )
-    return replace(curve, chosen=curve.place(allowed))
+    curve = replace(curve, chosen=curve.place(allowed))
+    if not left_out:
+        return replace(curve, seen_without=int(seen[curve.chosen]))
+    at = [curve.chosen]
+    alone_pair = Pairs(pairs.record[at], pairs.sustained[at], pairs.cap[at])
+    without = _by_day(Sweep(alone_pair, start, settings), sources, left_out)
+    return replace(curve, seen_without=int(without.sum()))
 
 
-def _by_day(sweep: Sweep, sources: list[HeldExcess]) -> Ints:
-    """Return episodes of each pair by day of the fleet, (n_pairs, n_days)."""
+def _left_share(sources: list[HeldExcess], left_out: dict[str, Ints]) -> float:
+    """Return the share of judged records that lie in stretches left out of the tables."""
+    n = 0
+    for one in sources:
+        for times_ns, excess in one.chunks():
+            n += int((_inside(times_ns, left_out.get(one.source)) & ~np.isnan(excess)).sum())
+    return n / max(sum(one.n_judged for one in sources), 1)
+
+
+def _inside(times_ns: Ints, stretches: Ints | None) -> NDArray[np.bool_]:
+    inside = np.zeros(len(times_ns), dtype=bool)
+    for start, end in stretches if stretches is not None else ():
+        inside |= (times_ns >= start) & (times_ns <= end)
+    return inside
+
+
+def _by_day(
+    sweep: Sweep, sources: list[HeldExcess], left_out: dict[str, Ints] | None = None
+) -> Ints:
+    """Return episodes of each pair by day of the fleet, (n_pairs, n_days).
+
+    left_out: stretches of each source that are passed over.
+    """
     found: dict[int, Ints] = {}
     for one in sources:
         for times_ns, excess in one.chunks():
+            inside = _inside(times_ns, (left_out or {}).get(one.source))
+            excess = np.where(inside, np.nan, excess)
             marks = sweep.add(one.source, one.usual, times_ns, excess)
             for day in np.unique(times_ns[~np.isnan(excess)] // DAY_NS).tolist():
                 found.setdefault(day, np.zeros(len(sweep.pairs), dtype=np.int64))

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -13,6 +13,7 @@ from training.blocks import N_FOLDS
 from training.crossfit import HeldOut, hold_out, member_of, score_values, usual_of
 from training.fit import Density, fit, fit_regimes
 from training.rows import Rows
+from training.trouble import Stretch, as_left_out, find_trouble
 
 # A source with fewer records is scored by the fleet's member.
 LEAST_OWN_RECORDS = 200
@@ -25,11 +26,12 @@ MAX_REGIME_STATES = 4
 
 @dataclass(frozen=True)
 class Learned:
-    """One member with how it was learned."""
+    """One member with how it was learned, and the stretches its tables did not use."""
 
     member: Member
     density: Density
     held_out: HeldOut
+    left_out: list[Stretch] = field(default_factory=list)
 
 
 def learn_member(rows: Rows, source: str, folder: Path) -> Learned:
@@ -37,11 +39,21 @@ def learn_member(rows: Rows, source: str, folder: Path) -> Learned:
 
     Where state channels may choose a regime, a tree for each combination is learned too,
     and kept if held-out records are less surprising by more than the doubt of that.
+    Stretches of trouble are left out of the tables, and the rest is learned again.
     """
-    own = rows.of(source)
+    best = _best(rows.of(source), source, folder)
+    left_out = find_trouble(rows.of(source), source, best.held_out)
+    if not left_out:
+        return best
+    best.held_out.path.unlink()
+    without = replace(rows.of(source), left_out={source: as_left_out(left_out)})
+    return replace(_best(without, source, folder), left_out=left_out)
+
+
+def _best(own: Rows, source: str, folder: Path) -> Learned:
     best, unseen = _plain(own, source, folder)
     plain_density = best.density
-    for regime in regimes_to_try(rows.table):
+    for regime in regimes_to_try(own.table):
         density = fit_regimes(own, plain_density, regime)
         if not density.regimes:
             continue
