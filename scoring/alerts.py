@@ -140,10 +140,7 @@ class Alert:
 
     def as_json(self) -> dict[str, Any]:
         """Return the alert as clients see it: times as RFC 3339 under names without _ns."""
-        shown = _with_times(self.to_dict())
-        shown["suspects"] = [_with_times(asdict(one)) for one in self.suspects]
-        shown["notes"] = [_with_times(asdict(one)) for one in self.notes]
-        return shown | {"in_budget": self.in_budget, "advice": ADVICE}
+        return _with_times(self.to_dict()) | {"in_budget": self.in_budget, "advice": ADVICE}
 
 
 @dataclass(frozen=True, slots=True)
@@ -166,6 +163,19 @@ class Event:
     by: str = ""
     comment: str = ""
     details: dict[str, Any] = field(default_factory=dict)
+
+    def as_json(self) -> dict[str, Any]:
+        """Return the event as clients see it, times as RFC 3339."""
+        return {
+            "what": self.what,
+            "source": self.source,
+            "time": time_text(self.time_ns),
+            "alert": None if self.alert is None else self.alert.as_json(),
+            "annunciate": self.annunciate,
+            "by": self.by,
+            "comment": self.comment,
+            "details": _with_times(self.details),
+        }
 
 
 def blank_alert(source: str, kind: str, level: str, since_ns: int, at_ns: int, model: str) -> Alert:
@@ -196,12 +206,14 @@ def time_text(time_ns: int) -> str:
     return f"{text}.{rest:09d}".rstrip("0") + "Z" if rest else text + "Z"
 
 
-def _with_times(data: dict[str, Any]) -> dict[str, Any]:
-    """Return the same with every `_ns` number as a time."""
+def _with_times(data: Mapping[str, Any]) -> dict[str, Any]:
+    """Return the same with every `_ns` number as a time, also inside lists."""
     shown: dict[str, Any] = {}
     for name, value in data.items():
         if name.endswith("_ns"):
             shown[name.removesuffix("_ns")] = None if value is None else time_text(value)
+        elif isinstance(value, list | tuple):
+            shown[name] = [_with_times(one) if isinstance(one, dict) else one for one in value]
         else:
-            shown[name] = list(value) if isinstance(value, tuple) else value
+            shown[name] = value
     return shown

@@ -12,6 +12,7 @@ from scoring.alerts import (
     SCORED,
     STUCK,
     Alert,
+    Event,
     Note,
     Suspect,
     alert_id,
@@ -52,6 +53,17 @@ def test_clients_see_times_the_advice_and_an_open_side_as_null() -> None:
     assert shown["in_budget"] is True
     assert shown["advice"] == ADVICE
     assert not [name for name in shown if name.endswith("_ns")]
+
+
+def test_clients_see_an_event_with_its_alert_and_its_times() -> None:
+    details = {"until_ns": AT_NS, "alerts": [{"time_ns": AT_NS, "source": "a"}], "n": 3}
+    event = Event("shelved", "mill-lane", AT_NS, ALERT, by="kit", comment="known", details=details)
+    shown = json.loads(json.dumps(event.as_json(), allow_nan=False))
+    assert shown["alert"] == ALERT.as_json()
+    assert (shown["what"], shown["by"], shown["annunciate"]) == ("shelved", "kit", False)
+    assert shown["time"] == shown["details"]["until"] == "2026-12-01T04:00:10Z"
+    assert shown["details"]["alerts"] == [{"time": "2026-12-01T04:00:10Z", "source": "a"}]
+    assert Event("flood_ended", "", AT_NS).as_json()["alert"] is None
 
 
 def test_the_advice_line_says_what_it_replaces_and_who_decides() -> None:
