@@ -94,17 +94,18 @@ class Episodes:
         return after, tuple(attendance.turn.events)
 
     def tick(
-        self, source: str, standing: AlertStanding, now_ns: int
+        self, source: str, standing: AlertStanding, now_ns: int, listening_ns: int = -1
     ) -> tuple[AlertStanding, tuple[Event, ...]]:
         """Return the standing and what happened by the time `now_ns` of the caller's clock.
 
         A source falls silent, a shelf or a time out of service ends, an alert that still
         stands is raised again.
+        listening_ns: since when the caller could have heard it: silence before that is the
+        caller's own.
         """
         rules = self._rules_for(source)
-        is_silent = (
-            standing.heard_ns >= 0 and now_ns - standing.heard_ns >= rules.silent_s * NS_PER_S
-        )
+        unheard_ns = now_ns - max(standing.heard_ns, listening_ns)
+        is_silent = standing.heard_ns >= 0 and unheard_ns >= rules.silent_s * NS_PER_S
         if not (is_silent or standing.cases or standing.shelves or standing.out_of_service):
             return standing, ()
         turn = Turn(source, standing, self.settings, rules.hold_s)
