@@ -114,8 +114,9 @@ class Episodes:
             # Put back just now: it gets the usual time before it is missed.
             standing = replace(standing, heard_ns=max(standing.heard_ns, now_ns))
         elif turn.is_out_of_service(now_ns):
-            standing = standing.started_anew()
-            turn.clear_all(now_ns, WENT_OUT_OF_SERVICE)
+            if turn.cases:
+                standing = standing.started_anew()
+                turn.clear_all(now_ns, WENT_OUT_OF_SERVICE)
         elif is_silent and SILENT not in turn.cases:
             turn.open(SILENT, now_ns, Case(self._silent(source, standing, now_ns), -1))
         if not turn.events and turn.left() == {

@@ -134,7 +134,9 @@ def test_a_source_put_back_is_given_its_time_before_it_is_missed() -> None:
     fed = raised()
     act(fed, "out_of_service", comment="works")
     assert fed.open == ()
+    before = fed.standing
     assert fed.tick(START_NS + DAY_NS) == []
+    assert fed.standing is before
     (event,) = act(fed, "back_in_service", at_ns=START_NS + DAY_NS)
     assert event.details["reason"] == "works"
     assert event.details["end_ns"] == START_NS + DAY_NS
