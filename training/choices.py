@@ -72,6 +72,7 @@ def _edge_gains(
     is_state: NDArray[np.bool_],
     masses: Floats,
     shares: Floats,
+    given: Floats,
     by_mass: Floats,
     by_share: Floats,
 ) -> None:
@@ -89,7 +90,7 @@ def _edge_gains(
         right_scores = empty if is_state[b] else scores[b, : m - 1]
         cells = np.ascontiguousarray(counts[:, e, :n, :m])
         p, q = marginal[a, :n], marginal[b, :m]
-        shapes = held_out_shapes(cells, p, q, left_scores, right_scores)
+        shapes = held_out_shapes(cells, p, q, left_scores, right_scores, given[e])
         found = held_out_gains(cells, shapes, p, q, masses, middle)
         by_mass[e] = found[:, :, 0].sum(axis=0)
         best = np.argmax(by_mass[e])
@@ -124,11 +125,13 @@ def choose(
     right: Ints,
     unions: Callable[[int], Unions],
     n_bins_tried: tuple[int, ...] = N_BINS,
+    given: Floats | None = None,
 ) -> Choice:
     """Return the best choice for one tree.
 
     counts: (n_folds, n_edges, fine width, fine width) joint counts of the edges' nodes.
-    unions: gives the nodes on a wanted number of bins.
+    unions: gives the nodes on a wanted number of bins. given: (n_edges,) correlations that
+    the fleet has settled.
     """
     n_rows = max(1, int(counts.sum(axis=(0, 2, 3)).max(initial=0)))
     enough = tuple(k for k in n_bins_tried if k * LEAST_RECORDS_A_BIN <= n_rows)
@@ -136,6 +139,7 @@ def choose(
     if not len(left):
         return Choice(n_bins_tried[len(n_bins_tried) // 2], np.zeros(0), SHARES[2])
     masses, shares = np.array(MASSES), np.array(SHARES)
+    settled = np.full(len(left), np.nan) if given is None else given
     tried: list[Tried] = []
     for n_bins in n_bins_tried:
         coarse, into = unions(n_bins)
@@ -146,7 +150,7 @@ def choose(
         by_mass = np.zeros((len(left), len(masses)))
         by_share = np.zeros((len(left), len(shares)))
         _edge_gains(
-            merged, left, right, sizes, marginal, scores, is_state, masses, shares,
+            merged, left, right, sizes, marginal, scores, is_state, masses, shares, settled,
             by_mass, by_share,
         )  # fmt: skip
         tried.append(Tried(n_bins, by_mass / n_rows, by_share / n_rows))

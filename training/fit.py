@@ -24,7 +24,13 @@ from training.blocks import N_FOLDS
 from training.choices import N_BINS, Choice, Unions, choose, merge_counts
 from training.counts import count_pairs
 from training.rows import Rows
-from training.structure import CoarseNode, edge_weights, pair_shape, spanning_forest
+from training.structure import (
+    CoarseNode,
+    edge_correlation,
+    edge_weights,
+    pair_shape,
+    spanning_forest,
+)
 from training.tables import log_ratio, mutual_information, shaped_joint
 
 Floats = NDArray[np.float64]
@@ -41,18 +47,35 @@ LEAST_REGIME_RECORDS, LEAST_REGIME_SHARE, MAX_REGIMES = 300, 0.005, 16
 
 @dataclass(frozen=True)
 class Fitted:
-    """One tree on given bins. weights: (n_nodes, n_nodes) nats. n_records: learned from."""
+    """One tree on given bins.
+
+    weights: (n_nodes, n_nodes) nats. correlations: of all pairs' normal scores, NaN where
+    one is a state. n_records: learned from.
+    """
 
     nodes: list[NodeBins]
     tree: Tree
     choice: Choice
     weights: Floats
     n_records: int
+    correlations: Floats
 
     @property
     def edges(self) -> list[tuple[int, int]]:
         """The tree's edges as pairs of nodes."""
         return [(int(a), int(b)) for a, b in self.tree.edges]
+
+
+@dataclass(frozen=True)
+class SharedTree:
+    """A structure that sources agree on. correlations: (n_edges,), NaN beside a state."""
+
+    edges: list[tuple[int, int]]
+    correlations: Floats
+
+
+# For the plain tree under (), for each regime under its key.
+Shared = dict[tuple[int, ...], SharedTree]
 
 
 @dataclass(frozen=True)
@@ -97,12 +120,29 @@ class Density:
         return math.log(max(1.0 - named, 1e-12))
 
 
+def agreed(trees: list[Fitted], table: ChannelTable) -> SharedTree:
+    """Return the forest and correlations that several sources' trees agree on.
+
+    Weights and correlations are averaged by records.
+    """
+    share = np.array([tree.n_records for tree in trees], dtype=np.float64)
+    weights = np.average([tree.weights for tree in trees], axis=0, weights=share)
+    correlations = np.average([tree.correlations for tree in trees], axis=0, weights=share)
+    required, forbidden = _site_says(table)
+    edges = spanning_forest(weights, required, forbidden)
+    return SharedTree(edges, np.array([correlations[a, b] for a, b in edges]))
+
+
 def fit(
-    rows: Rows, folds: tuple[int, ...] = tuple(range(N_FOLDS)), like: Density | None = None
+    rows: Rows,
+    folds: tuple[int, ...] = tuple(range(N_FOLDS)),
+    like: Density | None = None,
+    shared: Shared | None = None,
 ) -> Density:
     """Learn the density of some rows from the given folds, one tree over all records.
 
-    like: a density whose structure and choices are taken over.
+    like: a density whose structure and choices are taken over. shared: structures and
+    correlations to take over; bins, marginals and counts stay the rows' own.
     """
     sample, blocks = rows.sample(folds)
     fine = []
@@ -112,7 +152,13 @@ def fit(
         ends = unseen_ends(readings, blocks[there])
         fine.append(choose_bins(readings, channel, ends=ends))
     reader = _Reader(rows, folds, BinTable.of(tuple(node.bins for node in fine)))
-    plain = _fit_tree(reader, fine, partial(_unions, fine), like.plain if like else None)
+    plain = _fit_tree(
+        reader,
+        fine,
+        partial(_unions, fine),
+        like.plain if like else None,
+        shared=shared[()] if shared else None,
+    )
     return Density(fine, plain)
 
 
@@ -122,6 +168,7 @@ def fit_regimes(
     regime: tuple[int, ...],
     folds: tuple[int, ...] = tuple(range(N_FOLDS)),
     like: Density | None = None,
+    shared: Shared | None = None,
 ) -> Density:
     """Add a tree for each combination of the regime's channels that is not rare.
 
@@ -144,6 +191,7 @@ def fit_regimes(
             partial(_same, (merged, into)),
             like.regimes[key] if like else None,
             (n_bins,),
+            shared.get(key) if shared else None,
         )
     return Density(density.fine, density.plain, regime, regimes)
 
@@ -194,33 +242,46 @@ def _fit_tree(
     unions: Callable[[int], Unions],
     like: Fitted | None,
     n_bins_tried: tuple[int, ...] = N_BINS,
+    shared: SharedTree | None = None,
 ) -> Fitted:
     """Weigh pairs, choose edges, bins, masses and share, and make the tables of one tree."""
-    weights = np.zeros((len(fine), len(fine)))
-    if like is None:
-        weights, edges = _structure(reader, fine)
-    else:
+    weights = correlations = np.zeros((len(fine), len(fine)))
+    if shared is not None:
+        edges = shared.edges
+    elif like is not None:
         edges = like.edges
+    else:
+        weights, correlations, edges = _structure(reader, fine)
+    given = shared.correlations if shared is not None else np.full(len(edges), np.nan)
     left = np.array([e[0] for e in edges], dtype=np.int64)
     right = np.array([e[1] for e in edges], dtype=np.int64)
     same = [np.arange(node.n_bins, dtype=np.uint8) for node in fine]
     counts, n_records = reader.count(same, left, right, max(node.n_bins for node in fine))
-    choice = like.choice if like else choose(counts, left, right, unions, n_bins_tried)
+    choice = like.choice if like else choose(counts, left, right, unions, n_bins_tried, given)
     nodes, into = unions(choice.n_bins)
     width = max(node.n_bins for node in nodes)
     merged = merge_counts(counts.sum(axis=0)[None], into, left, right, width)[0]
-    return Fitted(nodes, build_tree(nodes, merged, edges, choice), choice, weights, n_records)
+    tree = build_tree(nodes, merged, edges, choice, given)
+    return Fitted(nodes, tree, choice, weights, n_records, correlations)
 
 
 def build_tree(
-    nodes: list[NodeBins], counts: Floats, edges: list[tuple[int, int]], choice: Choice
+    nodes: list[NodeBins],
+    counts: Floats,
+    edges: list[tuple[int, int]],
+    choice: Choice,
+    given: Floats | None = None,
 ) -> Tree:
-    """Return the tree with shaped, raked tables. counts: (n_edges, width, width)."""
+    """Return the tree with shaped, raked tables.
+
+    counts: (n_edges, width, width). given: (n_edges,) correlations, NaN for the counts' own.
+    """
     tables, nats = [], []
     for e, (a, b) in enumerate(edges):
         p, q = nodes[a].marginal, nodes[b].marginal
         cells = np.ascontiguousarray(counts[e, : len(p), : len(q)])
-        shape = pair_shape(cells, p, q, nodes[a].scores, nodes[b].scores)
+        settled = np.nan if given is None else float(given[e])
+        shape = pair_shape(cells, p, q, nodes[a].scores, nodes[b].scores, settled)
         joint = shaped_joint(cells, shape, float(choice.mass[e]), choice.share, p, q)
         tables.append(log_ratio(joint, p, q))
         nats.append(mutual_information(joint, p, q))
@@ -232,17 +293,25 @@ def build_tree(
     )
 
 
-def _structure(reader: _Reader, fine: list[NodeBins]) -> tuple[Floats, list[tuple[int, int]]]:
-    """Weigh all pairs on coarse bins and return the weights and the forest's edges."""
+def _structure(
+    reader: _Reader, fine: list[NodeBins]
+) -> tuple[Floats, Floats, list[tuple[int, int]]]:
+    """Weigh all pairs on coarse bins; return weights, correlations and the forest's edges."""
     left, right = np.triu_indices(len(fine), 1)
     wanted = WEIGHING_BINS_FEW if len(left) <= FEW_PAIRS else WEIGHING_BINS_MANY
     merged = [by_mass(node, wanted) for node in fine]
     width = max(len(node.marginal) for node, _ in merged)
     counts, _ = reader.count([into for _, into in merged], left, right, width)
     weights, doubt = edge_weights(counts, left, right, [node for node, _ in merged])
+    correlations = np.zeros_like(weights)
+    for p, (a, b) in enumerate(zip(left.tolist(), right.tolist(), strict=True)):
+        one, other = merged[a][0], merged[b][0]
+        cells = counts[:, p, : len(one.marginal), : len(other.marginal)].sum(axis=0)
+        r = edge_correlation(cells.astype(np.float64), one, other)
+        correlations[a, b] = correlations[b, a] = r
     required, forbidden = _site_says(reader.rows.table)
     paying = np.where(weights > LEAST_ERRORS * doubt, weights, -1.0)
-    return weights, spanning_forest(paying, required, forbidden)
+    return weights, correlations, spanning_forest(paying, required, forbidden)
 
 
 def _site_says(

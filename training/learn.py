@@ -18,7 +18,7 @@ from training.history.flags import history_flags, history_options
 from training.history.spool import Spool, spool_history
 from training.learn_report import learn_page
 from training.levels import Curve, set_levels
-from training.members import LEAST_OWN_RECORDS, Learned, learn_fleet, learn_member
+from training.members import LEAST_OWN_RECORDS, Learned, learn_fleet, learn_member, share_tables
 from training.progress import Progress
 from training.promise import Promise, promise_of
 from training.promise_words import promise_lines
@@ -63,6 +63,7 @@ def learn_model(
             learned[source] = learn_member(rows, source, Path(folder))
             if progress is not None:
                 progress.advance(1)
+        learned = share_tables(rows, learned, Path(folder))
         only = learned[enough[0]] if len(spool.sources) == 1 and enough else None
         fleet = learn_fleet(rows, only)
         if progress is not None:
@@ -268,7 +269,7 @@ def result_lines(result: LearnResult) -> list[str]:
             lines.append(
                 f"{source}: {one.density.plain.n_records} records, "
                 f"{len(one.density.plain.edges)} edges, {choice.n_bins} bins, "
-                f"{_regime_words(result, one)}"
+                f"{_regime_words(result, one)}{one.member.tables} tables, "
                 f"held-out surprise {one.held_out.density:.2f} nats a record "
                 f"over {one.held_out.n_scored} records"
             )

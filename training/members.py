@@ -8,10 +8,10 @@ from pathlib import Path
 import numpy as np
 
 from scoring.channels import ChannelTable
-from scoring.model import Member
+from scoring.model import Member, Usual
 from training.blocks import N_FOLDS
 from training.crossfit import HeldOut, hold_out, member_of, score_values, usual_of
-from training.fit import Density, fit, fit_regimes
+from training.fit import Density, Shared, agreed, fit, fit_regimes
 from training.rows import Rows
 from training.trouble import Stretch, as_left_out, find_trouble
 
@@ -20,6 +20,8 @@ LEAST_OWN_RECORDS = 200
 # From this many records on, held-out tables keep the structure and choices that all
 # records chose: what that leaks is far below what it saves.
 SETTLED_RECORDS = 20_000
+# Groups of sources that take turns as sources never seen.
+SOURCE_GROUPS = 3
 # More state channels than this are not combined without the site's word.
 MAX_REGIME_STATES = 4
 
@@ -50,16 +52,16 @@ def learn_member(rows: Rows, source: str, folder: Path) -> Learned:
     return replace(_best(without, source, folder), left_out=left_out)
 
 
-def _best(own: Rows, source: str, folder: Path) -> Learned:
-    best, unseen = _plain(own, source, folder)
+def _best(own: Rows, source: str, folder: Path, shared: Shared | None = None) -> Learned:
+    best, unseen = _plain(own, source, folder, shared)
     plain_density = best.density
     for regime in regimes_to_try(own.table):
-        density = fit_regimes(own, plain_density, regime)
+        density = fit_regimes(own, plain_density, regime, shared=shared)
         if not density.regimes:
             continue
         settled = density if own.n_records >= SETTLED_RECORDS else None
         members = [
-            member_of(source, fit_regimes(own, one, regime, _but(fold), settled))
+            member_of(source, fit_regimes(own, one, regime, _but(fold), settled, shared))
             for fold, one in enumerate(unseen)
         ]
         other = _measured(own, source, density, members, folder)
@@ -67,6 +69,37 @@ def _best(own: Rows, source: str, folder: Path) -> Learned:
         (best if better else other).held_out.path.unlink()
         best = other if better else best
     return best
+
+
+def share_tables(rows: Rows, learned: dict[str, Learned], folder: Path) -> dict[str, Learned]:
+    """Let sources with little history take the fleet's structure and correlations.
+
+    Bins, marginals and counts stay their own. Kept where the source's held-out records are
+    less surprising so, by more than the doubt of that.
+    """
+    if len(learned) < 2:
+        return learned
+    shared = _agreed(rows.table, learned)
+    found = {}
+    for source, one in learned.items():
+        found[source] = one
+        if rows.spool.n_records(source) >= SETTLED_RECORDS:
+            continue
+        own = replace(rows.of(source), left_out={source: as_left_out(one.left_out)})
+        other = _best(own, source, folder, shared)
+        if _pays(one.held_out, other.held_out):
+            member = replace(other.member, tables="shared")
+            found[source] = replace(other, member=member, left_out=one.left_out)
+    return found
+
+
+def _agreed(table: ChannelTable, learned: dict[str, Learned]) -> Shared:
+    shared: Shared = {(): agreed([one.density.plain for one in learned.values()], table)}
+    keys = {key for one in learned.values() for key in one.density.regimes}
+    for key in sorted(keys):
+        trees = [o.density.regimes[key] for o in learned.values() if key in o.density.regimes]
+        shared[key] = agreed(trees, table)
+    return shared
 
 
 def regimes_to_try(table: ChannelTable) -> list[tuple[int, ...]]:
@@ -82,11 +115,13 @@ def regimes_to_try(table: ChannelTable) -> list[tuple[int, ...]]:
     return [states] if 0 < len(states) <= MAX_REGIME_STATES else []
 
 
-def _plain(own: Rows, source: str, folder: Path) -> tuple[Learned, list[Density]]:
+def _plain(
+    own: Rows, source: str, folder: Path, shared: Shared | None
+) -> tuple[Learned, list[Density]]:
     """Learn the plain density, and one without each fold."""
-    density = fit(own)
+    density = fit(own, shared=shared)
     settled = density if own.n_records >= SETTLED_RECORDS else None
-    unseen = [fit(own, _but(fold), settled) for fold in range(N_FOLDS)]
+    unseen = [fit(own, _but(fold), settled, shared) for fold in range(N_FOLDS)]
     members = [member_of(source, one) for one in unseen]
     return _measured(own, source, density, members, folder), unseen
 
@@ -122,6 +157,23 @@ def learn_fleet(rows: Rows, only: Learned | None) -> Member:
         return replace(only.member, source="", tables="shared")
     density = fit(rows)
     member = member_of("", density)
-    sample, _ = rows.sample(tuple(range(N_FOLDS)))
-    usual = usual_of(*score_values(member, rows, sample), member.bin_table.rows(sample))
-    return replace(member, usual=usual, tables="shared")
+    return replace(member, usual=_unseen_usual(rows, member, density), tables="shared")
+
+
+def _unseen_usual(rows: Rows, member: Member, density: Density) -> Usual:
+    """Return what is usual for a source that the fleet's tables never saw.
+
+    Sources are dealt to groups, and each group is scored by tables made from the others.
+    """
+    n_groups = min(SOURCE_GROUPS, len(rows.sources))
+    surprise, own, bins = [], [], []
+    for group in range(n_groups):
+        out = rows.sources[group::n_groups]
+        others = tuple(source for source in rows.sources if source not in out)
+        unseen = member_of("", fit(rows.of(*others), like=density))
+        values, _ = rows.of(*out).sample(tuple(range(N_FOLDS)))
+        scored = score_values(unseen, rows, values)
+        surprise.append(scored[0])
+        own.append(scored[1])
+        bins.append(member.bin_table.rows(values))
+    return usual_of(np.concatenate(surprise), np.concatenate(own), np.concatenate(bins))

@@ -140,9 +140,16 @@ def bin_scores(scores: Floats, marginal: Floats) -> Floats:
 
 @njit(cache=True, nogil=True)
 def pair_shape(
-    counts: Floats, left: Floats, right: Floats, left_scores: Floats, right_scores: Floats
+    counts: Floats,
+    left: Floats,
+    right: Floats,
+    left_scores: Floats,
+    right_scores: Floats,
+    given: float = np.nan,
 ) -> Floats:
     """Return the shape of one pair's table: the normal copula with the counts' correlation.
+
+    given: a correlation that the fleet has settled, NaN to take the counts' own.
 
     counts: (n, m). left, right: marginals. *_scores: borders' normal scores, empty for a
     state, whose shape is the product of the marginals.
@@ -154,19 +161,28 @@ def pair_shape(
             for j in range(m):
                 shape[i, j] = left[i] * right[j]
         return shape
-    r = score_correlation(counts, bin_scores(left_scores, left), bin_scores(right_scores, right))
+    r = given
+    if r != r:
+        left_means, right_means = bin_scores(left_scores, left), bin_scores(right_scores, right)
+        r = score_correlation(counts, left_means, right_means)
     return normal_cells(left_scores, right_scores, r)
 
 
 @njit(cache=True, nogil=True)
 def held_out_shapes(
-    counts: Floats, left: Floats, right: Floats, left_scores: Floats, right_scores: Floats
+    counts: Floats,
+    left: Floats,
+    right: Floats,
+    left_scores: Floats,
+    right_scores: Floats,
+    given: float = np.nan,
 ) -> Floats:
     """Return the shape of one pair's table made without each fold, (n_folds, n, m)."""
     shapes = np.empty(counts.shape)
     total = _over_folds(counts)
     for f in range(counts.shape[0]):
-        shapes[f] = pair_shape(total - counts[f], left, right, left_scores, right_scores)
+        seen = total - counts[f]
+        shapes[f] = pair_shape(seen, left, right, left_scores, right_scores, given)
     return shapes
 
 
@@ -243,6 +259,17 @@ def _weigh(
         found = held_out_gains(cells, shapes, own, other, masses, shares)
         best = np.argmax(found[:, :, 0].sum(axis=0))
         gains[p] = found[:, best, 0]
+
+
+def edge_correlation(counts: Floats, left: CoarseNode, right: CoarseNode) -> float:
+    """Return the correlation of two channels' normal scores, NaN where one is a state.
+
+    counts: (n_left, n_right) records per cell.
+    """
+    if left.is_state or right.is_state:
+        return float("nan")
+    left_means = bin_scores(left.scores, left.marginal)
+    return float(score_correlation(counts, left_means, bin_scores(right.scores, right.marginal)))
 
 
 def edge_weights(
