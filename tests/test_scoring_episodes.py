@@ -105,6 +105,19 @@ def test_on_delays_keep_short_crossings_out() -> None:
     assert [e.time_ns for e in events] == [START_NS + 4 * STEP_NS]
 
 
+def test_since_when_goes_back_to_where_sustained_began_to_rise(machine: Episodes) -> None:
+    fed = Fed(machine)
+    # Half the way from 0.1 to 3 is 1.55.
+    (event,) = fed.feed([QUIET] * 7, [1.6, 0.2, 1.5, 1.6, 2.0, 2.9, 3.1])
+    assert event.alert is not None
+    assert event.alert.since_ns == START_NS + 3 * STEP_NS
+    # A level below what is usual lies beyond half the way; the crossing itself is all there is.
+    low = Fed(Episodes(machine.scorer, levels=replace(machine.levels, sustained=-5.0)))
+    (event,) = low.feed([QUIET] * 2, [-6.0, -4.0])
+    assert event.alert is not None
+    assert event.alert.since_ns == event.alert.raised_ns == START_NS + STEP_NS
+
+
 def test_a_record_that_is_not_judged_changes_nothing(machine: Episodes) -> None:
     fed = Fed(machine)
     fed.feed([OVER] + [np.nan] * 100, [0.0] + [9.0] * 100)

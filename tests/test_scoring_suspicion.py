@@ -82,6 +82,14 @@ def test_the_reading_shown_is_the_one_that_speaks_most_against_the_suspect() -> 
     assert (alert.worst_ns, alert.worst_excess) == (START_NS + 2 * STEP_NS, 60.0)
 
 
+@pytest.mark.parametrize("cuts", [(), (1, 2)])
+def test_of_equal_readings_the_first_is_shown(cuts: tuple[int, ...]) -> None:
+    fed = Fed(episodes())
+    fed.feed([20.0, 60.0, 60.0], cuts=cuts)
+    (alert,) = fed.open
+    assert alert.suspects[0].time_ns == alert.worst_ns == START_NS + STEP_NS
+
+
 def test_open_sides_are_told_as_none() -> None:
     fed = Fed(episodes())
     scores = replace(scores_of([20.0]), expected_high=np.array([np.inf]))
