@@ -19,6 +19,7 @@ from scoring.standing import Standing
 from training.history.batch import HistoryBatch
 from training.history.files import history_n_bytes
 from training.history.flags import history_flags, history_options
+from training.history.options import BadHistory
 from training.history.reading import read_history
 from training.history.tally import Tally
 from training.history.times import NO_TIME
@@ -95,6 +96,14 @@ def _cells(scores: Scores, k: int, scorer: Scorer) -> list[str]:
     ]
 
 
+def _opened(path: Path) -> TextIO:
+    try:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        return path.open("w", encoding="utf-8", newline="")
+    except OSError as error:
+        raise BadHistory(str(path), f"cannot be written: {error.strerror}") from None
+
+
 @click.command("score")
 @click.argument("records", nargs=-1, required=True, metavar="RECORDS...")
 @click.option(
@@ -117,11 +126,10 @@ def score_command(records: tuple[str, ...], model: Path, out: Path, **flags: Any
     began = time.perf_counter()
     scorer = Scorer(read_model(model))
     options = history_options(**flags, keep_time_text=True)
-    out.parent.mkdir(parents=True, exist_ok=True)
     with (
         Tally(None) as tally,
         Progress("scoring", history_n_bytes(records)) as progress,
-        out.open("w", encoding="utf-8", newline="") as file,
+        _opened(out) as file,
     ):
         writer = _Writer(scorer, file)
         for batch in read_history(
