@@ -114,14 +114,13 @@ class Scorer:
         member, levels = self.model.member(source), self.model.levels
         if standing is not None and standing.model != self.model.name:
             standing = None
-        usable = ~((values < self._low) | (values > self._high) | np.isnan(values))
-        values = np.where(usable, values, np.nan)
+        usable, values, n_usable = _usable(values, self._low, self._high)
         nodes, carry = self._derive(times_ns, values, standing)
         rows = member.bin_table.rows(nodes)
         surprise, own = removal_of(member, rows, *self.model.derived_groups)
-        n_usable = usable.sum(axis=1)
         judged = n_usable >= levels.least_readings
-        excess = np.where(judged, self._scale(member).excess(rows, surprise), np.nan)
+        excess = self._scale(member).excess(rows, surprise)
+        excess[~judged] = np.nan
         sustained, late, last_ns, value = sustain(
             times_ns,
             excess,
@@ -132,20 +131,19 @@ class Scorer:
             levels.step_s,
             levels.cap,
         )
-        suspect, low, high, best = self._suspects(member, rows, own)
-        alert = np.where(judged & ~late & (sustained > levels.sustained), SUSTAINED_ALERT, NO_ALERT)
-        alert = np.where(judged & (excess > levels.record), RECORD_ALERT, alert)
-        column = np.maximum(suspect, 0)[:, None]
+        alert = _alerts(excess, sustained, late, levels.record, levels.sustained)
+        suspect, own_surprise = _suspects(own, member.usual.channel_median)
+        low, high, best = self._expected_rows(member, rows, suspect)
         scores = Scores(
             surprise=surprise,
             excess=excess,
             sustained=sustained,
             suspect=suspect,
-            suspect_surprise=np.take_along_axis(own, column, axis=1)[:, 0],
+            suspect_surprise=own_surprise,
             expected_low=low,
             expected_high=high,
             expected_best=best,
-            alert=alert.astype(np.uint8),
+            alert=alert,
             missing=(len(self.instruments) - n_usable).astype(np.int16),
             judged=judged,
             late=late,
@@ -175,10 +173,12 @@ class Scorer:
     ) -> tuple[Floats, Carry | None]:
         """Return all nodes' values; late records neither see nor become the last record."""
         carry = standing.carry if standing else None
+        if not self.model.table.derived:
+            return values, carry
         newest = np.maximum.accumulate(times_ns)
         last_ns = standing.time_ns if standing else -1
         on_time = times_ns > np.maximum(np.concatenate([[last_ns], newest[:-1]]), last_ns)
-        if on_time.all() or not self.model.table.derived:
+        if on_time.all():
             return derive(self.model.table, times_ns, values, carry)
         nodes = np.empty((len(values), len(self.model.table.nodes)))
         nodes[on_time], carry = derive(self.model.table, times_ns[on_time], values[on_time], carry)
@@ -201,40 +201,106 @@ class Scorer:
         hidden[:, nodes[start[instrument] : start[instrument + 1]]] = MISSING
         return hidden
 
-    def _suspects(
-        self, member: Member, rows: BinRows, own: Floats
-    ) -> tuple[NDArray[np.int16], Floats, Floats, Floats]:
-        """Return each record's suspect and what it should have read."""
-        beyond = own - member.usual.channel_median
-        none = np.isnan(own).all(axis=1)
-        beyond[none] = 0.0
-        suspect = np.where(none, -1, np.nanargmax(beyond, axis=1)).astype(np.int16)
+    def _expected_rows(
+        self, member: Member, rows: BinRows, suspect: NDArray[np.int16]
+    ) -> tuple[Floats, Floats, Floats]:
+        """Return what each record's suspect should have read; NaN for a state or none."""
+        table = member.bin_table
+        if len(member.parts) == 1:
+            arrays = member.parts[0].tree.arrays
+            groups = self.model.derived_groups
+            return _intervals(arrays, rows, suspect, table.borders, self._resolution, *groups)
         low, high, best = (np.full(len(rows), np.nan) for _ in range(3))
-        for i in np.unique(suspect[suspect >= 0]).tolist():
-            where = np.flatnonzero(suspect == i)
-            if self.instruments[i].is_state:
-                continue
-            hidden = self._without(rows[where], i)
-            borders = member.bins[i].borders
-            if len(member.parts) == 1:
-                found = _intervals(
-                    member.parts[0].tree.arrays, hidden, i, borders, self._resolution[i]
-                )
-                low[where], high[where], best[where] = found
-                continue
-            for r, row in zip(where, hidden, strict=True):
-                belief = belief_of(member, row, i)
+        for r, i in enumerate(suspect.tolist()):
+            if i >= 0 and not self.instruments[i].is_state:
+                belief = belief_of(member, self._without(rows[r : r + 1], i)[0], i)
+                borders = member.bins[i].borders
                 low[r], high[r], best[r] = shortest_interval(belief, borders, self._resolution[i])
-        return suspect, low, high, best
+        return low, high, best
+
+
+@njit(cache=True, nogil=True)
+def _usable(
+    values: Floats, low: Floats, high: Floats
+) -> tuple[NDArray[np.bool_], Floats, NDArray[np.int64]]:
+    """Return which readings are inside their span, the readings without the others, and how
+    many each record has. Loops, because a record alone pays for every array operation."""
+    n, n_instruments = values.shape
+    usable = np.empty((n, n_instruments), np.bool_)
+    kept = np.empty((n, n_instruments))
+    n_usable = np.zeros(n, np.int64)
+    for r in range(n):
+        for i in range(n_instruments):
+            x = values[r, i]
+            # False for NaN too.
+            inside = low[i] <= x <= high[i]
+            usable[r, i] = inside
+            kept[r, i] = x if inside else np.nan
+            n_usable[r] += inside
+    return usable, kept, n_usable
+
+
+@njit(cache=True, nogil=True)
+def _alerts(
+    excess: Floats, sustained: Floats, late: NDArray[np.bool_], record: float, level: float
+) -> NDArray[np.uint8]:
+    """Return the alert of each record; one that is not judged (excess NaN) raises none."""
+    alert = np.zeros(excess.shape[0], np.uint8)
+    for r in range(excess.shape[0]):
+        if excess[r] > record:
+            alert[r] = RECORD_ALERT
+        elif excess[r] == excess[r] and not late[r] and sustained[r] > level:
+            alert[r] = SUSTAINED_ALERT
+    return alert
+
+
+@njit(cache=True, nogil=True)
+def _suspects(own: Floats, usual: Floats) -> tuple[NDArray[np.int16], Floats]:
+    """Return the instrument furthest over its usual surprise, -1 if all are missing, and its
+    surprise. The first of equals is taken."""
+    n = own.shape[0]
+    suspect, surprise = np.full(n, -1, np.int16), np.full(n, np.nan)
+    for r in range(n):
+        most = -np.inf
+        for i in range(own.shape[1]):
+            beyond = own[r, i] - usual[i]
+            # A NaN is over nothing.
+            if beyond > most or (suspect[r] < 0 and beyond == beyond):
+                most = beyond
+                suspect[r], surprise[r] = i, own[r, i]
+    return suspect, surprise
 
 
 @njit(cache=True, nogil=True)
 def _intervals(
-    t: TreeArrays, hidden: BinRows, node: int, borders: Floats, resolution: float
+    t: TreeArrays,
+    rows: BinRows,
+    suspect: NDArray[np.int16],
+    borders: Floats,
+    resolution: Floats,
+    group_start: NDArray[np.int64],
+    group_nodes: NDArray[np.int64],
 ) -> tuple[Floats, Floats, Floats]:
-    n = hidden.shape[0]
-    low, high, best = np.empty(n), np.empty(n), np.empty(n)
+    """Return the expected interval of each record's suspect under one tree.
+
+    borders: (n_nodes, width), see BinTable. A state has no borders and gets NaN.
+    """
+    n = rows.shape[0]
+    low, high, best = np.full(n, np.nan), np.full(n, np.nan), np.full(n, np.nan)
+    hidden = np.empty(rows.shape[1], np.uint8)
     for r in range(n):
-        p = belief_row(t, hidden[r], node)[: borders.shape[0] + 1]
-        low[r], high[r], best[r] = shortest_interval(p, borders, resolution)
+        i = suspect[r]
+        if i < 0:
+            continue
+        n_borders = 0
+        while n_borders < borders.shape[1] and borders[i, n_borders] == borders[i, n_borders]:
+            n_borders += 1
+        if n_borders + 1 != t.n_bins[i]:
+            continue
+        hidden[:] = rows[r]
+        hidden[i] = MISSING
+        for k in range(group_start[i], group_start[i + 1]):
+            hidden[group_nodes[k]] = MISSING
+        p = belief_row(t, hidden, i)[: n_borders + 1]
+        low[r], high[r], best[r] = shortest_interval(p, borders[i, :n_borders], resolution[i])
     return low, high, best
