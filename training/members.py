@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 
@@ -163,17 +164,28 @@ def learn_fleet(rows: Rows, only: Learned | None) -> Member:
 def _unseen_usual(rows: Rows, member: Member, density: Density) -> Usual:
     """Return what is usual for a source that the fleet's tables never saw.
 
-    Sources are dealt to groups, and each group is scored by tables made from the others.
+    Sources are dealt to groups, and each group is scored by tables made from the others. A
+    single source, whose history is too short for a member of its own, is dealt by blocks.
     """
-    n_groups = min(SOURCE_GROUPS, len(rows.sources))
     surprise, own, bins = [], [], []
-    for group in range(n_groups):
-        out = rows.sources[group::n_groups]
-        others = tuple(source for source in rows.sources if source not in out)
-        unseen = member_of("", fit(rows.of(*others), like=density))
-        values, _ = rows.of(*out).sample(tuple(range(N_FOLDS)))
+    for seen, folds, out, folds_out in _splits(rows):
+        unseen = member_of("", fit(seen, folds, like=density))
+        values, _ = out.sample(folds_out)
         scored = score_values(unseen, rows, values)
         surprise.append(scored[0])
         own.append(scored[1])
         bins.append(member.bin_table.rows(values))
     return usual_of(np.concatenate(surprise), np.concatenate(own), np.concatenate(bins))
+
+
+def _splits(rows: Rows) -> Iterator[tuple[Rows, tuple[int, ...], Rows, tuple[int, ...]]]:
+    """Yield rows and folds to learn from, and rows and folds that those leave out."""
+    everything = tuple(range(N_FOLDS))
+    if len(rows.sources) == 1:
+        yield from ((rows, _but(fold), rows, (fold,)) for fold in everything)
+        return
+    n_groups = min(SOURCE_GROUPS, len(rows.sources))
+    for group in range(n_groups):
+        out = rows.sources[group::n_groups]
+        others = tuple(source for source in rows.sources if source not in out)
+        yield rows.of(*others), everything, rows.of(*out), everything
