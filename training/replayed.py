@@ -50,12 +50,17 @@ class LevelRow:
 
 @dataclass(frozen=True)
 class MethodRow:
-    """What one method did. how: how its levels were chosen."""
+    """What one method did.
+
+    how: in words, how its levels were chosen. own_levels: a rival at the levels that its
+    history gave it, not at our false rate.
+    """
 
     name: str
     how: str
     verdict: Verdict
     time_share: float
+    own_levels: bool = False
 
 
 @dataclass(frozen=True)
@@ -208,12 +213,12 @@ def _rival(
     ]
     names = [channel.name for channel in online.model.table.instruments]
     found = []
-    for how, k in (
-        ("no more false alerts than ours", same_rate(verdicts, ours.false_per_day)),
-        ("its own levels for the budget", rival.curve.chosen),
+    for own, how, k in (
+        (False, "no more false alerts than ours", same_rate(verdicts, ours.false_per_day)),
+        (True, "from its history, for the budget", rival.curve.chosen),
     ):
         named = judge.verdict(with_suspects(rival.streams, calls[k], names))
-        found.append(MethodRow(rival.name, how, named, shares[k]))
+        found.append(MethodRow(rival.name, how, named, shares[k], own))
     return found, rows
 
 
