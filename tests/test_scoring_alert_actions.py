@@ -144,6 +144,21 @@ def test_a_source_put_back_is_given_its_time_before_it_is_missed() -> None:
     assert told(fed.tick(START_NS + DAY_NS + 300 * S)) == [("raised", "silent")]
 
 
+@pytest.mark.parametrize("by_tick", [False, True])
+def test_trouble_that_outlasts_a_short_time_out_of_service_is_raised_anew(by_tick: bool) -> None:
+    # Not one record came meanwhile, so only the action, or the tick, can have ended it.
+    fed = raised(3)
+    at_ns = START_NS + 2 * STEP_NS
+    if by_tick:
+        act(fed, "out_of_service", comment="works", start_ns=at_ns + S, end_ns=at_ns + 5 * S)
+        assert told(fed.tick(at_ns + 2 * S)) == [("cleared", SCORED)]
+        fed.tick(at_ns + 5 * S)
+    else:
+        act(fed, "out_of_service", comment="works")
+        act(fed, "back_in_service")
+    assert told(fed.feed([20.0])) == [("raised", SCORED)]
+
+
 def test_a_period_that_ends_by_itself_gives_the_same_time() -> None:
     fed = raised()
     act(fed, "out_of_service", comment="works", end_ns=START_NS + DAY_NS)
