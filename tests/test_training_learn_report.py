@@ -24,7 +24,7 @@ from training.settings import LearnSettings
 def page() -> str:
     result, sources, history = small_fleet()
     model = replace(result.model, name="0123456789abcdef")
-    return learn_page(model, result.learned, result.promise, sources, history, 12.3)
+    return learn_page(model, result.learned, result.curve, result.promise, sources, history, 12.3)
 
 
 class Tables(HTMLParser):
@@ -85,7 +85,7 @@ def test_every_member_has_a_row_with_its_held_out_figures(page: str) -> None:
     result = small_fleet()[0]
     for source, one in result.learned.items():
         found = row(page, source, 11)
-        assert found[1:3] == ["own", str(one.density.plain.n_records)]
+        assert found[1:3] == [one.member.tables, str(one.density.plain.n_records)]
         assert found[8:10] == [str(one.held_out.n_scored), f"{one.held_out.density:.2f}"]
         assert re.fullmatch(r"\d+\.\d %", found[10])
 
@@ -107,13 +107,18 @@ def test_names_in_the_records_cannot_become_markup(page: str) -> None:
 def test_the_same_model_gives_the_same_page(page: str) -> None:
     result, sources, history = small_fleet()
     model = replace(result.model, name="0123456789abcdef")
-    assert learn_page(model, result.learned, result.promise, sources, history, 12.3) == page
+    assert (
+        learn_page(model, result.learned, result.curve, result.promise, sources, history, 12.3)
+        == page
+    )
 
 
 def test_history_too_short_for_levels_is_said_and_the_fleets_tree_shown() -> None:
     with spool_of({"west": pump_records(60, 3)}) as spool:
         result = learn_model(spool, fleet_table(), LearnSettings())
-        page = learn_page(result.model, result.learned, result.promise, spool.sources, [], 1.0)
+        page = learn_page(
+            result.model, result.learned, result.curve, result.promise, spool.sources, [], 1.0
+        )
     assert "No source has 200 records, so no level could be set." in page
     assert "no alert will be raised" in page
     assert "Tree of the fleet for all records:" in page
@@ -125,7 +130,7 @@ def test_a_large_fleet_stays_a_small_page_and_says_what_is_shown() -> None:
     members = dict.fromkeys(learned, result.model.members["east"])
     model = replace(result.model, members=members)
     sources = [*learned, *(f"short_{k}" for k in range(100))]
-    page = learn_page(model, learned, result.promise, sources, history, 1.0)
+    page = learn_page(model, learned, result.curve, result.promise, sources, history, 1.0)
     assert len(page) < 400_000
     assert f"Shown are the {MOST_SOURCES} of {MOST_SOURCES + 40} sources" in page
     assert len([r for r in Tables(page).rows if len(r) == 11]) == MOST_SOURCES

@@ -3,22 +3,28 @@
 from __future__ import annotations
 
 import re
+from dataclasses import replace
 
 import numpy as np
 import pytest
 
 from tests.learned import SPITEFUL, fleet_table, small_fleet
+from tests.spools import NS_PER_S
+from training.members import Learned
 from training.report.heldpictures import Covered
 from training.report.heldsections import (
     MOST_COVERED,
     MOST_RECORDS,
+    MOST_STRETCHES,
     beside_text,
     block_section,
     coverage_section,
     covered_channels,
     least_covered,
+    trouble_section,
     worst_section,
 )
+from training.trouble import Stretch
 
 TABLE = fleet_table()
 
@@ -46,6 +52,45 @@ def test_the_planted_trouble_is_found_and_its_flow_suspected() -> None:
     assert [row[1] for row in rows[:2]] == ["&lt;b&gt;flow&lt;/b&gt;"] * 2
     assert all("m3/h" in row[2] and "m3/h" in row[3] for row in rows[:2])
     assert all("speed" in row[6] for row in rows[:2])
+
+
+def with_trouble() -> dict[str, Learned]:
+    """Return what was learned as if the planted trouble of `east` had been left out."""
+    learned = dict(small_fleet()[0].learned)
+    worst = next(w for w in learned["east"].held_out.worst if w.suspect == 1)
+    stretches = [
+        Stretch("east", worst.time_ns - 60 * NS_PER_S, worst.time_ns + 60 * NS_PER_S, 3, 31.4),
+        *(Stretch("east", k, k + 1, 2, 1.0) for k in range(MOST_STRETCHES)),
+    ]
+    learned["east"] = replace(learned["east"], left_out=stretches)
+    return learned
+
+
+def test_stretches_left_out_are_listed_with_both_rates_the_most_surprising_first() -> None:
+    curve = small_fleet()[0].curve
+    assert curve is not None
+    pieces = "".join(trouble_section(with_trouble(), curve, 60.0).pieces)
+    rows = cells(pieces)
+    assert len(rows) == MOST_STRETCHES
+    assert rows[0][0] == "east"
+    assert rows[0][3:] == ["3", "31"]
+    assert f"{MOST_STRETCHES + 1} stretches" in pieces
+    assert "alerts a day with them" in pieces
+    assert f"Shown are the {MOST_STRETCHES} that are most surprising" in pieces
+
+
+def test_nothing_left_out_is_said() -> None:
+    result = small_fleet()[0]
+    assert not any(one.left_out for one in result.learned.values())
+    assert "None: no stretch" in trouble_section(result.learned, result.curve, 60.0).pieces[0]
+
+
+def test_a_record_in_a_stretch_that_was_left_out_is_marked() -> None:
+    plain = "".join(worst_section(TABLE, small_fleet()[0].learned).pieces)
+    marked = "".join(worst_section(TABLE, with_trouble()).pieces)
+    assert "* marks records" in marked
+    assert "* marks records" not in plain
+    assert sum(row[0].endswith(" *") for row in cells(marked)) == 1
 
 
 def test_names_that_are_markup_stay_text() -> None:

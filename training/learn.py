@@ -30,6 +30,7 @@ from training.settings import LearnSettings, load_learn_settings
 from training.stillness import with_stillness
 from training.treetext import tree_lines
 from training.trouble import as_left_out
+from training.trouble_words import trouble_words
 
 # Stretches left out that the terminal lists; the report has them all.
 MAX_STRETCHES_SHOWN = 12
@@ -197,6 +198,7 @@ def write_report(result: LearnResult, spool: Spool, path: Path) -> None:
     page = learn_page(
         result.model,
         result.learned,
+        result.curve,
         result.promise,
         spool.sources,
         history_lines(spool),
@@ -241,14 +243,7 @@ def left_out_lines(result: LearnResult) -> list[str]:
     stretches = [stretch for one in result.learned.values() for stretch in one.left_out]
     if not stretches or result.curve is None:
         return []
-    days = result.curve.source_days / result.curve.n_sources
-    seen = int(result.curve.seen[result.curve.chosen])
-    lines = [
-        f"{len(stretches)} stretches ({100 * result.curve.left_share:.2f} % of the records) are "
-        "far more surprising than the rest: tables do not use them, levels do; at these levels "
-        f"{seen / days:.2f} alerts a day with them, {result.curve.seen_without / days:.2f} without"
-    ]
-    return lines + [
+    return [trouble_words(stretches, result.curve)] + [
         f"  {stretch.source}: {time_text(stretch.start_ns)} to {time_text(stretch.end_ns)}, "
         f"{stretch.n_records} records, up to {stretch.peak:.0f} nats above the usual"
         for stretch in sorted(stretches, key=lambda s: -s.peak)[:MAX_STRETCHES_SHOWN]

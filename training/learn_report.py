@@ -6,6 +6,7 @@ from collections.abc import Mapping, Sequence
 from typing import Final
 
 from scoring.model import Model
+from training.levels import Curve
 from training.members import LEAST_OWN_RECORDS, Learned
 from training.promise import Promise
 from training.promise_words import doubt_lines, interval_words, main_lines
@@ -13,6 +14,7 @@ from training.report.heldsections import (
     block_section,
     coverage_section,
     covered_channels,
+    trouble_section,
     worst_section,
 )
 from training.report.page import Section, bullets, facts, html_page, paragraph, table, warning
@@ -28,6 +30,7 @@ _MOST_NAMED: Final = 20
 def learn_page(
     model: Model,
     learned: Mapping[str, Learned],
+    curve: Curve | None,
     promise: Promise | None,
     sources: Sequence[str],
     history: Sequence[str],
@@ -35,12 +38,14 @@ def learn_page(
 ) -> str:
     """Return the whole page.
 
-    learned: the sources with a member of their own. sources: all there were. history: what
-    came of reading it, in sentences. seconds: how long learning took.
+    learned: the sources with a member of their own; curve, promise: of their levels, None
+    without any. sources: all there were. history: what came of reading it, in sentences.
+    seconds: how long learning took.
     """
     sections: list[Section | None] = [_levels_section(promise)]
     if learned:
         sections += [
+            trouble_section(learned, curve, model.levels.step_s),
             worst_section(model.table, learned),
             coverage_section(model.table, learned),
             block_section(learned),
@@ -133,10 +138,11 @@ def _sources_section(
             _source_row(model, source, learned[source]) for source in learned if source in shown
         ]
         text = (
-            "Tables are a source's own or shared by the fleet, whichever had the better held-out "
-            f"density. {_regime_words(model, learned)}Held out: records scored by tables that "
-            "had not seen them, and their mean surprise. In interval: the share of readings that "
-            "lay where they were expected."
+            "Shared tables take their structure and correlations from the fleet, where that made "
+            "held-out records less surprising; bins and counts stay the source's. "
+            f"{_regime_words(model, learned)}Held out: records scored by tables that had not "
+            "seen them, and their mean surprise. In interval: the share of readings that lay "
+            "where they were expected."
         )
         shown_table = table(heading, rows, words=(0, 1, 3, 4), whole=(0, 1, 3, 4), wide=True)
         pieces += [paragraph(text), shown_table]

@@ -46,7 +46,9 @@ def page(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Page]:
 def report(tmp_path_factory: pytest.TempPathFactory) -> str:
     """Return the address of a report on a small fleet."""
     result, sources, history = small_fleet()
-    text = learn_page(result.model, result.learned, result.promise, sources, history, 1.0)
+    text = learn_page(
+        result.model, result.learned, result.curve, result.promise, sources, history, 1.0
+    )
     path = tmp_path_factory.mktemp("report") / "learned.html"
     write_text(path, text)
     return path.as_uri()

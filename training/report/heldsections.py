@@ -12,6 +12,7 @@ from scoring.expected import EXPECTED_SHARE
 from scoring.model import Member
 from training.coverage import trees_that_hold
 from training.intervals import wilson
+from training.levels import Curve
 from training.members import Learned
 from training.report.heldpictures import Covered, draw_blocks, draw_coverage
 from training.report.page import Section, paragraph, table
@@ -22,13 +23,49 @@ from training.report.readings import (
     reading_text,
     time_text,
 )
+from training.trouble import MOST_LEFT_OUT
+from training.trouble_words import trouble_words
 from training.worst import WorstRecord
 
 # Records in the table of the most surprising, and neighbours named with each.
 MOST_RECORDS: Final = 15
 MOST_NEIGHBOURS: Final = 2
+LEFT_OUT_MARK: Final = "*"
+# Stretches that are listed.
+MOST_STRETCHES: Final = 60
 # Channels whose coverage is shown.
 MOST_COVERED: Final = 40
+
+
+def trouble_section(learned: Mapping[str, Learned], curve: Curve | None, step_s: float) -> Section:
+    """Return the stretches of time that tables did not use."""
+    title = "Stretches left out of the tables"
+    stretches = [stretch for one in learned.values() for stretch in one.left_out]
+    if not stretches or curve is None:
+        text = "None: no stretch is so much more surprising than the rest of its source's history."
+        return Section(title, (paragraph(text),))
+    text = (
+        f"{trouble_words(stretches, curve)}. At most {percent_text(MOST_LEFT_OUT, 0)} of a "
+        "source's records are left out. If a stretch was normal, it will raise alerts when it "
+        "comes again; if it was trouble, name it in the file of `--exclude`, and levels leave it "
+        "out too."
+    )
+    shown = sorted(stretches, key=lambda s: -s.peak)[:MOST_STRETCHES]
+    if len(shown) < len(stretches):
+        text += f" Shown are the {len(shown)} that are most surprising."
+    rows = [
+        (
+            stretch.source,
+            time_text(stretch.start_ns, step_s),
+            time_text(stretch.end_ns, step_s),
+            count_text(stretch.n_records),
+            f"{stretch.peak:.0f}",
+        )
+        for stretch in shown
+    ]
+    heading = ("source", "from", "to", "records", "nats above the usual")
+    made = table(heading, rows, words=(0, 1, 2), whole=(0, 1, 2), wide=True)
+    return Section(title, (paragraph(text), made))
 
 
 def worst_section(channels: ChannelTable, learned: Mapping[str, Learned]) -> Section:
@@ -36,32 +73,40 @@ def worst_section(channels: ChannelTable, learned: Mapping[str, Learned]) -> Sec
     found = [(source, worst) for source, one in learned.items() for worst in one.held_out.worst]
     found.sort(key=lambda pair: -pair[1].excess)
     found = found[:MOST_RECORDS]
-    rows = [_worst_row(channels, source, learned[source].member, w) for source, w in found]
+    rows = [_worst_row(channels, source, learned[source], worst) for source, worst in found]
     text = (
         "Of each block of time the most surprising record, and of these the first "
-        f"{len(found)}. Look here for trouble that the history holds: what is left in, the model "
+        f"{len(found)}. Look here for trouble that the history holds: what tables use, the model "
         "takes for normal. Times are UTC. The suspect is the channel whose removal helps "
         "most, and what it was expected to read is told by the other readings of its record, "
         "under tables that had not seen it. Excess is in nats; beside: what the suspect's "
         "neighbours read."
     )
+    if any(_is_left_out(learned[source], worst) for source, worst in found):
+        text += f" {LEFT_OUT_MARK} marks records in a stretch that tables do not use."
     heading = ("time", "suspect", "read", "expected", "excess", "source", "beside")
     shown = table(heading, rows, words=(0, 1, 2, 3, 5, 6), whole=(0, 1, 2, 3, 5), wide=True)
     return Section("The most surprising held-out records", (paragraph(text), shown))
 
 
 def _worst_row(
-    channels: ChannelTable, source: str, member: Member, worst: WorstRecord
+    channels: ChannelTable, source: str, one: Learned, worst: WorstRecord
 ) -> tuple[str, ...]:
     time = time_text(worst.time_ns, channels.step_s or 1.0)
-    excess = f"{worst.excess:.1f}"
+    if _is_left_out(one, worst):
+        time += f" {LEFT_OUT_MARK}"
+    ends = (f"{worst.excess:.1f}", source)
     if worst.suspect < 0:
-        return (time, "none", "", "", excess, source, "")
+        return (time, "none", "", "", *ends, "")
     channel = channels.instruments[worst.suspect]
     reading = reading_text(float(worst.values[worst.suspect]), channel)
     expected = expected_text(worst.expected, channel)
-    beside = beside_text(channels, member, worst)
-    return (time, channel.name, reading, expected, excess, source, beside)
+    beside = beside_text(channels, one.member, worst)
+    return (time, channel.name, reading, expected, *ends, beside)
+
+
+def _is_left_out(one: Learned, worst: WorstRecord) -> bool:
+    return any(s.start_ns <= worst.time_ns <= s.end_ns for s in one.left_out)
 
 
 def beside_text(channels: ChannelTable, member: Member, worst: WorstRecord) -> str:
