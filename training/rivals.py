@@ -8,7 +8,7 @@ every other method. None of them is given less than the whole budget.
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Protocol
 
 import numpy as np
@@ -100,8 +100,9 @@ def fit_rivals(history: Mapping[str, Records], rule: Rule) -> tuple[Rival, ...]:
     limits: dict[str, Method] = {
         s: fit_limits(v, tail=_LIMITS_TAIL, widening=0.0) for s, v in values.items()
     }
-    t2: dict[str, Method] = {s: fit_pca(v, statistic="t2") for s, v in values.items()}
-    spe: dict[str, Method] = {s: fit_pca(v, statistic="spe") for s, v in values.items()}
+    fits = {s: fit_pca(v) for s, v in values.items()}
+    t2: dict[str, Method] = {s: replace(fit, statistic="t2") for s, fit in fits.items()}
+    spe: dict[str, Method] = {s: replace(fit, statistic="spe") for s, fit in fits.items()}
     by_record = [
         set_level(name, methods, history, rule)
         for name, methods in (("limits", limits), ("T2", t2), ("SPE", spe))
@@ -138,9 +139,12 @@ def lowest_level(streams: Iterable[tuple[Times, Floats]], n_allowed: float, gap_
     pooled = np.sort(np.concatenate([score for _, score in streams]))[::-1]
     most = max(_MOST_TIME_SHARE * len(pooled), 1.0)
     places = np.unique(np.geomspace(1.0, most, _N_TRIED).astype(np.int64)) - 1
+    # Whatever is under the lowest level that is tried never counts.
+    lowest = pooled[places[-1]]
+    high = [(times_ns[score > lowest], score[score > lowest]) for times_ns, score in streams]
     level = float(pooled[0])
     for tried in pooled[places]:
-        if sum(count_stretches(t[score > tried], gap_ns) for t, score in streams) > n_allowed:
+        if sum(count_stretches(t[score > tried], gap_ns) for t, score in high) > n_allowed:
             break
         level = float(tried)
     return level
