@@ -75,7 +75,7 @@ def _sources(connection: sa.Connection) -> list[dict[str, Any]]:
 
 
 def _alerts(connection: sa.Connection) -> list[dict[str, Any]]:
-    found, _ = pages.alerts_page(
+    found, _ = pages.over_level_page(
         connection, source=None, from_ns=None, to_ns=None, limit=_N_ALERTS, after=None
     )
     answers = []

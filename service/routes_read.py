@@ -172,7 +172,7 @@ def read_router(service: Service) -> APIRouter:
         def read(
             connection: sa.Connection,
         ) -> tuple[list[dict[str, Any]], tuple[int, int] | None]:
-            found, following = pages.alerts_page(
+            found, following = pages.over_level_page(
                 connection, source=source, from_ns=bounds[0], to_ns=bounds[1], limit=limit, after=at
             )
             return layouts.answers(connection, found), following

@@ -117,6 +117,19 @@ class Database:
             sustained = float("nan") if state.sustained is None else state.sustained
             yield state.name, max(state.last_ns, 0), state.n_over_level, sustained
 
+    def alert_standings(self) -> list[SourceState]:
+        """Return the states of all sources with an alert standing, to read only.
+
+        Of the database of several replicas, only what ticks need is read.
+        """
+        if self.is_sqlite:
+            return [state for state in list(self._states.values()) if state.alert_standing]
+        query = sa.select(source.c.id, source.c.name, source.c.alert_standing).where(
+            source.c.alert_standing.is_not(None)
+        )
+        with self.read.connect() as connection:
+            return [SourceState(**row._mapping) for row in connection.execute(query)]
+
     def n_bytes(self) -> int | None:
         """Return the size on disk, log included, or None where it cannot be asked."""
         if self.is_sqlite:

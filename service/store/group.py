@@ -57,6 +57,10 @@ class Group(ABC):
         """
 
     @abstractmethod
+    def known(self, names: Sequence[str]) -> dict[str, SourceState]:
+        """Return copies of the states of those sources that there are; none is made."""
+
+    @abstractmethod
     def insert(self, rows: Sequence[tuple[Any, ...]]) -> None:
         """Add records; every row has RECORD_COLUMNS in order."""
 
@@ -143,6 +147,10 @@ class SqliteGroup(Group):
             found[name] = state.copy()
         return found
 
+    def known(self, names: Sequence[str]) -> dict[str, SourceState]:
+        states = ((name, self._changed.get(name) or self._states.get(name)) for name in names)
+        return {name: state.copy() for name, state in states if state is not None}
+
     def insert(self, rows: Sequence[tuple[Any, ...]]) -> None:
         start, left = 0, len(rows)
         while left:
@@ -183,6 +191,9 @@ class PostgresGroup(Group):
             self._make(missing)
             found = self._locked(wanted)
         return found
+
+    def known(self, names: Sequence[str]) -> dict[str, SourceState]:
+        return self._locked(sorted(names))
 
     def _locked(self, names: Sequence[str]) -> dict[str, SourceState]:
         table = tables.source
@@ -233,7 +244,7 @@ def _source_row(state: SourceState) -> tuple[Any, ...]:
     return (
         state.id, state.name, state.newest_ns, state.last_ns, state.n_records,
         state.n_over_level, state.model, state.excess, state.sustained, state.alert,
-        state.standing,
+        state.standing, state.alert_standing,
     )  # fmt: skip
 
 

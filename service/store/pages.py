@@ -50,7 +50,7 @@ def records_page(
     return _page(connection.execute(query).all(), limit, "source_id", "time_ns")
 
 
-def alerts_page(
+def over_level_page(
     connection: sa.Connection,
     *,
     source: str | None,
@@ -101,7 +101,7 @@ def sources_page(
     connection: sa.Connection, *, limit: int, after: str | None
 ) -> tuple[list[dict[str, Any]], str | None]:
     """Return the rows of sources by name, without their standings."""
-    columns = [column for column in _SOURCE if column.name != "standing"]
+    columns = [column for column in _SOURCE if "standing" not in column.name]
     query = sa.select(*columns).order_by(_SOURCE.name).limit(limit + 1)
     if after is not None:
         query = query.where(_SOURCE.name > after)

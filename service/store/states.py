@@ -11,7 +11,7 @@ NEVER_NS = -1
 
 @dataclass(slots=True)
 class SourceState:
-    """One source's row. `live` is the standing as an object, opaque here.
+    """One source's row. `live`, `alert_live`: the standings as objects, opaque here.
 
     standing: its bytes as stored; newest_ns: newest time of any stored record; last_ns:
     newest time in the standing. excess, sustained (nats), alert: of the record at last_ns.
@@ -28,13 +28,16 @@ class SourceState:
     sustained: float | None = None
     alert: int = 0
     standing: bytes | None = None
+    alert_standing: bytes | None = None
     live: Any = None
+    alert_live: Any = None
 
     def copy(self) -> SourceState:
         """Return a copy to work on, so that a failed commit leaves this one as it was."""
         return SourceState(
             self.id, self.name, self.newest_ns, self.last_ns, self.n_records, self.n_over_level,
-            self.model, self.excess, self.sustained, self.alert, self.standing, self.live,
+            self.model, self.excess, self.sustained, self.alert, self.standing,
+            self.alert_standing, self.live, self.alert_live,
         )  # fmt: skip
 
 

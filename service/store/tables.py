@@ -41,6 +41,8 @@ source = sa.Table(
     sa.Column("sustained", sa.Double),
     sa.Column("alert", sa.SmallInteger, nullable=False),
     sa.Column("standing", sa.LargeBinary),
+    # What the alert machine remembers, open alerts included.
+    sa.Column("alert_standing", sa.LargeBinary),
     sa.UniqueConstraint("name", name="source_name"),
 )
 
@@ -90,6 +92,46 @@ pruned = sa.Table(
     sa.Column("before_ns", sa.BigInteger, nullable=False),
     sa.Column("n_records", sa.BigInteger, nullable=False),
 )
+
+# One row an alert: its newest form as JSON, and what rows are chosen by.
+alert = sa.Table(
+    "alert",
+    metadata,
+    sa.Column("number", _Id, primary_key=True),
+    sa.Column("id", sa.Text, nullable=False),
+    sa.Column("source", sa.Text, nullable=False),
+    sa.Column("kind", sa.Text, nullable=False),
+    sa.Column("state", sa.Text, nullable=False),
+    # When the trouble began, when the alert was raised, when it was cleared (null: open).
+    sa.Column("since_ns", sa.BigInteger, nullable=False),
+    sa.Column("raised_ns", sa.BigInteger, nullable=False),
+    sa.Column("until_ns", sa.BigInteger),
+    sa.Column("data", sa.Text, nullable=False),
+    sa.UniqueConstraint("id", name="alert_id"),
+)
+alert_raised = sa.Index("alert_raised", alert.c.raised_ns, alert.c.number)
+alert_open = sa.Index(
+    "alert_open",
+    alert.c.raised_ns,
+    alert.c.number,
+    sqlite_where=alert.c.until_ns.is_(None),
+    postgresql_where=alert.c.until_ns.is_(None),
+)
+
+# What people did about alerts and sources; who is empty where the machine did it.
+action = sa.Table(
+    "action",
+    metadata,
+    sa.Column("id", _Id, primary_key=True),
+    sa.Column("at_ns", sa.BigInteger, nullable=False),
+    sa.Column("who", sa.Text, nullable=False),
+    sa.Column("what", sa.Text, nullable=False),
+    sa.Column("source", sa.Text, nullable=False),
+    sa.Column("alert", sa.Text, nullable=False),
+    sa.Column("comment", sa.Text, nullable=False),
+    sa.Column("details", sa.Text, nullable=False),
+)
+action_source = sa.Index("action_source", action.c.source, action.c.id)
 
 # Tokens are kept as SHA-256 of 32 random bytes; the token itself is shown once.
 token = sa.Table(
