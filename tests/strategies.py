@@ -3,11 +3,15 @@
 from __future__ import annotations
 
 import numpy as np
+from hypothesis import settings
 from hypothesis import strategies as st
 
 from scoring.model import Member
 from scoring.tree import Tree
 from tests.trees import random_member, random_tree
+
+# For tests whose slow twin costs more than what it checks.
+SOME = settings(max_examples=40)
 
 SEEDS = st.integers(0, 2**31)
 

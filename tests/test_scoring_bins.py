@@ -11,6 +11,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from scoring.bins import GROUP, MAX_BINS, MISSING, Bins, BinTable
+from tests.strategies import SOME
 
 BORDERS = st.lists(
     st.floats(-1e6, 1e6, allow_nan=False).map(lambda x: round(x, 3)), max_size=40, unique=True
@@ -27,6 +28,7 @@ def slow_bin(value: float, bins: Bins) -> int:
     return bisect_right(bins.borders.tolist(), value)
 
 
+@SOME
 @given(st.lists(BORDERS, min_size=1, max_size=4), st.data())
 def test_the_kernel_equals_a_plain_search(borders: list[list[float]], data: st.DataObject) -> None:
     bins = tuple(Bins(np.array(b, dtype=float)) for b in borders)

@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 from scoring.bins import MISSING, BinRows
 from scoring.density import belief_of, removal_of, surprise_of
 from scoring.model import Member
-from tests.strategies import SEEDS, members
+from tests.strategies import SEEDS, SOME, members
 from tests.trees import (
     hidden,
     joint_states,
@@ -38,12 +38,14 @@ def some_rows(member: Member, seed: int, n: int = 5) -> BinRows:
     return rows
 
 
+@SOME
 @given(members())
 def test_a_member_is_a_density_over_all_joint_states(member: Member) -> None:
     surprise = surprise_of(member, joint_states(sizes(member)))
     assert math.fsum(np.exp(-surprise)) == pytest.approx(1.0, abs=1e-11)
 
 
+@SOME
 @given(members(), SEEDS)
 def test_surprise_sums_over_the_regimes_that_may_hold(member: Member, seed: int) -> None:
     rows = some_rows(member, seed)
@@ -51,6 +53,7 @@ def test_surprise_sums_over_the_regimes_that_may_hold(member: Member, seed: int)
     np.testing.assert_allclose(surprise_of(member, rows), wanted, rtol=1e-9, atol=1e-9)
 
 
+@SOME
 @given(members(), SEEDS, st.data())
 def test_removal_equals_the_difference_of_two_sums(
     member: Member, seed: int, data: st.DataObject
@@ -75,6 +78,7 @@ def test_removal_equals_the_difference_of_two_sums(
             assert own[r, i] == pytest.approx(rest - whole, rel=1e-8, abs=1e-8)
 
 
+@SOME
 @given(members(), SEEDS, st.data())
 def test_beliefs_sum_over_the_regimes_that_may_hold(
     member: Member, seed: int, data: st.DataObject

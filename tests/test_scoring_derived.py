@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from scoring.channels import ChannelTable, parse_channels
 from scoring.derived import MAX_AGE_STEPS, Carry, derive, groups, looks_back
+from tests.strategies import SOME
 
 NAN = float("nan")
 S = 1_000_000_000
@@ -77,6 +78,7 @@ def test_the_carry_of_the_last_record_is_used_and_handed_on() -> None:
     np.testing.assert_array_equal(after.values, VALUES[0])
 
 
+@SOME
 @given(
     st.lists(st.integers(1, 40), min_size=1, max_size=12),
     st.integers(0, 2**31),

@@ -10,7 +10,7 @@ from hypothesis import assume, given
 from hypothesis import strategies as st
 
 from scoring.expected import EXPECTED_SHARE, shortest_interval
-from tests.strategies import SEEDS
+from tests.strategies import SEEDS, SOME
 
 Case = tuple[list[float], list[float]]
 
@@ -40,6 +40,7 @@ def held(low: float, high: float, p: list[float], borders: list[float]) -> float
     return mass + p[0] * (low == -math.inf) + p[-1] * (high == math.inf)
 
 
+@SOME
 @given(beliefs())
 def test_the_interval_holds_its_share(case: Case) -> None:
     p, borders = case
@@ -48,6 +49,7 @@ def test_the_interval_holds_its_share(case: Case) -> None:
     assert low <= best <= high
 
 
+@SOME
 @given(beliefs())
 def test_no_closed_interval_that_holds_the_share_is_shorter(case: Case) -> None:
     p, borders = case
@@ -86,6 +88,7 @@ def test_cases_worked_by_hand(
     assert found == pytest.approx((low, high, best), abs=1e-12)
 
 
+@SOME
 @given(beliefs(), st.sampled_from([0.01, 0.25, 0.5, 2.0]))
 def test_the_interval_is_rounded_outward_to_the_resolution(case: Case, resolution: float) -> None:
     p, borders = case
@@ -114,6 +117,7 @@ def test_a_channel_without_borders_expects_anything() -> None:
     assert math.isnan(best)
 
 
+@SOME
 @given(SEEDS)
 def test_best_is_the_median_of_what_is_believed(seed: int) -> None:
     rng = np.random.default_rng(seed)

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 from scoring.bins import MISSING, BinRows
 from scoring.kernels import belief_row, evidence_rows, removal_rows
 from scoring.tree import Tree
-from tests.strategies import SEEDS, trees
+from tests.strategies import SEEDS, SOME, trees
 from tests.trees import (
     hidden,
     random_rows,
@@ -43,6 +43,7 @@ def some_rows(tree: Tree, seed: int, n: int = 5) -> BinRows:
     return rows
 
 
+@SOME
 @given(trees(), SEEDS)
 def test_evidence_equals_the_sum_over_every_completion(tree: Tree, seed: int) -> None:
     rows = some_rows(tree, seed)
@@ -50,6 +51,7 @@ def test_evidence_equals_the_sum_over_every_completion(tree: Tree, seed: int) ->
     np.testing.assert_allclose(evidence_rows(tree.arrays, rows), wanted, rtol=1e-11, atol=1e-11)
 
 
+@SOME
 @given(trees(), SEEDS)
 def test_own_surprise_is_what_removal_takes_away(tree: Tree, seed: int) -> None:
     rows = some_rows(tree, seed)
@@ -66,6 +68,7 @@ def test_own_surprise_is_what_removal_takes_away(tree: Tree, seed: int) -> None:
             assert own[r, i] == pytest.approx(wanted, rel=1e-9, abs=1e-9)
 
 
+@SOME
 @given(trees(most_nodes=6, most_bins=3), SEEDS, st.data())
 def test_what_is_derived_from_an_instrument_is_removed_with_it(
     tree: Tree, seed: int, data: st.DataObject
@@ -88,6 +91,7 @@ def test_what_is_derived_from_an_instrument_is_removed_with_it(
             assert own[r, i] == pytest.approx(wanted, rel=1e-9, abs=1e-9)
 
 
+@SOME
 @given(trees(), SEEDS, st.data())
 def test_beliefs_equal_the_normalised_joint(tree: Tree, seed: int, data: st.DataObject) -> None:
     node = data.draw(st.integers(0, tree.n_nodes - 1))
@@ -102,6 +106,7 @@ def test_beliefs_equal_the_normalised_joint(tree: Tree, seed: int, data: st.Data
         assert np.all(belief[len(joint) :] == 0)
 
 
+@SOME
 @given(trees(), SEEDS)
 def test_a_batch_equals_one_by_one(tree: Tree, seed: int) -> None:
     rows = some_rows(tree, seed)

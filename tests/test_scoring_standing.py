@@ -10,6 +10,7 @@ from hypothesis.extra.numpy import arrays
 
 from scoring.derived import Carry
 from scoring.standing import STANDING_FORMAT, BadStanding, Standing
+from tests.strategies import SOME
 
 TIMES = st.integers(-(2**63), 2**63 - 1)
 VALUES = arrays(np.float64, st.integers(1, 5), elements=st.floats(allow_nan=True))
@@ -22,6 +23,7 @@ STANDINGS = st.builds(
 )
 
 
+@SOME
 @given(STANDINGS)
 def test_bytes_give_the_same_standing(standing: Standing) -> None:
     back = Standing.from_bytes(standing.to_bytes())

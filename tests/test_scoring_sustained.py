@@ -12,6 +12,7 @@ from hypothesis import strategies as st
 from numpy.typing import NDArray
 
 from scoring.sustained import sustain
+from tests.strategies import SOME
 
 S = 1_000_000_000
 PLAIN = {"last_ns": -1, "before": 0.0, "usual": 0.5, "tau_s": 150.0, "step_s": 10.0, "cap": 30.0}
@@ -48,6 +49,7 @@ SECONDS = st.lists(st.integers(0, 400).map(float), min_size=1, max_size=15)
 EXCESS = st.one_of(st.floats(-50, 1e6), st.just(math.nan))
 
 
+@SOME
 @given(SECONDS, st.data(), st.one_of(st.none(), st.floats(0, 100)), st.floats(-5, 30))
 def test_the_kernel_equals_its_twin(
     seconds: list[float], data: st.DataObject, last_s: float | None, before: float
@@ -60,6 +62,7 @@ def test_the_kernel_equals_its_twin(
     assert value == out[-1]
 
 
+@SOME
 @given(SECONDS, st.data())
 def test_a_batch_equals_one_by_one(seconds: list[float], data: st.DataObject) -> None:
     excess = data.draw(st.lists(EXCESS, min_size=len(seconds), max_size=len(seconds)))

@@ -11,7 +11,7 @@ from hypothesis import strategies as st
 
 from scoring.kernels import evidence_rows
 from scoring.tree import PAD, Tree
-from tests.strategies import SEEDS, trees
+from tests.strategies import SEEDS, SOME, trees
 from tests.trees import (
     joint_states,
     random_rows,
@@ -23,12 +23,14 @@ from tests.trees import (
 )
 
 
+@SOME
 @given(trees())
 def test_probabilities_over_all_joint_states_sum_to_one(tree: Tree) -> None:
     evidence = evidence_rows(tree.arrays, joint_states(sizes_of(tree)))
     assert math.fsum(np.exp(evidence)) == pytest.approx(1.0, abs=1e-12)
 
 
+@SOME
 @given(trees(), SEEDS)
 def test_every_root_gives_the_same_total_also_with_gaps(tree: Tree, seed: int) -> None:
     rng = np.random.default_rng(seed)
@@ -39,6 +41,7 @@ def test_every_root_gives_the_same_total_also_with_gaps(tree: Tree, seed: int) -
         assert rooted == pytest.approx([ours] * tree.n_nodes, abs=1e-9, rel=1e-10)
 
 
+@SOME
 @given(trees(), SEEDS, st.data())
 def test_another_order_of_channels_changes_nothing(
     tree: Tree, seed: int, data: st.DataObject

@@ -8,7 +8,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from numpy.typing import NDArray
 
-from tests.strategies import SEEDS
+from tests.strategies import SEEDS, SOME
 from training.counts import STRIP, count_pairs
 
 Columns = NDArray[np.uint8]
@@ -30,6 +30,7 @@ def count(columns: Columns, left: list[int], right: list[int], width: int) -> ND
     return counts
 
 
+@SOME
 @given(SEEDS, st.integers(0, 70), st.integers(1, 6))
 def test_counts_equal_a_plain_loop(seed: int, n: int, width: int) -> None:
     rng = np.random.default_rng(seed)
@@ -46,6 +47,7 @@ def test_strips_leave_no_record_out(n: int) -> None:
     np.testing.assert_array_equal(count(columns, [0], [1], 16)[0], wanted)
 
 
+@SOME
 @given(SEEDS, st.integers(0, 60))
 def test_counts_add_up_over_any_split(seed: int, cut: int) -> None:
     rng = np.random.default_rng(seed)

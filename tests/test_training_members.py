@@ -51,10 +51,10 @@ def learned(values: Floats, table: ChannelTable, folder: Path) -> Learned:
 def two_pumps(turns: bool) -> Floats:
     """Return flow, power and a pump that, if `turns`, turns their relation round."""
     rng = np.random.default_rng(2)
-    on = np.arange(2400) // 80 % 2
-    flow = rng.normal(size=2400)
+    on = np.arange(1400) // 40 % 2
+    flow = rng.normal(size=1400)
     sign = np.where(on == 1, -1.0, 1.0) if turns else 1.0
-    return np.column_stack([flow, 0.95 * sign * flow + 0.3 * rng.normal(size=2400), on])
+    return np.column_stack([flow, 0.95 * sign * flow + 0.3 * rng.normal(size=1400), on])
 
 
 def test_a_state_that_turns_a_relation_round_gets_trees_of_its_own(tmp_path: Path) -> None:
