@@ -22,7 +22,7 @@ def surprise_of(member: Member, rows: BinRows) -> Floats:
     if len(member.parts) == 1:
         return -evidence_rows(member.parts[0].tree.arrays, rows)
     out = np.empty(len(rows))
-    for part, where in _by_part(member, rows):
+    for part, where in rows_by_part(member, rows):
         out[where] = -evidence_rows(member.parts[part].tree.arrays, rows[where])
         out[where] -= member.parts[part].log_share
     mixed = np.flatnonzero(_unread(member, rows))
@@ -44,7 +44,7 @@ def removal_of(
         return -evidence, own
     n_instruments = len(group_start) - 1
     surprise, own = np.empty(len(rows)), np.full((len(rows), n_instruments), np.nan)
-    for part, where in _by_part(member, rows):
+    for part, where in rows_by_part(member, rows):
         tree = member.parts[part].tree.arrays
         evidence, own[where] = removal_rows(tree, rows[where], group_start, group_nodes)
         surprise[where] = -evidence - member.parts[part].log_share
@@ -71,7 +71,7 @@ def belief_of(member: Member, row: BinRows, node: int) -> Floats:
     if len(member.parts) == 1:
         return belief_row(member.parts[0].tree.arrays, hidden, node)[:n_bins]
     if node not in member.regime and not _unread(member, hidden[None, :])[0]:
-        part = _by_part(member, hidden[None, :])[0][0]
+        part = rows_by_part(member, hidden[None, :])[0][0]
         return belief_row(member.parts[part].tree.arrays, hidden, node)[:n_bins]
     # Which part holds is open, so every bin is tried.
     trial = np.repeat(hidden[None, :], n_bins, axis=0)
@@ -85,8 +85,13 @@ def _unread(member: Member, rows: BinRows) -> NDArray[np.bool_]:
     return np.asarray((rows[:, list(member.regime)] == MISSING).any(axis=1))
 
 
-def _by_part(member: Member, rows: BinRows) -> list[tuple[int, Ints]]:
-    """Return for each part that holds somewhere the rows whose regime is read and its own."""
+def rows_by_part(member: Member, rows: BinRows) -> list[tuple[int, Ints]]:
+    """Return each part that holds somewhere with the numbers of its rows.
+
+    Rows of which a regime channel is not read are in none.
+    """
+    if len(member.parts) == 1:
+        return [(0, np.arange(len(rows)))]
     codes = rows[:, list(member.regime)]
     free = ~_unread(member, rows)
     found: list[tuple[int, Ints]] = []
@@ -102,17 +107,6 @@ def _by_part(member: Member, rows: BinRows) -> list[tuple[int, Ints]]:
     return found
 
 
-def _with_key(member: Member, k: int, row: BinRows) -> BinRows:
-    """Return the row with the part's own regime filled in where it was missing."""
-    key = member.parts[k].key
-    filled = row.copy()
-    if key is not None:
-        for node, b in zip(member.regime, key, strict=True):
-            if filled[node] == MISSING:
-                filled[node] = b
-    return filled
-
-
 def _part_evidence(member: Member, k: int, rows: BinRows) -> Floats:
     """Return ln(share * p_k(observed)) of rows with part k's regime where missing.
 
@@ -126,7 +120,9 @@ def _part_evidence(member: Member, k: int, rows: BinRows) -> Floats:
         fits = ((codes == np.array(part.key, dtype=np.uint8)) | (codes == MISSING)).all(axis=1)
         out = np.full(len(rows), -np.inf)
         if fits.any():
-            filled = np.array([_with_key(member, k, row) for row in rows[fits]])
+            # What is missing of the regime is filled in: the part holds for one value of it.
+            filled = rows[fits]
+            filled[:, list(member.regime)] = np.array(part.key, dtype=np.uint8)
             out[fits] = evidence_rows(tree, filled) + part.log_share
         return out
     everything = evidence_rows(tree, rows)

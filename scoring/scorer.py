@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from scoring.bins import MISSING, BinRows
 from scoring.channels import Channel
-from scoring.density import belief_of, removal_of
+from scoring.density import belief_of, removal_of, rows_by_part
 from scoring.derived import Carry, derive
 from scoring.excess import ExcessScale
 from scoring.expected import shortest_interval
@@ -205,17 +205,20 @@ class Scorer:
         self, member: Member, rows: BinRows, suspect: NDArray[np.int16]
     ) -> tuple[Floats, Floats, Floats]:
         """Return what each record's suspect should have read; NaN for a state or none."""
-        table = member.bin_table
-        if len(member.parts) == 1:
-            arrays = member.parts[0].tree.arrays
-            groups = self.model.derived_groups
-            return _intervals(arrays, rows, suspect, table.borders, self._resolution, *groups)
+        borders, groups = member.bin_table.borders, self.model.derived_groups
         low, high, best = (np.full(len(rows), np.nan) for _ in range(3))
-        for r, i in enumerate(suspect.tolist()):
+        left = np.ones(len(rows), dtype=np.bool_)
+        for k, at in rows_by_part(member, rows):
+            arrays = member.parts[k].tree.arrays
+            found = _intervals(arrays, rows[at], suspect[at], borders, self._resolution, *groups)
+            low[at], high[at], best[at] = found
+            left[at] = False
+        for r in np.flatnonzero(left).tolist():
+            i = int(suspect[r])
             if i >= 0 and not self.instruments[i].is_state:
                 belief = belief_of(member, self._without(rows[r : r + 1], i)[0], i)
-                borders = member.bins[i].borders
-                low[r], high[r], best[r] = shortest_interval(belief, borders, self._resolution[i])
+                own = member.bins[i].borders
+                low[r], high[r], best[r] = shortest_interval(belief, own, self._resolution[i])
         return low, high, best
 
 
