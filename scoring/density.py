@@ -55,12 +55,35 @@ def removal_of(
             own[mixed, i] = _without(member, rows[mixed], i, group_start, group_nodes)
             own[mixed, i] = surprise[mixed] - own[mixed, i]
             own[mixed[rows[mixed, i] == MISSING], i] = np.nan
-    whole = np.flatnonzero(~_unread(member, rows))
-    if len(whole):
-        for i in member.regime:
-            rest = _without(member, rows[whole], i, group_start, group_nodes)
-            own[whole, i] = surprise[whole] - rest
+    whole = np.flatnonzero(~_unread(member, rows)) if len(mixed) else np.arange(len(rows))
+    alone = [i for i in member.regime if group_start[i + 1] == group_start[i]]
+    if len(whole) and alone:
+        own[np.ix_(whole, np.array(alone))] = _one_by_one(member, rows[whole], surprise[whole], alone)
+    for i in set(member.regime) - set(alone):
+        rest = _without(member, rows[whole], i, group_start, group_nodes)
+        own[whole, i] = surprise[whole] - rest
     return surprise, own
+
+
+def _one_by_one(member: Member, rows: BinRows, surprise: Floats, channels: list[int]) -> Floats:
+    """Return the own surprise of regime channels with nothing derived from them.
+
+    rows: (n, n_nodes), all of the regime read. Each channel's bins are tried in turn,
+    whichever part holds then. Returns (n, n_channels) nats.
+    """
+    n_bins = [member.bins[node].n_bins for node in channels]
+    trial = np.repeat(rows[:, None, :], sum(n_bins), axis=1)
+    first = 0
+    for node, n in zip(channels, n_bins, strict=True):
+        trial[:, first : first + n, node] = np.arange(n)
+        first += n
+    logs = -surprise_of(member, trial.reshape(-1, rows.shape[1])).reshape(len(rows), -1)
+    ends = np.cumsum(n_bins).tolist()
+    rest: list[Floats] = [
+        np.logaddexp.reduce(logs[:, end - n : end], axis=1)
+        for end, n in zip(ends, n_bins, strict=True)
+    ]
+    return np.asarray(surprise[:, None] + np.stack(rest, axis=1))
 
 
 def belief_of(member: Member, row: BinRows, node: int) -> Floats:
