@@ -2,6 +2,7 @@
 #   make setup    build .venv          make test    format, lint, types, tests
 #   make demo     see it work          make bench   budgets as ratios inside one run
 #   make soak     the long runs        ONCE=1       let the demo end by itself
+#   make figures  the README's figures, from the demo as it comes out
 
 PYTHON ?= python3
 VENV := .venv
@@ -14,7 +15,7 @@ READY_TO_TEST := $(VENV)/.ready-to-test
 # What is imported is compiled then; compiling all of every library first takes longer.
 INSTALL = $(BIN)/python -m pip install --quiet --disable-pip-version-check --no-compile --editable
 
-.PHONY: setup demo test bench soak
+.PHONY: setup demo test bench soak figures
 
 setup: $(READY_TO_TEST)
 
@@ -45,3 +46,6 @@ bench: setup
 
 soak: setup
 	$(BIN)/pytest -m soak --capture=no tests
+
+figures: $(READY)
+	$(BIN)/python .ci/readme.py
