@@ -68,10 +68,10 @@ def test_levels_fall_and_counts_rise_from_strict_to_loose(tmp_path: Path) -> Non
     assert (np.diff(curve.record) <= 0).all()
     assert (np.diff(curve.sustained) <= 0).all()
     assert (curve.sustained <= curve.record).all()
-    # Together at least as often as either alone was counted, at most as both.
-    counted = curve.alone > curve.scales[0].n_tail
-    assert (curve.seen[counted] >= 0.8 * curve.alone[counted]).all()
-    assert (curve.seen <= 2 * np.maximum(curve.alone, 1) + 1).all()
+    # Together about as often as sustained alone, at most as both; levels are tried in steps.
+    counted = curve.alone > curve.scales[1].n_tail
+    assert (curve.seen[counted] >= 0.6 * curve.alone[counted]).all()
+    assert (curve.seen <= 4 / 3 * np.maximum(curve.alone, 1) + 1).all()
 
 
 def test_a_budget_beyond_the_data_follows_the_tail_and_no_further_than_ten_spans(
