@@ -63,6 +63,7 @@ def test_rates_are_of_the_whole_fleet() -> None:
     # Three in four source-days of two sources: 1.5 a day.
     assert verdict.alerts_per_day == pytest.approx(1.5)
     assert verdict.false_per_day == pytest.approx(1.5)
+    assert verdict.false_share == pytest.approx(3 / 96)
     low, high = verdict.false_limits()
     assert low < 1.5 < high
     assert verdict.false_limits(4.0)[1] > high

@@ -90,6 +90,12 @@ class Verdict:
         """False alerts a day over the whole fleet."""
         return len(self.false) / self.quiet_days * self.n_sources if self.quiet_days > 0 else 0.0
 
+    @property
+    def false_share(self) -> float:
+        """Share of the quiet time that was spent in false alerts."""
+        long_ns = sum(call.cleared_ns - call.raised_ns for call in self.false)
+        return long_ns / DAY_NS / self.quiet_days if self.quiet_days > 0 else 0.0
+
     def false_limits(self, dispersion: float = 1.0) -> tuple[float, float]:
         """Return 95 % limits of `false_per_day`."""
         return rate_limits(len(self.false), self.quiet_days / self.n_sources, dispersion)
@@ -98,10 +104,6 @@ class Verdict:
     def alerts_per_day(self) -> float:
         """All alerts a day over the whole fleet."""
         return self.n_alerts / self.source_days * self.n_sources if self.source_days > 0 else 0.0
-
-    def summed(self, findings: Sequence[Finding] | None = None) -> Sum:
-        """Return the sums over some findings, over all unless said."""
-        return Sum.of(self.findings if findings is None else findings)
 
 
 @dataclass(frozen=True, slots=True)

@@ -29,7 +29,7 @@ INCIDENTS = (
 )  # fmt: skip
 LEVELS = (
     "record_level", "sustained_level", "alerts_per_day", "false_per_day", "incidents", "caught",
-    "median_delay_s", "time_share", "of_the_model",
+    "median_delay_s", "time_share", "false_time_share", "of_the_model",
 )  # fmt: skip
 
 
@@ -126,6 +126,7 @@ def _level(row: LevelRow) -> tuple[object, ...]:
         total.n_caught,
         total.delay_s,
         row.time_share,
+        row.verdict.false_share,
         row.is_model,
     )
 

@@ -75,6 +75,7 @@ def _burden(done: Replayed) -> Section:
     if done.known:
         named |= {
             "false a day": f"{verdict.false_per_day:.2f}",
+            "time in false alerts": f"{verdict.false_share:.2%}",
             "caught": f"{total.n_caught} of {total.n}",
             "right suspect": f"{total.n_first} of {total.n_caught}",
             "median delay": duration(total.delay_s),
@@ -112,7 +113,7 @@ def _levels(done: Replayed) -> Section:
     heading = ["excess", "sustained", "alerts a day"]
     if done.known:
         heading += ["false a day", "caught", "median delay"]
-    heading += ["time in alert", ""]
+    heading += ["in false alerts" if done.known else "time in alert", ""]
     cells = [_level_cells(row, with_incidents=bool(done.known)) for row in _thinned(done.rows)]
     rows = table(heading, cells, words=(len(heading) - 1,), caption="Strict to loose; nats.")
     return Section("Other levels", (levels_picture(done), rows))
@@ -133,7 +134,8 @@ def _level_cells(row: LevelRow, *, with_incidents: bool) -> list[str]:
             f"{total.n_caught} of {total.n}",
             duration(total.delay_s),
         ]
-    return [*cells, f"{row.time_share:.2%}", "the model's" if row.is_model else ""]
+    share = row.verdict.false_share if with_incidents else row.time_share
+    return [*cells, f"{share:.2%}", "the model's" if row.is_model else ""]
 
 
 def _methods(done: Replayed) -> Section:

@@ -97,7 +97,7 @@ def other_lines(done: Replayed) -> list[str]:
 
 METHOD_HEADING = (
     "method", "levels", "caught", "right suspect", "in first 3", "median delay", "false a day",
-    "time in alert",
+    "time in false alerts",
 )  # fmt: skip
 
 
@@ -112,7 +112,7 @@ def method_cells(row: MethodRow) -> tuple[str, ...]:
         _percent(total.n_three, total.n_caught),
         duration(total.delay_s),
         f"{row.verdict.false_per_day:.2f}",
-        f"{row.time_share:.2%}",
+        f"{row.verdict.false_share:.2%}",
     )
 
 

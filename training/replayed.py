@@ -234,6 +234,7 @@ def _by_day(calls: Sequence[Call], spans: dict[str, tuple[int, int]]) -> Ints:
     """Return alerts by whole day of the fleet, from the first record on."""
     first = min(first for first, _ in spans.values())
     last = max(last for _, last in spans.values())
-    n_days = max(1, (last - first) // DAY_NS)
+    # The last day may lack a few records.
+    n_days = max(1, round((last - first) / DAY_NS))
     days = np.array([(call.raised_ns - first) // DAY_NS for call in calls], dtype=np.int64)
     return np.bincount(days[days < n_days], minlength=n_days).astype(np.int64)
