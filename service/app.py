@@ -20,6 +20,7 @@ from service.logs import log_event
 from service.openapi import describe
 from service.page import page_router
 from service.problems import Problem
+from service.routes_alerts import alerts_router
 from service.routes_health import health_router
 from service.routes_read import read_router
 from service.routes_records import RecordsEndpoint
@@ -49,6 +50,7 @@ def create_app(service: Service) -> ASGIApp:
     )
     app.include_router(page_router(service))
     app.include_router(read_router(service))
+    app.include_router(alerts_router(service))
     app.include_router(health_router(service))
     _add_documents(app, service)
     _add_handlers(app)
@@ -102,7 +104,8 @@ def _add_handlers(app: FastAPI) -> None:
         if error.status_code == 405:
             # A path may be served by several routes; the framework names the first one's.
             quick = [method for path, method in QUICK if path == request.url.path]
-            response.headers["allow"] = ", ".join(["GET", *quick])
+            if quick:
+                response.headers["allow"] = ", ".join(["GET", *quick])
         return response
 
 

@@ -13,6 +13,7 @@ from typing import Any, Protocol
 import numpy as np
 from numpy.typing import NDArray
 
+from scoring.episodes import Episodes
 from service.layout import Layout
 
 Floats = NDArray[np.float64]
@@ -30,6 +31,7 @@ class Scored:
     suspect: column of the channel, -1 where there is none. alert: 0 none, 1 record,
     2 sustained. words: row -> probabilities of a suspect state's words. every: per row a
     list of all channels' surprise and expected interval, where it was asked for.
+    scores: as the engine made them, for its alert episodes.
     """
 
     surprise: Floats
@@ -44,6 +46,7 @@ class Scored:
     judged: NDArray[np.bool_]
     words: dict[int, Mapping[str, float]] = field(default_factory=dict)
     every: dict[int, list[dict[str, Any]]] = field(default_factory=dict)
+    scores: Any = None
 
     @classmethod
     def empty(cls, n: int) -> Scored:
@@ -99,6 +102,10 @@ class Engine(Protocol):
     @property
     def figures(self) -> Mapping[str, float]:
         """What the model says of itself, by the names in metrics.FIGURE_HELP."""
+
+    @property
+    def episodes(self) -> Episodes | None:
+        """What makes alerts of its scores; None where it makes none."""
 
     def score(
         self,

@@ -27,9 +27,10 @@ ROLE_OF: Mapping[tuple[str, str], str | None] = {
     ("GET", "/health/ready"): None,
 }
 _OPEN_PREFIX = "/problems/"
+_ACTION_PREFIXES = ("/alerts/", "/sources/")
 ROUTES = frozenset(
     (
-        "/", "/records", "/alerts", "/sources", "/model", "/pruned", "/metrics",
+        "/", "/records", "/alerts", "/actions", "/sources", "/model", "/pruned", "/metrics",
         "/openapi.json", "/health/live", "/health/ready",
     )
 )  # fmt: skip
@@ -115,9 +116,11 @@ class Front:
             raise Problem("overload", f"{self.n_running_max} requests are being answered already")
         role = ROLE_OF.get(key, "operate" if key[0] not in ("GET", "HEAD") else "read")
         if role is not None and not key[1].startswith(_OPEN_PREFIX):
-            self.service.tokens.check(
+            name = self.service.tokens.check(
                 None if authorization is None else authorization.decode("latin-1"), role
             )
+            # Whoever acts on an alert is kept with the action.
+            scope["state"]["by"] = name or "local"
 
     def _check_host(self, host: bytes | None) -> None:
         # A page that points its own name at this address would else read as if it were local.
@@ -129,7 +132,7 @@ class Front:
     def _count(self, scope: Scope, request: _Request) -> None:
         path, method = scope["path"], scope["method"]
         seconds = time.perf_counter() - request.started
-        route = path if path in ROUTES else OTHER_ROUTE
+        route = path if path in ROUTES else _action_route(scope)
         if method not in _METHODS:
             method = OTHER_ROUTE
         self.service.metrics.request_done(route, method, request.status, seconds)
@@ -143,6 +146,12 @@ class Front:
                 problem=request.problem,
                 seconds=round(seconds, 6),
             )
+
+
+def _action_route(scope: Scope) -> str:
+    """Return the pattern of an action's path: a label a path would be without end."""
+    pattern = getattr(scope.get("route"), "path_format", "")
+    return pattern if pattern.startswith(_ACTION_PREFIXES) else OTHER_ROUTE
 
 
 class _Request:

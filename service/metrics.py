@@ -319,6 +319,7 @@ _GAUGE_HELP = {
     "store_free_bytes": "Free space on the store's disk.",
     "queue_records": "Records that wait for their commit.",
     "body_memory_bytes": "Bodies held in memory.",
+    "alarm_budget_alerts_last_day": "Alerts raised in the last day that the budget counts.",
     "start_timestamp_seconds": "When the service started.",
     "model_published_timestamp_seconds": "When the model in use was published.",
 }

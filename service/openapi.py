@@ -47,19 +47,19 @@ def describe(app: FastAPI, service: Service) -> dict[str, Any]:
     document["paths"].setdefault("/records", {})["post"] = _post(
         service.settings.limits.n_batch, channels
     )
-    for path in document["paths"].values():
+    for name, path in document["paths"].items():
         for method, operation in path.items():
-            _add_refusals(operation, method.upper())
+            _add_refusals(operation, method.upper(), about_one="{" in name)
     if service.tokens.are_needed:
         document["components"]["securitySchemes"] = {"token": {"type": "http", "scheme": "bearer"}}
         document["security"] = [{"token": []}]
     return document
 
 
-def _add_refusals(operation: dict[str, Any], method: str) -> None:
+def _add_refusals(operation: dict[str, Any], method: str, *, about_one: bool) -> None:
     responses = operation.setdefault("responses", {})
     responses.pop("422", None)
-    for status in _REFUSALS[method]:
+    for status in sorted((*_REFUSALS[method], *((404,) if about_one else ()))):
         kinds = [kind.title for kind in KINDS.values() if kind.status == status]
         responses[str(status)] = {
             "description": "; ".join(kinds),

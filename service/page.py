@@ -1,4 +1,4 @@
-"""The one page for people: sources against their level, the latest records over a level.
+"""The one page for people: open alerts, sources against their level, records over a level.
 
 Plain HTML made here, nothing loaded from elsewhere; the browser needs no script.
 """
@@ -15,15 +15,19 @@ import sqlalchemy as sa
 from fastapi import APIRouter
 from starlette.responses import HTMLResponse
 
+from scoring.alerts import Alert
+from service.alerting import read_alert
 from service.answers import stored_answer
 from service.engine import ALERT_WORDS
 from service.running import Service
 from service.schemas import ADVICE
 from service.store import pages
+from service.store.alerts import alerts_page
 from service.times import format_time
 
 _N_SOURCES = 200
 _N_ALERTS = 20
+_N_OPEN = 100
 _REFRESH_S = 30
 
 _STYLE = """
@@ -50,18 +54,20 @@ def page_router(service: Service) -> APIRouter:
     """Return the route of the page."""
     router = APIRouter()
 
-    def read() -> tuple[list[dict[str, Any]], list[dict[str, Any]]]:
+    def read() -> tuple[list[Alert], list[dict[str, Any]], list[dict[str, Any]]]:
         with service.database.read.connect() as connection:
-            return _sources(connection), _alerts(connection)
+            found, _ = alerts_page(connection, state="open", limit=_N_OPEN)
+            opened = [read_alert(data) for data in found]
+            return opened, _sources(connection), _alerts(connection)
 
     @router.get("/", include_in_schema=False)
     async def page() -> HTMLResponse:
         """Answer the page."""
-        sources, alerts = await asyncio.to_thread(read)
+        opened, sources, alerts = await asyncio.to_thread(read)
         level = service.engine.levels.get("sustained", 0.0)
         policy = "default-src 'none'; style-src 'unsafe-inline'; frame-ancestors 'none'"
         return HTMLResponse(
-            _html(sources, alerts, level, service.engine.name),
+            _html(opened, sources, alerts, level, service.engine.name),
             headers={"content-security-policy": policy, "cache-control": "no-store"},
         )
 
@@ -86,9 +92,16 @@ def _alerts(connection: sa.Connection) -> list[dict[str, Any]]:
 
 
 def _html(
-    sources: list[dict[str, Any]], alerts: list[dict[str, Any]], level: float, model: str
+    opened: list[Alert],
+    sources: list[dict[str, Any]],
+    alerts: list[dict[str, Any]],
+    level: float,
+    model: str,
 ) -> str:
     now = format_time(int(time.time()) * 1_000_000_000)
+    open_lines = "".join(_open_alert(alert) for alert in opened) or (
+        "<li class=quiet>No alert is open.</li>"
+    )
     source_lines = "".join(_source(row, level) for row in sources) or (
         "<li class=quiet>No record has come yet; the README shows how to post one.</li>"
     )
@@ -102,6 +115,8 @@ def _html(
 <h1>What is odd in the fleet</h1>
 <p class="quiet">{now}, model {escape(model)}</p>
 <p class="advice">{escape(ADVICE)}</p>
+<h2>Open alerts, latest first</h2>
+<ul>{open_lines}</ul>
 <h2>Sources, most sustained first</h2>
 <p class="quiet">Bar: sustained excess in nats; the mark is the level of {level:.2f} nats.</p>
 <ul>{source_lines}</ul>
@@ -125,6 +140,20 @@ def _source(row: dict[str, Any], level: float) -> str:
         f'<span class="number">{shown}</span>'
         f'<span class="quiet">last record {last}, {row["n_records"]} stored, '
         f"{row['n_over_level']} over a level{f', {alert} alert' if alert else ''}</span></li>"
+    )
+
+
+def _open_alert(alert: Alert) -> str:
+    state = alert.state
+    if alert.acknowledged_by:
+        state += f" by {alert.acknowledged_by}"
+    if alert.quiet:
+        state += f", {alert.quiet}"
+    near = f"; goes with {', '.join(alert.neighbours)}" if alert.neighbours else ""
+    return (
+        f"<li><strong>{escape(alert.source)}</strong> {escape(alert.sentence)}"
+        f'<p class="quiet">{escape(alert.kind)}, since {format_time(alert.since_ns)}, '
+        f"{escape(state)}{escape(near)}, id {escape(alert.id)}</p></li>"
     )
 
 

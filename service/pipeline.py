@@ -50,30 +50,35 @@ class Outcome:
 
 @dataclass(frozen=True, slots=True)
 class Run:
-    """Records of one source that moved its standing, in order, for an alert sink."""
+    """Records of one source in the order of arrival, for an alert sink.
+
+    values: (n, n_channels) as scored, bad readings NaN. heard_ns: when they came, by the
+    server's clock. still: they are late or ahead, and moved no standing; ahead: (n,) which
+    are ahead, None where none is.
+    """
 
     source: SourceState
     engine: Engine
     times_ns: NDArray[np.int64]
+    values: NDArray[np.float64]
     scored: Scored
+    heard_ns: int
+    still: bool = False
+    ahead: NDArray[np.bool_] | None = None
 
 
 class AlertSink(Protocol):
     """Takes what the service scored, to make alerts of it.
 
-    Called inside the transaction that stores the records, so that an alert and its
-    records are durable together; late and ahead records are not in it.
+    Called inside the transaction that stores the records, before the sources' states are
+    saved, so that an alert and its records are durable together.
     """
 
     def take(self, group: Group, runs: Sequence[Run]) -> None:
-        """Advance the alerts by these runs; write through the group's connection."""
+        """Advance the alerts by these runs; write through the group's connection.
 
-
-class NoAlerts:
-    """Alerts are then just the stored records over a level."""
-
-    def take(self, group: Group, runs: Sequence[Run]) -> None:
-        """Do nothing."""
+        What the sink remembers of a source it puts into the source's state.
+        """
 
 
 class GroupScorer:
@@ -106,8 +111,8 @@ class GroupScorer:
         if self.kept:
             self.sheet.scored.close_open_sides()
             self.group.insert(self._rows())
-            self.group.save([state for state, _ in self.kept])
             sink.take(self.group, self.runs)
+            self.group.save([state for state, _ in self.kept])
         return self._split()
 
     def _fresh(self, state: SourceState, rows: list[int]) -> list[int]:
@@ -231,6 +236,13 @@ class GroupScorer:
         out.scored.put(at, scored, rows)
         if not scored.judged.all():
             out.flags[at] += (~scored.judged * FLAG_NOT_JUDGED).astype(np.int16)
+        used = self.sheet.values[at]
+        if bad is not None:
+            used = np.where(bad, np.nan, used)
+        ahead = None if moves else times > self.now_ns + AHEAD_NS
+        self.runs.append(
+            Run(state, self.engine, times, used, scored, self.now_ns, not moves, ahead)
+        )
         if not moves:
             return
         state.live, state.model = live, self.engine.name
@@ -239,7 +251,6 @@ class GroupScorer:
         state.excess = _or_none(scored.excess[-1])
         state.sustained = _or_none(scored.sustained[-1])
         state.alert = int(scored.alert[-1])
-        self.runs.append(Run(state, self.engine, times, scored))
 
     def _rows(self) -> list[tuple[Any, ...]]:
         """Return the rows for the store, source by source."""

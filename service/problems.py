@@ -32,6 +32,10 @@ KINDS: Mapping[str, Kind] = {
     "bad-header": Kind(400, "Header cannot be used", "Correct the header that the detail names."),
     "bad-record": Kind(422, "Record cannot be used", "Correct the member that the detail names."),
     "bad-query": Kind(422, "Query cannot be used", "Correct the parameter that the detail names."),
+    "bad-action": Kind(422, "Action cannot be used", "Correct the member that the detail names."),
+    "impossible-action": Kind(
+        409, "Action is not possible now", "Look at GET /alerts for how things stand."
+    ),
     "conflict": Kind(
         409,
         "Another record stands there",

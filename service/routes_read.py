@@ -1,4 +1,4 @@
-"""The pages: records, alerts, sources, the model, what was pruned."""
+"""The pages: records, sources, the model, what was pruned."""
 
 # No postponed annotations here: the framework reads them, and they hold values of this app.
 
@@ -20,10 +20,8 @@ from service.nearest import nearest_of
 from service.problems import Problem
 from service.running import Service
 from service.schemas import (
-    ADVICE,
     TIME_EXAMPLE,
     TIME_PATTERN,
-    AlertsPage,
     ModelPage,
     PrunedPage,
     RecordsPage,
@@ -78,7 +76,7 @@ AfterQuery = Annotated[
 ]
 
 
-def _refuse_unknown(request: Request) -> None:
+def refuse_unknown(request: Request) -> None:
     """Refuse a parameter that is not known: a misspelt one would choose everything."""
     route = request.scope["route"]
     assert isinstance(route, APIRoute)
@@ -92,7 +90,7 @@ def _refuse_unknown(request: Request) -> None:
 
 def read_router(service: Service) -> APIRouter:
     """Return the routes that read the store and the model."""
-    router = APIRouter(dependencies=[Depends(_refuse_unknown)])
+    router = APIRouter(dependencies=[Depends(refuse_unknown)])
     n_page = service.settings.limits.n_page
     limit_query = Query(description="items at most, count", ge=1, le=n_page, examples=[100])
     layouts = _Layouts()
@@ -128,7 +126,7 @@ def read_router(service: Service) -> APIRouter:
         With `Accept: application/x-ndjson` all of them come, a line each, and `limit`
         is how many are read at a time.
         """
-        bounds = _time("from", from_), _time("to", to)
+        bounds = time_of("from", from_), time_of("to", to)
 
         def read(
             connection: sa.Connection, *, at: tuple[int, int] | None
@@ -139,7 +137,7 @@ def read_router(service: Service) -> APIRouter:
             )  # fmt: skip
             return layouts.answers(connection, found), following
 
-        at = _pair(after)
+        at = pair_of(after)
         if accept is not None and "application/x-ndjson" in accept:
 
             async def lines() -> AsyncIterator[bytes]:
@@ -154,31 +152,7 @@ def read_router(service: Service) -> APIRouter:
 
             return StreamingResponse(lines(), media_type="application/x-ndjson")
         items, following = await in_thread(partial(read, at=at))
-        return _answer({"items": items, "next": _cursor(following)})
-
-    @router.get(
-        "/alerts", responses=_page(AlertsPage), summary="Records over a level, newest first"
-    )
-    async def alerts(
-        source: SourceQuery = None,
-        from_: FromQuery = None,
-        to: ToQuery = None,
-        limit: Annotated[int, limit_query] = 100,
-        after: AfterQuery = None,
-    ) -> Response:
-        """Answer records that passed a level."""
-        bounds, at = (_time("from", from_), _time("to", to)), _pair(after)
-
-        def read(
-            connection: sa.Connection,
-        ) -> tuple[list[dict[str, Any]], tuple[int, int] | None]:
-            found, following = pages.over_level_page(
-                connection, source=source, from_ns=bounds[0], to_ns=bounds[1], limit=limit, after=at
-            )
-            return layouts.answers(connection, found), following
-
-        items, following = await in_thread(read)
-        return _answer({"items": items, "next": _cursor(following), "advice": ADVICE})
+        return answer({"items": items, "next": cursor_of(following)})
 
     @router.get("/sources", responses=_page(SourcesPage), summary="Sources and their standing")
     async def sources(
@@ -187,19 +161,19 @@ def read_router(service: Service) -> APIRouter:
         """Answer every source by name; `after` is the name of the last one seen."""
         rows, following = await in_thread(lambda c: pages.sources_page(c, limit=limit, after=after))
         items = [source_item(row, service) for row in rows]
-        return _answer({"items": items, "next": following})
+        return answer({"items": items, "next": following})
 
     @router.get("/model", responses=_page(ModelPage), summary="The model in use")
     async def model(source: SourceQuery = None) -> Response:
         """Answer the model as it is for one source, or for the fleet."""
-        return _answer({"items": [service.engine.describe(source)], "next": None})
+        return answer({"items": [service.engine.describe(source)], "next": None})
 
     @router.get("/pruned", responses=_page(PrunedPage), summary="What retention took out")
     async def pruned(
         limit: Annotated[int, limit_query] = 100, after: AfterQuery = None
     ) -> Response:
         """Answer when, why and how many records went."""
-        at = _pair(after)
+        at = pair_of(after)
         rows, following = await in_thread(
             lambda c: pages.pruned_page(c, limit=limit, after=at[0] if at else None)
         )
@@ -208,8 +182,8 @@ def read_router(service: Service) -> APIRouter:
              "before": format_time(row["before_ns"]), "records": row["n_records"]}
             for row in rows
         ]  # fmt: skip
-        return _answer(
-            {"items": items, "next": _cursor(None if following is None else (following, 0))}
+        return answer(
+            {"items": items, "next": cursor_of(None if following is None else (following, 0))}
         )
 
     return router
@@ -253,11 +227,13 @@ def _page(model: type[Any]) -> dict[int | str, dict[str, Any]]:
     return {200: {"model": model}}
 
 
-def _answer(body: dict[str, Any]) -> Response:
+def answer(body: dict[str, Any]) -> Response:
+    """Return a JSON answer."""
     return Response(orjson.dumps(body), media_type="application/json")
 
 
-def _time(name: str, text: str | None) -> int | None:
+def time_of(name: str, text: str | None) -> int | None:
+    """Return a time of the query; raises Problem."""
     if text is None:
         return None
     try:
@@ -267,11 +243,13 @@ def _time(name: str, text: str | None) -> int | None:
         raise Problem("bad-query", f"{name} = {text[:60]!r} {error}") from None
 
 
-def _cursor(place: tuple[int, int] | None) -> str | None:
+def cursor_of(place: tuple[int, int] | None) -> str | None:
+    """Return where the next page begins, as clients send it back."""
     return None if place is None else f"{place[0]}-{place[1]}"
 
 
-def _pair(after: str | None) -> tuple[int, int] | None:
+def pair_of(after: str | None) -> tuple[int, int] | None:
+    """Return what `cursor_of` wrote; raises Problem."""
     if after is None:
         return None
     match = _PAIR.fullmatch(after)

@@ -6,23 +6,32 @@ import asyncio
 import shutil
 import time
 from collections.abc import Callable, Coroutine
+from functools import partial
 from pathlib import Path
 from typing import Any
 
+import sqlalchemy as sa
+
+from scoring.alert_settings import AlertSettings
 from service.access import Tokens, is_loopback
+from service.alerting import N_TICKED, Keeper, budget_used
 from service.engine import Engine
 from service.logs import log_event
 from service.metrics import Metrics
-from service.pipeline import AlertSink, NoAlerts
+from service.pipeline import AlertSink
 from service.quick import warm
 from service.reload import ModelWatch
 from service.retention import Retention
 from service.settings import Settings
+from service.store.alerts import count_alerts, count_raised
 from service.store.database import Database
+from service.store.group import Group
 from service.writer import Writer
 
 # A token made or ended is in force after this long at most.
 _TOKEN_REFRESH_S = 2.0
+# Silence is judged in minutes; a look costs a walk over all sources.
+_TICK_S = 5.0
 
 
 class Service:
@@ -51,10 +60,11 @@ class Service:
         )
         self.tokens = Tokens(open_without=is_loopback(settings.server.host))
         self.models = ModelWatch(settings.model.path, load, self.metrics, settings.limits)
+        self.keeper = Keeper(AlertSettings(), clock_ns())
         self.writer = Writer(
             self.database,
             self.metrics,
-            sink or NoAlerts(),
+            sink or self.keeper,
             n_waiting_max=settings.limits.n_waiting,
             n_sources_max=settings.limits.n_sources,
             clock_ns=clock_ns,
@@ -85,6 +95,7 @@ class Service:
             tally = self.metrics.source(name)
             tally.last_ns, tally.n_over_level, tally.sustained = last_ns, n_over_level, sustained
         self.metrics.gauges = self._gauges
+        self.metrics.alerts = self._count_alerts
         self.metrics.engine = lambda: self.models.engine
 
     async def start(self) -> None:
@@ -93,6 +104,7 @@ class Service:
         self._every(self.settings.model.reload_s, self.models.look)
         self._every(self.settings.store.prune_s, self.retention.prune)
         self._every(_TOKEN_REFRESH_S, self._read_tokens)
+        self._every(_TICK_S, self.tick)
         log_event("started", store=self.database.where, model=self.engine.name)
 
     async def stop(self) -> None:
@@ -117,6 +129,33 @@ class Service:
 
         self._tasks.append(asyncio.get_running_loop().create_task(forever()))
 
+    async def tick(self) -> None:
+        """Let time pass for every source: silence, shelves that end, alerts that stand."""
+        engine, now_ns = self.engine, self.clock_ns()
+        names = await asyncio.to_thread(self.keeper.due, self.database, engine, now_ns)
+        for start in range(0, len(names), N_TICKED):
+            piece = names[start : start + N_TICKED]
+            await self.writer.act(partial(self._tick_some, engine, piece, now_ns))
+
+    def _tick_some(self, engine: Engine, names: list[str], now_ns: int, group: Group) -> int:
+        return self.keeper.tick(group, engine, names, now_ns)
+
+    def _count_alerts(self) -> dict[tuple[str, str], int]:
+        try:
+            with self.database.read.connect() as connection:
+                return count_alerts(connection)
+        except sa.exc.DBAPIError:
+            # The other numbers are wanted most while the store is away.
+            return {}
+
+    def _budget_used(self) -> float | None:
+        try:
+            with self.database.read.connect() as connection:
+                count = partial(count_raised, connection)
+                return float(budget_used(count, self.clock_ns()))
+        except sa.exc.DBAPIError:
+            return None
+
     async def _read_tokens(self) -> None:
         def read() -> None:
             with self.database.read.connect() as connection:
@@ -131,6 +170,9 @@ class Service:
             "start_timestamp_seconds": self.started_s,
             "model_published_timestamp_seconds": self.models.published_s,
         }
+        used = self._budget_used()
+        if used is not None:
+            gauges["alarm_budget_alerts_last_day"] = used
         size = self.database.n_bytes()
         if size is not None:
             gauges["store_size_bytes"] = float(size)

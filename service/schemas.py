@@ -221,14 +221,6 @@ class RecordsPage(_Answer):
     next: str | None = _NEXT
 
 
-class AlertsPage(_Answer):
-    """A page of records over a level, newest first."""
-
-    items: list[StoredItem] = _ITEMS
-    next: str | None = _NEXT
-    advice: str = Field(description="how to take this, no unit", examples=[ADVICE])
-
-
 class SourceItem(_Answer):
     """A source and what is remembered of it."""
 

@@ -12,6 +12,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scoring.artefact import read_model
+from scoring.episodes import Episodes
 from scoring.model import Member, Model
 from scoring.scorer import Scorer, Scores
 from scoring.standing import BadStanding, Standing
@@ -36,6 +37,8 @@ class ScoringEngine:
         self.figures: Mapping[str, float] = _figures(model)
         self._scorer = Scorer(model)
         self._scorer.warm()
+        self.episodes: Episodes | None = Episodes(self._scorer)
+        self.episodes.warm()
         self._neighbours = lru_cache(maxsize=_N_CACHED_NEIGHBOURS)(self._find_neighbours)
 
     def score(
@@ -61,6 +64,7 @@ class ScoringEngine:
             best=scores.expected_best,
             alert=scores.alert,
             judged=scores.judged,
+            scores=scores,
         )
         if self.layout.states:
             self._add_words(source, scores, scored)

@@ -14,7 +14,7 @@ from collections import deque
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from itertools import groupby
-from typing import Any
+from typing import Any, TypeVar
 
 import sqlalchemy as sa
 
@@ -24,6 +24,9 @@ from service.pipeline import AlertSink, GroupScorer, Job, Outcome
 from service.problems import Problem
 from service.sheet import Sheet
 from service.store.database import Database
+from service.store.group import Group
+
+T = TypeVar("T")
 
 # Records of one transaction: more would make its first request wait for the last one's scores.
 MAX_GROUP_RECORDS = 8192
@@ -40,9 +43,11 @@ class _Waiting:
 class _Errand:
     """Work for the writer's connection that is no record, for example pruning."""
 
-    work: Callable[[sa.Connection], object]
+    work: Callable[[sa.Connection], object] | None
     done: asyncio.Future[Any]
     n_records: int = 0
+    # Work that changes sources, as records do.
+    on_group: Callable[[Group], object] | None = None
 
 
 class Writer:
@@ -107,6 +112,15 @@ class Writer:
         """Run some work in a transaction of its own between two groups."""
         done: asyncio.Future[object] = asyncio.get_running_loop().create_future()
         self._put(_Errand(work, done))
+        return done
+
+    def act(self, work: Callable[[Group], T]) -> asyncio.Future[T]:
+        """Run some work that changes sources or alerts in a transaction of its own.
+
+        A Problem that it raises is what the future raises, and nothing is changed then.
+        """
+        done: asyncio.Future[T] = asyncio.get_running_loop().create_future()
+        self._put(_Errand(None, done, on_group=work))
         return done
 
     def _put(self, entry: _Waiting | _Errand) -> None:
@@ -198,11 +212,25 @@ class Writer:
         result: object
         try:
             connection = self._connected()
-            with connection.begin():
-                result = errand.work(connection)
+            if errand.on_group is not None:
+                result = self._do_on_group(connection, errand.on_group)
+            else:
+                assert errand.work is not None
+                with connection.begin():
+                    result = errand.work(connection)
         except Exception as error:  # noqa: BLE001 - handed to whoever asked
             result = self._refusal(error)
         self._answer(_deliver, [errand], [result])
+
+    def _do_on_group(self, connection: sa.Connection, work: Callable[[Group], object]) -> object:
+        group = self.database.begin(connection, self.n_sources_max)
+        try:
+            result = work(group)
+            group.commit()
+        except BaseException:
+            self._rollback(group.rollback)
+            raise
+        return result
 
     def _answer(self, deliver: Callable[..., None], entries: object, results: object) -> None:
         assert self._loop is not None

@@ -15,6 +15,7 @@ from typing import Any, Literal
 import numpy as np
 from numpy.typing import NDArray
 
+from scoring.episodes import Episodes
 from scoring.errors import BadArtefact
 from service.engine import Floats, Scored
 from service.layout import Layout
@@ -62,6 +63,7 @@ class FakeEngine:
         self.levels: Mapping[str, float] = {"record": 30.0, "sustained": 20.0}
         self.figures: Mapping[str, float] = {"alarm_budget_alerts_per_day": 2.0}
         self.fail_on: str | None = None
+        self.episodes: Episodes | None = None
 
     def score(
         self,

@@ -1,4 +1,4 @@
-"""Servers over the stand-in model: `python -m tests.service_server --spawn`.
+"""Servers over the stand-in model or a real one: `python -m tests.service_server --spawn`.
 
 Reads lines with a JSON list, a folder and settings as section.key=value, and forks a
 server for each; its process id is answered. Importing the service once and not for every
@@ -16,6 +16,7 @@ from pathlib import Path
 from typing import Any
 
 from service.running import Service
+from service.scoring_engine import load_engine
 from service.server import listen, run, say_where
 from service.settings import load_settings
 from tests.service_fakes import load_fake
@@ -33,7 +34,8 @@ def main(folder: Path, words: list[str]) -> None:
         section, _, key = name.partition(".")
         options.setdefault(section, {})[key] = json.loads(value)
     settings = load_settings(None, options)
-    service = Service(settings, load_fake)
+    load = load_engine if (folder / "model" / "tables.npz").exists() else load_fake
+    service = Service(settings, load)
     service.open()
     listener = listen(settings)
     say_where(settings, listener)

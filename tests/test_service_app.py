@@ -15,7 +15,7 @@ import pytest
 import sqlalchemy as sa
 from pydantic import TypeAdapter
 
-from service import schemas
+from service import alert_schemas, schemas
 from service.pipeline import AHEAD_NS, Detail, Run, pack_words, unpack_detail
 from service.problems import KINDS
 from service.store.group import Group
@@ -362,20 +362,12 @@ def test_a_page_that_cannot_be_given_says_why(local: Api, path: str, message: st
     assert message in answer.json()["detail"]
 
 
-def test_alerts_are_the_records_over_a_level_newest_first(api: Api) -> None:
-    api.post([record(i, flow=390.0 if i % 2 else 10.0) for i in range(6)])
-    page = api.get("/alerts", params={"limit": 2}).json()
-    assert [item["time"][14:16] for item in page["items"]] == ["05", "03"]
-    following = api.get("/alerts", params={"limit": 2, "after": page["next"]}).json()
-    assert [item["time"][14:16] for item in following["items"]] == ["01"]
-    assert page["advice"] == schemas.ADVICE
-
-
 @pytest.mark.parametrize(
     ("path", "model"),
     [
         ("/records", schemas.RecordsPage),
-        ("/alerts", schemas.AlertsPage),
+        ("/alerts", alert_schemas.AlertsPage),
+        ("/actions", alert_schemas.ActionsPage),
         ("/sources", schemas.SourcesPage),
         ("/model", schemas.ModelPage),
         ("/model?source=mill-lane-1", schemas.ModelPage),
@@ -469,6 +461,8 @@ class Gatherer:
 
     def __init__(self) -> None:
         self.seen: list[tuple[str, list[int], list[int]]] = []
+        self.still: list[int] = []
+        self.ahead: list[bool] = []
         self.fail = False
 
     def take(self, group: Group, runs: Sequence[Run]) -> None:
@@ -478,10 +472,16 @@ class Gatherer:
         assert count > 0, "the records are in the same transaction"
         for run in runs:
             minutes = ((run.times_ns // 10**9 - START_S) // 60).tolist()
-            self.seen.append((run.source.name, minutes, run.scored.alert.tolist()))
+            if not run.still:
+                assert run.ahead is None
+                self.seen.append((run.source.name, minutes, run.scored.alert.tolist()))
+            else:
+                assert run.ahead is not None
+                self.still += minutes
+                self.ahead += run.ahead.tolist()
 
 
-def test_an_alert_sink_gets_what_moved_a_standing_in_order(tmp_path: Path) -> None:
+def test_an_alert_sink_is_told_what_moved_a_standing_in_order(tmp_path: Path) -> None:
     sink = Gatherer()
     with running(tmp_path, sink=sink) as api:
         items = [record(m, flow=390.0 if m == 6 else 120.0) for m in (5, 6, 2, 900, 6, 7)]
@@ -491,6 +491,7 @@ def test_an_alert_sink_gets_what_moved_a_standing_in_order(tmp_path: Path) -> No
             ("mill-lane-2", [7], [0]),
             ("b", [1], [0]),
         ]
+        assert (sink.still, sink.ahead) == ([2, 900], [False, True])
         sink.fail = True
         assert api.post(record(8)).status_code == 500
         sink.fail = False
