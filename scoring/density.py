@@ -58,7 +58,9 @@ def removal_of(
     whole = np.flatnonzero(~_unread(member, rows)) if len(mixed) else np.arange(len(rows))
     alone = [i for i in member.regime if group_start[i + 1] == group_start[i]]
     if len(whole) and alone:
-        own[np.ix_(whole, np.array(alone))] = _one_by_one(member, rows[whole], surprise[whole], alone)
+        own[np.ix_(whole, np.array(alone))] = _one_by_one(
+            member, rows[whole], surprise[whole], alone
+        )
     for i in set(member.regime) - set(alone):
         rest = _without(member, rows[whole], i, group_start, group_nodes)
         own[whole, i] = surprise[whole] - rest
