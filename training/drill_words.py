@@ -34,8 +34,8 @@ def what_line(results: Sequence[Result], step_s: float, within: int) -> str:
     """Return what the table's numbers mean."""
     n = max((one.n_trials for one in results), default=0)
     return (
-        f"smallest fault caught in {100 * CAUGHT_SHARE:.0f} % of {n} trials within {within} records "
-        f"({lasting_text(within * step_s)}), in the channel's own unit"
+        f"smallest fault caught in {100 * CAUGHT_SHARE:.0f} % of {n} trials within {within} "
+        f"records ({lasting_text(within * step_s)}), in the channel's own unit"
     )
 
 
