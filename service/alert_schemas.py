@@ -133,11 +133,25 @@ _NEXT = Field(
 )
 
 
+class FloodItem(_Strict):
+    """More alerts at once than anyone can read."""
+
+    since: str = Field(description="when it began, RFC 3339 in UTC", examples=[TIME_EXAMPLE])
+    alerts: int = Field(description="alerts in it, count", examples=[14], ge=0)
+    sentence: str = Field(
+        description="the one message about them, no unit",
+        examples=["14 alerts in a flood since 2026-12-01T04:00:10Z; look for what they share."],
+    )
+
+
 class AlertsPage(_Strict):
     """A page of alerts, latest raised first."""
 
     items: list[AlertItem] = Field(description="the items of this page, no unit")
     next: str | None = _NEXT
+    flood: FloodItem | None = Field(
+        description="the flood that lasts, no unit; null: none", examples=[None]
+    )
     advice: str = Field(description="how to take this, no unit", examples=[ADVICE])
 
 

@@ -11,11 +11,13 @@ from dataclasses import replace
 from typing import Any
 
 import orjson
+import sqlalchemy as sa
 
 from scoring.alert_actions import ON_ALERTS, Action, BadAction, act_on_cleared, take_action
 from scoring.alert_settings import AlertSettings
 from scoring.alert_standing import AlertStanding, BadAlertStanding
-from scoring.alerts import CLEARED, SCORED, Alert, Event
+from scoring.alerts import CLEARED, SCORED, Alert, Event, time_text
+from scoring.flood import BadFlood, Flood, gather
 from service.engine import Engine
 from service.logs import log_event
 from service.pipeline import Run
@@ -29,6 +31,7 @@ from service.store.states import SourceState
 _KEPT = ("out_of_service", "back_in_service")
 # Sources whose passed time is stored in one transaction.
 N_TICKED = 500
+_FLOOD = ("flood_started", "flood_ended")
 _DAY_NS = 86_400 * 1_000_000_000
 
 
@@ -59,7 +62,8 @@ class Keeper:
         for state in touched.values():
             state.alert_standing = state.alert_live.to_bytes()
             changes.stands(state.alert_live)
-        changes.write(group)
+        if runs:
+            self._store(group, changes, runs[0].heard_ns)
 
     def due(self, database: Database, engine: Engine, now_ns: int) -> list[str]:
         """Return the sources to which something happens by the passing of time alone."""
@@ -90,7 +94,7 @@ class Keeper:
             changes.add(events)
             changes.stands(after)
         group.save(states.values())
-        changes.write(group)
+        self._store(group, changes, now_ns)
         return sum(event.what == "raised" for event in changes.events)
 
     def on_alert(self, group: Group, action: Action, now_ns: int) -> Alert:
@@ -113,7 +117,7 @@ class Keeper:
                 self._act(group, state, action, now_ns, changes)
         except BadAction as error:
             raise Problem("impossible-action", str(error)) from None
-        changes.write(group)
+        self._store(group, changes, now_ns)
         return changes.alerts.get(alert.id, alert)
 
     def of_kind(self, group: Group, action: Action) -> Action:
@@ -128,8 +132,30 @@ class Keeper:
             standing = self._act(group, state, action, now_ns, changes)
         except BadAction as error:
             raise Problem("impossible-action", str(error)) from None
-        changes.write(group)
+        self._store(group, changes, now_ns)
         return standing
+
+    def end_flood(self, group: Group, now_ns: int) -> None:
+        """End a flood that is over by the passing of time."""
+        changes = _Changes()
+        self._gather(group, changes, now_ns)
+        changes.write(group)
+
+    def _store(self, group: Group, changes: _Changes, now_ns: int) -> None:
+        if any(event.annunciate for event in changes.events):
+            self._gather(group, changes, now_ns)
+        changes.write(group)
+
+    def _gather(self, group: Group, changes: _Changes, now_ns: int) -> None:
+        """Make one message of a flood, and one of its end."""
+        before = read_flood(stored.flood_data(group.connection, to_change=True))
+        events = sorted(changes.events, key=lambda event: event.time_ns)
+        flood, told = gather(before, events, self.settings, now_ns)
+        stored.put_flood(group.connection, flood.to_bytes())
+        for event in told:
+            if event.what in _FLOOD:
+                changes.actions.append(_action_row(event, ""))
+                log_event(event.what, sentence=event.details["sentence"])
 
     def _act(
         self, group: Group, state: SourceState, action: Action, now_ns: int, changes: _Changes
@@ -197,6 +223,25 @@ def standing_of(state: SourceState) -> AlertStanding | None:
 def read_alert(data: str) -> Alert:
     """Return a stored alert."""
     return Alert.from_dict(orjson.loads(data))
+
+
+def read_flood(data: bytes | None) -> Flood:
+    """Return what is remembered of a flood; nothing where it cannot be read."""
+    try:
+        return Flood() if data is None else Flood.from_bytes(data)
+    except BadFlood as error:
+        log_event("flood_dropped", detail=str(error))
+        return Flood()
+
+
+def flood_answer(connection: sa.Connection) -> dict[str, Any] | None:
+    """Return the flood that lasts as clients see it, or None."""
+    flood = read_flood(stored.flood_data(connection))
+    if flood.started_ns is None:
+        return None
+    since = time_text(flood.started_ns)
+    sentence = f"{flood.n} alerts in a flood since {since}; look for what they have in common."
+    return {"since": since, "alerts": flood.n, "sentence": sentence}
 
 
 def budget_used(count: Callable[[str, int], int], now_ns: int) -> int:

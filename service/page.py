@@ -16,7 +16,7 @@ from fastapi import APIRouter
 from starlette.responses import HTMLResponse
 
 from scoring.alerts import Alert
-from service.alerting import read_alert
+from service.alerting import flood_answer, read_alert
 from service.answers import stored_answer
 from service.engine import ALERT_WORDS
 from service.running import Service
@@ -54,10 +54,13 @@ def page_router(service: Service) -> APIRouter:
     """Return the route of the page."""
     router = APIRouter()
 
-    def read() -> tuple[list[Alert], list[dict[str, Any]], list[dict[str, Any]]]:
+    def read() -> tuple[str, list[dict[str, Any]], list[dict[str, Any]]]:
         with service.database.read.connect() as connection:
             found, _ = alerts_page(connection, state="open", limit=_N_OPEN)
-            opened = [read_alert(data) for data in found]
+            opened = "".join(_open_alert(read_alert(data)) for data in found)
+            flood = flood_answer(connection)
+            if flood is not None:
+                opened = f"<li><strong>{escape(flood['sentence'])}</strong></li>{opened}"
             return opened, _sources(connection), _alerts(connection)
 
     @router.get("/", include_in_schema=False)
@@ -92,16 +95,14 @@ def _alerts(connection: sa.Connection) -> list[dict[str, Any]]:
 
 
 def _html(
-    opened: list[Alert],
+    opened: str,
     sources: list[dict[str, Any]],
     alerts: list[dict[str, Any]],
     level: float,
     model: str,
 ) -> str:
     now = format_time(int(time.time()) * 1_000_000_000)
-    open_lines = "".join(_open_alert(alert) for alert in opened) or (
-        "<li class=quiet>No alert is open.</li>"
-    )
+    open_lines = opened or "<li class=quiet>No alert is open.</li>"
     source_lines = "".join(_source(row, level) for row in sources) or (
         "<li class=quiet>No record has come yet; the README shows how to post one.</li>"
     )

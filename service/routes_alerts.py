@@ -28,7 +28,7 @@ from service.alert_schemas import (
     ShelveBody,
     SourceService,
 )
-from service.alerting import read_alert
+from service.alerting import flood_answer, read_alert
 from service.bodies import BodyReader, ClientGone
 from service.problems import Problem
 from service.routes_read import (
@@ -134,9 +134,11 @@ def _add_pages(router: APIRouter, service: Service) -> None:
             stored.alerts_page, source=source, state=state, from_ns=time_of("from", from_),
             to_ns=time_of("to", to), limit=limit, after=pair_of(after),
         )  # fmt: skip
-        found, following = await in_thread(read)
+        (found, following), flood = await in_thread(lambda c: (read(c), flood_answer(c)))
         items = [read_alert(data).as_json() for data in found]
-        return answer({"items": items, "next": cursor_of(following), "advice": ADVICE})
+        return answer(
+            {"items": items, "next": cursor_of(following), "flood": flood, "advice": ADVICE}
+        )
 
     @router.get(
         "/actions", responses={200: {"model": ActionsPage}}, summary="What was done, newest first"

@@ -14,7 +14,7 @@ import sqlalchemy as sa
 
 from scoring.alert_settings import AlertSettings
 from service.access import Tokens, is_loopback
-from service.alerting import N_TICKED, Keeper, budget_used
+from service.alerting import N_TICKED, Keeper, budget_used, flood_answer
 from service.engine import Engine
 from service.logs import log_event
 from service.metrics import Metrics
@@ -136,6 +136,12 @@ class Service:
         for start in range(0, len(names), N_TICKED):
             piece = names[start : start + N_TICKED]
             await self.writer.act(partial(self._tick_some, engine, piece, now_ns))
+        if await asyncio.to_thread(self._is_flood):
+            await self.writer.act(lambda group: self.keeper.end_flood(group, now_ns))
+
+    def _is_flood(self) -> bool:
+        with self.database.read.connect() as connection:
+            return flood_answer(connection) is not None
 
     def _tick_some(self, engine: Engine, names: list[str], now_ns: int, group: Group) -> int:
         return self.keeper.tick(group, engine, names, now_ns)

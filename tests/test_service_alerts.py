@@ -357,6 +357,30 @@ def test_a_source_that_stops_sending_is_told_once_and_ends_when_it_sends(
         assert [one["state"] for one in alerts(api)] == ["cleared"]
 
 
+def test_a_flood_is_one_message_and_ends(
+    tmp_path: Path, models: Path, clock: Clock, store: dict[str, Any]
+) -> None:
+    with serve(tmp_path, models, clock, store=store) as api:
+        names = [f"s{i}" for i in range(12)]
+        api.post([sent(step, name, odd=step == 1) for step in (0, 1) for name in names])
+        flood = api.get("/alerts").json()["flood"]
+        assert flood["alerts"] == 12
+        assert flood["sentence"] in api.get("/").text
+        assert len(alerts(api, state="open")) == 12
+    with serve(tmp_path, models, clock, store=store) as api:
+        assert api.get("/alerts").json()["flood"] == flood
+        for step in (2, 3, 4):
+            # They go on sending, or a second flood would say that they are silent.
+            clock.now_ns += 250 * S
+            api.post([sent(step, name) for name in names])
+            api.call(api.service.tick())
+        assert api.get("/alerts").json()["flood"] is None
+        told = api.get("/actions").json()["items"]
+        assert [item["what"] for item in told] == ["flood_ended", "flood_started"]
+        assert told[1]["details"]["n"] == 10
+        ACTIONS.validate_json(api.get("/actions").content)
+
+
 def test_a_restart_does_not_call_every_source_silent(
     tmp_path: Path, models: Path, clock: Clock
 ) -> None:
@@ -374,7 +398,7 @@ def test_a_store_of_the_first_tables_goes_on(tmp_path: Path, models: Path, clock
     path = tmp_path / "data" / "records.sqlite3"
     with closing(sa.create_engine(f"sqlite:///{path}").raw_connection()) as connection:
         for statement in (
-            "DROP TABLE alert", "DROP TABLE action",
+            "DROP TABLE alert", "DROP TABLE action", "DROP TABLE flood",
             "ALTER TABLE source DROP COLUMN alert_standing",
             "UPDATE alembic_version SET version_num = '001'",
         ):  # fmt: skip

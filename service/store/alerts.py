@@ -23,6 +23,12 @@ _PUT_ALERT = sa.text(
     "until_ns = excluded.until_ns, data = excluded.data"
 )
 
+_PUT_FLOOD = sa.text(
+    "INSERT INTO flood (id, data) VALUES (:id, :data) "
+    "ON CONFLICT (id) DO UPDATE SET data = excluded.data"
+)
+_THE_FLOOD = 1
+
 
 def put_alerts(connection: sa.Connection, rows: Sequence[dict[str, Any]]) -> None:
     """Add alerts or replace them by their newer form; every row has all columns but number."""
@@ -95,6 +101,18 @@ def actions_page(
         query = query.where(_ACTION.id < after)
     rows = [dict(row._mapping) for row in connection.execute(query)]
     return rows[:limit], int(rows[limit - 1]["id"]) if len(rows) > limit else None
+
+
+def flood_data(connection: sa.Connection, *, to_change: bool = False) -> bytes | None:
+    """Return what is remembered of a flood; to_change: no other replica may change it now."""
+    query = sa.select(tables.flood.c.data).where(tables.flood.c.id == _THE_FLOOD)
+    found = connection.execute(query.with_for_update() if to_change else query).scalar()
+    return None if found is None else bytes(found)
+
+
+def put_flood(connection: sa.Connection, data: bytes) -> None:
+    """Replace what is remembered of a flood."""
+    connection.execute(_PUT_FLOOD, {"id": _THE_FLOOD, "data": data})
 
 
 def count_alerts(connection: sa.Connection) -> dict[tuple[str, str], int]:

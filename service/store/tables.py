@@ -131,6 +131,14 @@ action = sa.Table(
     sa.Column("comment", sa.Text, nullable=False),
     sa.Column("details", sa.Text, nullable=False),
 )
+# One row for the fleet: how many alerts called someone lately.
+flood = sa.Table(
+    "flood",
+    metadata,
+    sa.Column("id", sa.SmallInteger, primary_key=True, autoincrement=False),
+    sa.Column("data", sa.LargeBinary, nullable=False),
+)
+
 action_source = sa.Index("action_source", action.c.source, action.c.id)
 
 # Tokens are kept as SHA-256 of 32 random bytes; the token itself is shown once.

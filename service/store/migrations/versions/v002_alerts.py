@@ -45,3 +45,8 @@ def upgrade() -> None:
         sa.Column("details", sa.Text, nullable=False),
     )
     op.create_index("action_source", "action", ["source", "id"])
+    op.create_table(
+        "flood",
+        sa.Column("id", sa.SmallInteger, primary_key=True, autoincrement=False),
+        sa.Column("data", sa.LargeBinary, nullable=False),
+    )
