@@ -44,7 +44,7 @@ class Judged:
 
     def summed(self, at: Iterable[int]) -> Sum:
         """Return the sums over some incidents, by their place."""
-        return self.verdict.summed([self.verdict.findings[i] for i in at])
+        return Sum.of([self.verdict.findings[i] for i in at])
 
 
 def band_of(size: float | None) -> str:
@@ -167,7 +167,7 @@ def method_table(judged: Mapping[str, Judged]) -> str:
         unit = "" if band == BANDS[-1] else " spreads"
         counts = [str(one.summed(at).n_caught) for one in every]
         rows.append([f"caught, {band}{unit} ({len(at)})", *counts])
-    sums = [one.verdict.summed() for one in every]
+    sums = [Sum.of(one.verdict.findings) for one in every]
     delays = ["" if one.delay_s is None else duration(one.delay_s) for one in sums]
     false = [one.verdict.false for one in every]
     rows += [
