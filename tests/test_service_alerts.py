@@ -453,3 +453,39 @@ def test_killed_under_load_no_raised_alert_is_lost(tmp_path: Path, models: Path)
     over = {answer["source"] for answer in sender.answered if answer["alert"]}
     assert len(over) >= 30
     assert over <= found
+
+
+def test_what_could_not_be_stored_has_raised_nothing(
+    tmp_path: Path, models: Path, clock: Clock, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def fail(*_words: Any) -> None:
+        raise RuntimeError("power cut")
+
+    with serve(tmp_path, models, clock) as api:
+        api.post([sent(i) for i in range(4)])
+        before = standings(api)
+        with monkeypatch.context() as patch:
+            patch.setattr("service.store.alerts.put_alerts", fail)
+            assert api.post(sent(4, odd=True)).status_code == 500
+        assert (standings(api), alerts(api)) == (before, [])
+        # The same record again is new, and raises what it should have raised.
+        assert "known" not in api.post(sent(4, odd=True)).json()
+        assert [one["kind"] for one in alerts(api, state="open")] == ["scored"]
+
+
+def test_a_replica_acts_on_what_another_raised(
+    tmp_path: Path, models: Path, clock: Clock, postgres: Cluster
+) -> None:
+    store = {"url": postgres.emptied_database()}
+    with (
+        serve(tmp_path / "plain", models, clock, store=store) as first,
+        serve(tmp_path / "spoilt", models, clock, store=store) as second,
+    ):
+        alert = raise_one(first)
+        path = f"/alerts/{alert['id']}/acknowledge"
+        assert act(second, path).json()["state"] == "acknowledged"
+        first.post(sent(9, odd=True))
+        assert alerts(second, state="acknowledged")[0]["n_records"] == alert["n_records"] + 1
+        again = act(first, path)
+        assert again.status_code == 409
+        assert "was acknowledged by local" in again.json()["detail"]
