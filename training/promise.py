@@ -14,6 +14,7 @@ from typing import Any, Final
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.special import ndtri, stdtrit
 
 from scoring.model import Levels
 from training.intervals import count_to_come, dispersion_of
@@ -63,8 +64,9 @@ class Promise:
 
     source_days: held out and judged, over n_sources sources. n_seen: episodes in them.
     rate: expected alerts a source-day. dispersion: variance over mean of counts, the
-    largest over stretches of one to some days. busiest_days: the fewest days that hold half
-    of the episodes, of n_days. time_share: of records that held an alert.
+    largest over stretches of one to some days, widened for how few those are.
+    busiest_days: the fewest days that hold half of the episodes, of n_days. time_share: of
+    records that held an alert.
     record, sustained, and the highest of each that was seen: nats. reach: once in how many
     held-out spans the levels are expected to be passed, 0 where they lie inside the data.
     fitted: whether the tail's shape was fitted on 30 episodes or more.
@@ -196,7 +198,11 @@ def _budget(curve: Curve, alerts_per_day: float) -> Budget:
 
 
 def _clusters(curve: Curve, k: int) -> float:
-    """Return the dispersion of episodes, the largest over stretches of one day to some."""
+    """Return the dispersion of episodes, the largest over stretches of one day to some.
+
+    Few stretches measure it badly: each is widened as Student's t of so many differs from
+    the normal distribution.
+    """
     while curve.seen[k] < _ENOUGH_SEEN and k + 1 < len(curve.seen):
         k += 1
     by_day, largest = curve.by_day[k], 1.0
@@ -204,7 +210,9 @@ def _clusters(curve: Curve, k: int) -> float:
         n = len(by_day) // n_days
         if n >= _LEAST_STRETCHES:
             stretches = by_day[: n * n_days].reshape(n, n_days).sum(axis=1)
-            largest = max(largest, dispersion_of(stretches))
+            widened = (float(stdtrit(n - 1, 0.975)) / float(ndtri(0.975))) ** 2
+            scatter = dispersion_of(stretches)
+            largest = max(largest, scatter * widened if scatter > 1.0 else 1.0)
     return largest
 
 
