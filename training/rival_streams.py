@@ -7,8 +7,8 @@ which only flatters them.
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Final, Protocol
 
@@ -28,6 +28,11 @@ Ints = NDArray[np.int64]
 
 LIMITS: Final = "operating limits"
 PCA: Final = "PCA, T2 and SPE"
+T2: Final = "PCA, T2"
+SPE: Final = "PCA, SPE"
+# Limits are fitted narrow, a half of a hundredth beyond each; the level then widens all of
+# them by as many spreads as the budget asks for. From wider ones there is no way in.
+_LIMITS_TAIL: Final = 0.005
 # Limits are quantiles: so many records of a source, evenly over its history, are enough.
 _MOST_FOR_LIMITS: Final = 200_000
 # A source with fewer records of history has no rivals.
@@ -62,7 +67,7 @@ class Rival:
         if source not in self.methods:
             return
         if source not in self.files:
-            path = folder / f"{len(self.files)}.{self.name.split()[0]}"
+            path = folder / f"{len(self.files)}.{self.name}"
             self.files[source] = ExcessFile(source, path)
             self.files[source].kept.usual = self.usual[source]
         method = self.methods[source]
@@ -81,19 +86,29 @@ class Rival:
 
 
 def fit_rivals(
-    spool: Spool, levels: Levels, alerts_per_day: float, settings: AlertSettings, folder: Path
+    spool: Spool,
+    levels: Levels,
+    alerts_per_day: float,
+    settings: AlertSettings,
+    folder: Path,
+    names: Sequence[str] = (LIMITS, PCA),
 ) -> list[Rival]:
-    """Fit operating limits and PCA on a history and set their levels on it.
+    """Fit rivals on a history and set their levels on it.
 
-    levels: ours, for the interval and the time constant. folder: for their scores.
+    levels: ours, for the interval and the time constant. folder: for their scores. names:
+    some of LIMITS, PCA, T2, SPE.
     """
     sources = [s for s in spool.sources if spool.n_records(s) >= _LEAST_RECORDS]
-    fits: dict[str, dict[str, Method]] = {LIMITS: {}, PCA: {}}
+    fits: dict[str, dict[str, Method]] = {name: {} for name in (LIMITS, PCA, T2, SPE)}
     for source in sources:
-        fits[LIMITS][source] = fit_limits(_even(spool, source))
-        fits[PCA][source] = fit_pca_batches(values for _, values in spool.chunks(source))
+        fits[LIMITS][source] = fit_limits(_even(spool, source), tail=_LIMITS_TAIL, widening=0.0)
+        pca = fit_pca_batches(values for _, values in spool.chunks(source))
+        fits[PCA][source] = pca
+        fits[T2][source] = replace(pca, statistic="t2")
+        fits[SPE][source] = replace(pca, statistic="spe")
     rivals = []
-    for number, (name, methods) in enumerate(fits.items()):
+    for number, name in enumerate(names):
+        methods = fits[name]
         kept = [
             _history(spool, s, m, folder / f"{number}-{k}")
             for k, (s, m) in enumerate(methods.items())
