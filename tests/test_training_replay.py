@@ -105,6 +105,7 @@ def test_the_terminal_says_the_burden_the_promise_and_the_catch() -> None:
     assert re.search(r"\d+ alerts in 2\.8 days of 2 sources: .* a day \(95 % limits", output)
     assert re.search(r"outside incidents in 2\.\d quiet days; promised were \d+", output)
     assert "2 of 3 incidents caught (67 %, 95 % limits 21 to 94 %)" in output
+    assert re.search(r"with the kinds apart from the budget .* 2 of 3 were caught", output)
     assert "false alerts:" in output
     for name in ("operating limits", "PCA, T2 and SPE"):
         assert re.search(rf"{name} +no more false alerts than ours", output)

@@ -70,6 +70,8 @@ def incident_lines(done: Replayed) -> list[str]:
         f"nine in ten within {duration(total.late_s)}",
         f"of those caught the suspect was right in {_percent(total.n_first, n)}, among the first "
         f"three in {_percent(total.n_three, n)}, at once in {_percent(total.n_at_once, n)}",
+        f"with the kinds apart from the budget (stuck, absent, span ...) "
+        f"{Sum.of(done.with_others.findings).n_caught} of {total.n} were caught",
         f"false alerts: {done.verdict.false_per_day:.2f} a day (95 % limits {false_low:.2f} to "
         f"{false_high:.2f}); {done.verdict.n_after} more while machines recovered",
     ]
@@ -118,14 +120,16 @@ def method_cells(row: MethodRow) -> tuple[str, ...]:
 
 GROUP_HEADING = (
     "", "incidents", "caught", "95 % limits", "right suspect", "in first 3", "median delay",
+    "by any kind",
 )  # fmt: skip
 
 
 def group_rows(done: Replayed, key: str) -> list[tuple[str, ...]]:
     """Return a line for each kind, or for each size band."""
     rows: list[tuple[str, ...]] = []
+    with_others = grouped(done.with_others.findings, key)
     for name, findings in grouped(done.verdict.findings, key).items():
-        total = Sum.of(findings)
+        total, of_any = Sum.of(findings), Sum.of(with_others[name])
         low, high = total.caught_limits
         rows.append(
             (
@@ -136,6 +140,7 @@ def group_rows(done: Replayed, key: str) -> list[tuple[str, ...]]:
                 _percent(total.n_first, total.n_caught),
                 _percent(total.n_three, total.n_caught),
                 duration(total.delay_s),
+                str(of_any.n_caught),
             )
         )
     return rows

@@ -68,7 +68,8 @@ class Replayed:
     """The outcome of a replay.
 
     spans: by source, time of first and last record. n_records, n_late, n_not_judged:
-    counts. verdict: of the alerts in the budget. alerts: all, in order of time; calls: those
+    counts. verdict: of the alerts in the budget; with_others: with the kinds apart from it,
+    for what they catch. alerts: all, in order of time; calls: those
     in the budget. others: kinds apart from it, counted. by_day: alerts in the budget by day
     of the fleet. n_damped: opened without calling anyone; n_again: raised again.
     fleet_only: sources that the model's fleet member scored. rows: the sweep, strict to
@@ -84,6 +85,7 @@ class Replayed:
     n_late: int
     n_not_judged: int
     verdict: Verdict
+    with_others: Verdict
     alerts: list[Alert]
     calls: list[Call]
     others: Counter[str]
@@ -120,7 +122,7 @@ def judge_replay(
     model, levels = online.model, online.model.levels
     spans = {s: (one.first_ns, one.last_ns) for s, one in sorted(online.sources.items())}
     judge = Judge(known, int(recovery_s * 1e9), spans, int(levels.step_s * 1e9))
-    calls = online.calls()
+    calls, others = online.calls(), online.calls(in_budget=False)
     verdict = judge.verdict(calls)
     promise = promise_in(model)
     rows = _sweep(online.excess, _pairs(model, promise), judge, levels, online.settings)
@@ -139,9 +141,10 @@ def judge_replay(
         n_late=sum(one.n_late for one in online.sources.values()),
         n_not_judged=sum(one.n_not_judged for one in online.sources.values()),
         verdict=verdict,
+        with_others=judge.verdict([*calls, *others]),
         alerts=online.alerts,
         calls=calls,
-        others=Counter(call.kind for call in online.calls(in_budget=False)),
+        others=Counter(call.kind for call in others),
         by_day=_by_day(calls, spans),
         n_damped=online.n_damped,
         n_again=online.n_again,
