@@ -203,13 +203,19 @@ def summary(found: list[Outcome]) -> list[str]:
         f"by ten days {np.round(stretches, 2).tolist()}, budget {SETTINGS.budget.alerts_per_day:g}",
         f"over the upper end: {sum(one.n_quiet > one.limits[1] for one in found)} of {len(found)}",
     ]
+    others = [f for one in found for f in one.replayed.with_others.findings]
+    lines += [
+        f"with the kinds apart from the budget, {kind}: {sum_words(Sum.of(part))}"
+        for kind, part in grouped(others, "kind").items()
+    ]
     for name in [m.name for m in found[0].replayed.methods if not m.own_levels]:
         findings = [f for one in found for f in method_of(one, name).verdict.findings]
         false = np.mean([method_of(one, name).verdict.false_per_day for one in found])
         lines.append(f"{name}: {false:.2f} false a day")
         for key in ("size", "kind"):
-            groups = grouped(findings, key) | {"3 and more": large_of(findings)}
+            groups = grouped(findings, key)
             lines += [f"  {group}: {sum_words(Sum.of(part))}" for group, part in groups.items()]
+        lines.append(f"  of 3 spreads and more: {sum_words(Sum.of(large_of(findings)))}")
     return lines
 
 

@@ -9,6 +9,7 @@ from scoring.model import Model
 from training.levels import Curve
 from training.members import LEAST_OWN_RECORDS, Learned
 from training.promise import Promise
+from training.promise_picture import promise_picture
 from training.promise_words import doubt_lines, interval_words, main_lines
 from training.report.heldsections import (
     block_section,
@@ -110,6 +111,7 @@ def _levels_section(promise: Promise | None) -> Section:
             strip,
             bullets(main_lines(promise)),
             paragraph("What makes this promise weak:") + bullets(doubts) if doubts else "",
+            promise_picture(promise),
             paragraph(text),
             table(heading, rows, words=()),
         ),
