@@ -36,8 +36,8 @@ _OVERLAPS = """
 
 
 @pytest.fixture(scope="module")
-def page(tmp_path_factory: pytest.TempPathFactory) -> Iterator[Page]:
-    """Yield a tab of a browser that all tests here share."""
+def page(tmp_path_factory: pytest.TempPathFactory, report: str) -> Iterator[Page]:
+    """Yield a tab that all tests share; the report is learned first, for a tab ends by itself."""
     with browser_page(tmp_path_factory.mktemp("chromium")) as found:
         yield found
 
