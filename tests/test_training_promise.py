@@ -16,7 +16,13 @@ from tests.streams import NEVER, held
 from training.intervals import count_to_come
 from training.levels import Curve, curve_of, levels_at
 from training.promise import Promise, promise_of
-from training.promise_words import doubt_lines, interval_words, main_lines, promise_lines
+from training.promise_words import (
+    doubt_lines,
+    interval_words,
+    main_lines,
+    promise_lines,
+    season_words,
+)
 from training.season import SlowChannel
 
 SLOW = SlowChannel("water", "degC", 0.7, 4.25, 17.5)
@@ -144,3 +150,11 @@ def test_held_out_time_that_is_worse_than_fitted_time_is_named() -> None:
 )
 def test_an_interval_of_counts_is_whole(low: float, high: float, words: str) -> None:
     assert interval_words(low, high) == words
+
+
+def test_of_many_slow_channels_the_slowest_are_named_and_the_rest_counted() -> None:
+    slow = tuple(replace(SLOW, name=f"c{k}") for k in range(500))
+    text = season_words(replace(a_promise(), slow=slow))
+    assert "c7 (" in text
+    assert "c8 (" not in text
+    assert "and 492 more can go" in text

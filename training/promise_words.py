@@ -11,6 +11,8 @@ from training.tail import LEAST_PEAKS
 _LARGE_GAP = 1.0
 # Clusters below this are the usual scatter.
 _LARGE_DISPERSION = 2.0
+# Slow channels that a sentence names, the slowest first.
+_MOST_SLOW = 8
 
 
 def promise_lines(promise: Promise) -> list[str]:
@@ -23,7 +25,7 @@ def main_lines(promise: Promise) -> list[str]:
     p = promise
     week, month = (interval_words(*p.interval(days)) for days in (7, 30))
     return [
-        f"levels for {p.alerts_per_day:g} alerts a day over {_sources(p.n_sources)}: excess "
+        f"levels for {p.alerts_per_day:.3g} alerts a day over {_sources(p.n_sources)}: excess "
         f"{p.record:.1f}, sustained {p.sustained:.1f} nats",
         f"expected {p.per_day():.2f} alerts a day ({p.rate:.3f} a source and day, so it follows "
         f"the number of sources); 95 % interval {week} in a week, {month} in 30 days",
@@ -88,8 +90,10 @@ def season_words(promise: Promise) -> str:
     """Return which channels the history has not seen all of."""
     named = ", ".join(
         f"{one.name} ({one.low:.4g} to {one.high:.4g} {one.unit})".replace(" )", ")")
-        for one in promise.slow
+        for one in promise.slow[:_MOST_SLOW]
     )
+    if len(promise.slow) > _MOST_SLOW:
+        named += f" and {len(promise.slow) - _MOST_SLOW} more"
     return (
         f"the history shows only part of how far {named} can go: outside of what it has seen, in "
         "another season or weather, expect more alerts than promised until the model is renewed"
@@ -102,7 +106,7 @@ def budget_lines(promise: Promise) -> list[str]:
     for one in promise.budgets:
         mark = "  <- asked for" if one.alerts_per_day == promise.alerts_per_day else ""
         lines.append(
-            f"  {one.alerts_per_day:g}: {one.record:.1f} and {one.sustained:.1f} nats, "
+            f"  {one.alerts_per_day:.3g}: {one.record:.1f} and {one.sustained:.1f} nats, "
             f"{one.expected:.2f}{mark}"
         )
     return lines
