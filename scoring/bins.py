@@ -87,21 +87,34 @@ class BinTable:
         return bin_columns(values, self.borders, self.lasts, self.n_words)
 
 
+# Flat borders and unsigned offsets: a slice a reading costs a reference count, which measured
+# 11 ns a reading against 6 ns.
 @njit(cache=True, nogil=True, inline="always")
-def _bin_of(value: float, borders: Floats, lasts: Floats, n_words: int) -> int:
-    if value != value:  # NaN: a comparison would file it in the first bin
-        return MISSING
-    if n_words > 0:
-        return min(max(int(value), 0), n_words)
-    group = 0
-    for k in range(lasts.shape[0]):
-        # A border belongs to the bin above it.
-        group += value >= lasts[k]
-    inside = borders[group * GROUP : group * GROUP + GROUP]
-    number = group * GROUP
-    for k in range(GROUP):
-        number += value >= inside[k]
+def _bin_of(
+    value: float,
+    node: int,
+    borders: Floats,
+    lasts: Floats,
+    width: np.uint64,
+    n_groups: np.uint64,
+) -> np.uint64:
+    """Return the bin of a reading that is there; a border belongs to the bin above it."""
+    first, number = np.uint64(node) * n_groups, np.uint64(0)
+    for k in range(n_groups):
+        number += np.uint64(value >= lasts[first + k])
+    number *= np.uint64(GROUP)
+    first = np.uint64(node) * width + number
+    for k in range(np.uint64(GROUP)):
+        number += np.uint64(value >= borders[first + k])
     return number
+
+
+@njit(cache=True, nogil=True)
+def _other(value: float, n_words: int) -> int:
+    """Return the bin of a missing reading, or of a state's word."""
+    if value != value:
+        return MISSING
+    return min(max(int(value), 0), n_words)
 
 
 @njit(cache=True, nogil=True)
@@ -113,10 +126,16 @@ def bin_rows(values: Floats, borders: Floats, lasts: Floats, n_words: NDArray[np
     Returns (n, n_nodes) uint8.
     """
     n, n_nodes = values.shape
+    width, n_groups = np.uint64(borders.shape[1]), np.uint64(lasts.shape[1])
+    flat, ends = borders.reshape(-1), lasts.reshape(-1)
     rows = np.empty((n, n_nodes), dtype=np.uint8)
     for r in range(n):
         for i in range(n_nodes):
-            rows[r, i] = _bin_of(values[r, i], borders[i], lasts[i], n_words[i])
+            value = values[r, i]
+            if value != value or n_words[i] > 0:
+                rows[r, i] = _other(value, n_words[i])
+            else:
+                rows[r, i] = _bin_of(value, i, flat, ends, width, n_groups)
     return rows
 
 
@@ -126,8 +145,14 @@ def bin_columns(
 ) -> BinRows:
     """Return bin numbers as columns, (n_nodes, n) uint8, on all cores; for offline use."""
     n, n_nodes = values.shape
+    width, n_groups = np.uint64(borders.shape[1]), np.uint64(lasts.shape[1])
+    flat, ends = borders.reshape(-1), lasts.reshape(-1)
     columns = np.empty((n_nodes, n), dtype=np.uint8)
     for i in prange(n_nodes):
         for r in range(n):
-            columns[i, r] = _bin_of(values[r, i], borders[i], lasts[i], n_words[i])
+            value = values[r, i]
+            if value != value or n_words[i] > 0:
+                columns[i, r] = _other(value, n_words[i])
+            else:
+                columns[i, r] = _bin_of(value, i, flat, ends, width, n_groups)
     return columns

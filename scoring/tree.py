@@ -33,8 +33,10 @@ class TreeArrays(NamedTuple):
     log_ratio: (n_edges, width, width), ln r by left bin, then right bin.
     left, right: (n_edges,) the edges' nodes.
     lowest: (n_nodes,) nats, no product of a node's marginal and ratios is below its exp.
-    flat_marginal, flat_ratio, flat_log_ratio: the same memory in one dimension, because
-        a slice in a tight loop costs a reference count.
+    flat_blanket: ratio in one dimension, each node's first slot times its marginal, so that
+        the product over a node's slots is its joint with its neighbours.
+    flat_log_ratio: log_ratio's memory in one dimension, because a slice in a tight loop
+        costs a reference count.
     """
 
     start: Ints
@@ -49,8 +51,7 @@ class TreeArrays(NamedTuple):
     left: Ints
     right: Ints
     lowest: Floats
-    flat_marginal: Floats
-    flat_ratio: Floats
+    flat_blanket: Floats
     flat_log_ratio: Floats
 
 
@@ -98,6 +99,10 @@ class Tree:
             table = np.exp(log_ratio[number])
             ratio[slot] = table.T if is_left else table
         marginal = np.exp(log_marginal)
+        blanket = ratio.copy()
+        for node, own in enumerate(slots):
+            if own:
+                blanket[sum(map(len, slots[:node]))] *= marginal[node]
         edges = self.edges.reshape(-1, 2)
         lowest = [
             float(m.min()) + sum(min(0.0, float(self.log_ratios[slot[1]].min())) for slot in node)
@@ -116,7 +121,6 @@ class Tree:
             left=np.ascontiguousarray(edges[:, 0]),
             right=np.ascontiguousarray(edges[:, 1]),
             lowest=np.array(lowest),
-            flat_marginal=marginal.reshape(-1),
-            flat_ratio=ratio.reshape(-1),
+            flat_blanket=blanket.reshape(-1),
             flat_log_ratio=log_ratio.reshape(-1),
         )
