@@ -51,22 +51,21 @@ def put(text: str, name: str, lines: str) -> str:
 
 
 def tour(output: str) -> str:
-    """Return ten lines: each command with its last words, and the first stretch."""
+    """Return some ten lines: each command with its last words, and the first alert."""
     lines = output.splitlines()
-    at = [i for i, line in enumerate(lines) if line.startswith("$ oddbranch ")]
-    survey, learn, serve = at
+    survey, learn, serve = (i for i, line in enumerate(lines) if line.startswith("$ oddbranch "))
     wrote = next(line for line in lines[survey:learn] if line.startswith("wrote "))
     levels = next(line for line in lines[learn:serve] if line.startswith("levels for "))
     model = next(line for line in lines[learn:serve] if line.startswith("model "))
-    first = next(i for i in range(serve, len(lines)) if re.match(r"\d{4}-\d\d-\d\d ", lines[i]))
+    alerts = [i for i in range(serve, len(lines)) if re.match(r"\d{4}-\d\d-\d\d ", lines[i])]
     chosen = [lines[survey], wrote, lines[learn], levels, model, *lines[serve : serve + 2]]
-    return "\n".join([*chosen, *lines[first : first + 3]]) + "\n"
+    return "\n".join([*chosen, *lines[alerts[0] : alerts[1]]]) + "\n"
 
 
 def tables(output: str) -> str:
     """Return the part from the incidents to what the other methods caught."""
     start = output.index("Incidents by kind and size, seed")
-    return output[start : output.index("\n\nThis is advice", start)] + "\n"
+    return output[start : output.index("\n\nAdvice", start)] + "\n"
 
 
 if __name__ == "__main__":

@@ -12,7 +12,8 @@ import pytest
 from config import shipped_names
 from oddbranch import COMMANDS
 from tests.conftest import ROOT
-from training.demo import FIGURE_SEED, HISTORY_DAYS, LIVE_DAYS, plant_config
+from training.demo import FIGURE_SEED
+from training.demo_plant import plant_config
 from training.demo_text import METHOD_ROWS, OURS
 from training.plant.incidents import KINDS
 from training.plant.simulate import incidents_of
@@ -49,16 +50,13 @@ def test_the_readme_opens_with_the_job_and_has_something_to_paste_by_line_30() -
     assert "make demo ONCE=1" in lines[:30]
 
 
-def test_the_tour_is_ten_lines_of_the_demo() -> None:
+def test_the_tour_is_some_ten_lines_of_the_demo() -> None:
     tour = block("tour")
-    assert len(tour) == 10
-    assert [line.split()[2] for line in tour if line.startswith("$ ")] == [
-        "survey",
-        "learn",
-        "serve",
-    ]
-    assert tour[-2].split()[0] == "suspect"
-    assert tour[-1].split()[0] == "truth"
+    assert 10 <= len(tour) <= 16
+    commands = [line.split()[2] for line in tour if line.startswith("$ ")]
+    assert commands == ["survey", "learn", "serve"]
+    words = [line.split()[0] for line in tour]
+    assert words.index("says") < words.index("truth")
 
 
 def test_the_tables_are_the_demos_with_the_published_seed_and_every_incident() -> None:
@@ -67,7 +65,7 @@ def test_the_tables_are_the_demos_with_the_published_seed_and_every_incident() -
     kinds = tuple(kind.replace("_", " ") for kind in KINDS)
     rows = [re.split(r" {2,}", line) for line in tables if line.startswith(kinds)]
     counted = [row for row in rows if row[2:3] and row[2].isdigit()]
-    known = incidents_of(plant_config(FIGURE_SEED, HISTORY_DAYS, LIVE_DAYS))
+    known = incidents_of(plant_config(FIGURE_SEED))
     assert sum(int(row[2]) for row in counted) == len(known)
     heading = next(line for line in tables if line.startswith("    ") and OURS in line)
     assert heading.split()[0] == OURS
@@ -80,14 +78,14 @@ def test_the_tour_and_the_tables_are_cut_from_the_output_alone(refresh: ModuleTy
         [
             *("the utility", "$ oddbranch survey h", "a table", "wrote c", "$ oddbranch learn h"),
             *("a tree", "levels for 2", "model x written", "", "$ oddbranch serve", "serving on u"),
-            *("", "2024-07-27 05:29  a, over", "   suspect  f", "   truth    n", "2024-07-28 x"),
-            *("", "Incidents by kind and size, seed 1", "rows", "", "This is advice. More", "end"),
+            *("", "2024-07-27 05:29  a, over", "   says   f", "   truth  n", "2024-07-28 x"),
+            *("", "Incidents by kind and size, seed 1", "rows", "", "Advice, not more", "end"),
         ]
     )
     assert refresh.tour(output).splitlines() == [
         *("$ oddbranch survey h", "wrote c", "$ oddbranch learn h", "levels for 2"),
         *("model x written", "$ oddbranch serve", "serving on u", "2024-07-27 05:29  a, over"),
-        *("   suspect  f", "   truth    n"),
+        *("   says   f", "   truth  n"),
     ]
     assert refresh.tables(output) == "Incidents by kind and size, seed 1\nrows\n"
 

@@ -2,44 +2,52 @@
 
 from __future__ import annotations
 
-import math
 import re
-from typing import Any
 
 import pytest
 
-from training.demo import call_of, known_of
+from training.demo_alerts import Told
 from training.demo_text import (
     BANDS,
     METHOD_ROWS,
     OURS,
-    Judged,
+    alert_lines,
     band_of,
     duration,
     incident_table,
     method_table,
-    stretch_lines,
-    suspect_words,
+    truth_words,
     where_others_win,
 )
-from training.judging import Judge
-from training.plant.incidents import Incident, machine_incident
-from training.stretches import OverLevel, Stretch
+from training.judging import Call, Judge, Verdict
+from training.known import Known
 
 HOUR_NS = 3600 * 10**9
-OFFSET = Incident("mill-lane", 0, 2 * HOUR_NS, "offset", 4.0, ("flow",))
-WEAR = machine_incident("mill-lane", "impeller_wear", 20 * HOUR_NS, 22 * HOUR_NS, 7.5, 1)
+OFFSET = Known("mill-lane", 0, 2 * HOUR_NS, "offset", 4.0, ("flow",))
+WEAR = Known(
+    "mill-lane", 20 * HOUR_NS, 22 * HOUR_NS, "impeller_wear", 7.5, ("speed_1", "current_1")
+)
+SWAP = Known("mill-lane", 30 * HOUR_NS, 31 * HOUR_NS, "swap", None, ("speed_1", "speed_2"))
+SENTENCE = (
+    "flow at mill-lane reads 241.3 m3/h where 268.0 to 281.0 was expected beside power; the "
+    "other channels agree with each other: look at the flow instrument first."
+)
 
 
-def over(hour: float, **more: Any) -> OverLevel:
-    """Return a record over the level that blames the flow meter."""
-    given: dict[str, Any] = {
-        "suspect": "flow",
-        "reading": 241.3,
-        "low": 268.0,
-        "high": 281.0,
-    } | more
-    return OverLevel("mill-lane", int(hour * HOUR_NS), **given)
+def told(hour: float, suspect: str = "flow", **more: object) -> Told:
+    """Return an alert of an hour that blames one channel."""
+    given = {
+        "id": "0",
+        "source": "mill-lane",
+        "in_budget": True,
+        "level": "record",
+        "raised_ns": int(hour * HOUR_NS),
+        "cleared_ns": int((hour + 1) * HOUR_NS),
+        "n_over": 12,
+        "sentence": SENTENCE,
+        "suspects": (suspect,),
+    }
+    return Told(**{**given, **more})  # type: ignore[arg-type]  # any of its fields
 
 
 @pytest.mark.parametrize(
@@ -50,79 +58,49 @@ def test_a_duration_is_in_minutes_or_hours(seconds: float, words: str) -> None:
     assert duration(seconds) == words
 
 
-@pytest.mark.parametrize(
-    ("more", "words"),
-    [
-        ({}, "flow: read 241.3 m3/h, expected 268 to 281 m3/h"),
-        ({"low": -math.inf}, "flow: read 241.3 m3/h, expected up to 281 m3/h"),
-        ({"high": math.inf}, "flow: read 241.3 m3/h, expected from 268 m3/h"),
-        (
-            {"low": -math.inf, "high": math.inf},
-            "flow: read 241.3 m3/h, expected anything (nothing like it was learned)",
-        ),
-        ({"low": math.nan}, "flow: read 241.3 m3/h"),
-        ({"suspect": ""}, "none"),
-        (
-            {"suspect": "pump_1", "word": "stopped", "word_expected": "running"},
-            "pump_1: said 'stopped', expected 'running'",
-        ),
-    ],
-)
-def test_a_suspect_is_told_with_what_it_should_have_read(more: dict[str, Any], words: str) -> None:
-    assert suspect_words(over(1.0, **more)) == words
-
-
-def test_a_stretch_is_three_lines_with_the_truth_beside_it() -> None:
-    assert stretch_lines(Stretch("mill-lane", (over(1.0), over(1.5))), OFFSET) == [
-        "1970-01-01 01:00  mill-lane, over the record level: 2 records in 30 min",
-        "                  suspect  flow: read 241.3 m3/h, expected 268 to 281 m3/h",
-        "                  truth    offset of flow, 4.0 spreads, begun 1 h 00 min before; "
-        "suspect right",
+def test_an_alert_is_told_with_what_it_says_and_the_truth_beside_it() -> None:
+    assert alert_lines(told(1.0), [OFFSET]) == [
+        "1970-01-01 01:00  mill-lane, over the record level for 1 h 00 min, 12 records",
+        "                  says   flow at mill-lane reads 241.3 m3/h where 268.0 to 281.0 was "
+        "expected beside",
+        "                         power; the other channels agree with each other: look at the "
+        "flow",
+        "                         instrument first.",
+        "                  truth  offset of flow, 4.0 spreads, seen after 1 h 00 min; suspect "
+        "right",
     ]
 
 
+def test_an_alert_apart_from_the_budget_and_one_that_stands_say_so() -> None:
+    stuck = told(1.0, in_budget=False, level="", cleared_ns=None)
+    assert alert_lines(stuck, [])[0].endswith("mill-lane, apart from the budget still standing")
+
+
 @pytest.mark.parametrize(
-    ("stretch", "truth", "words"),
+    ("alert", "words"),
     [
-        (Stretch("mill-lane", (over(5.0),)), None, "nothing was the matter"),
-        (
-            Stretch("mill-lane", (over(2.5),)),
-            OFFSET,
-            "offset of flow, 4.0 spreads, over since 1970-01-01 02:00",
-        ),
-        (
-            Stretch("mill-lane", (over(19.5), over(20.5))),
-            WEAR,
-            "impeller wear of pump 1, 7.5 spreads, begun at 1970-01-01 20:00, later than this",
-        ),
-        (
-            Stretch("mill-lane", (over(20.5),)),
-            WEAR,
-            "impeller wear of pump 1, 7.5 spreads, begun 30 min before; suspect wrong",
-        ),
+        (told(5.0), "nothing was the matter"),
+        (told(2.0), "offset of flow, 4.0 spreads, over since 1970-01-01 02:00"),
+        (told(0.5, "power"), "offset of flow, 4.0 spreads, seen after 30 min; suspect wrong"),
+        (told(0.5, suspects=()), "offset of flow, 4.0 spreads, seen after 30 min; suspect wrong"),
+        (told(0.5, source="b"), "nothing was the matter"),
+        (told(20.0, "speed_1"), "impeller wear, 7.5 spreads, seen after 0 min; suspect right"),
+        (told(30.0, "speed_2"), "swap of speed_1 and speed_2, seen after 0 min; suspect right"),
     ],
 )
-def test_the_truth_of_a_stretch_is_said_plainly(
-    stretch: Stretch, truth: Incident | None, words: str
-) -> None:
-    assert stretch_lines(stretch, truth)[2].strip() == f"truth    {words}"
+def test_the_truth_of_an_alert_is_said_plainly(alert: Told, words: str) -> None:
+    assert truth_words(alert, [OFFSET, WEAR, SWAP]) == words
 
 
-def judged(share: float, *stretches: Stretch) -> Judged:
-    """Return the verdict on some stretches over two days."""
-    judge = Judge(known_of([OFFSET, WEAR]), HOUR_NS, {"mill-lane": (0, 48 * HOUR_NS)}, 0)
-    return Judged(judge.verdict(call_of(stretch) for stretch in stretches), share)
+def judged(*alerts: Told) -> Verdict:
+    """Return the verdict on some alerts over two days."""
+    judge = Judge([OFFSET, WEAR], HOUR_NS, {"mill-lane": (0, 48 * HOUR_NS)}, 0)
+    calls: list[Call] = [alert.call(48 * HOUR_NS) for alert in alerts]
+    return judge.verdict(calls)
 
 
 def test_the_tables_count_each_method_on_the_same_incidents() -> None:
-    found = {
-        OURS: judged(0.0, Stretch("mill-lane", (over(1.0),))),
-        "limits": judged(
-            0.0004,
-            Stretch("mill-lane", (over(21.0, suspect="power"),)),
-            Stretch("mill-lane", (over(30.0),)),
-        ),
-    }
+    found = {OURS: judged(told(1.0)), "limits": judged(told(21.0, "speed_1"), told(30.0))}
     assert incident_table(found).splitlines()[2:] == [
         "offset         3 to 6      1       1    1 h 00 min              1       0",
         "impeller wear  6 and more  1       0                            0       1",
@@ -138,14 +116,19 @@ def test_the_tables_count_each_method_on_the_same_incidents() -> None:
         ["median delay", "1 h 00 min", "1 h 00 min"],
         ["false in 1.8 quiet station-days", "0", "1"],
         ["false a day", "0.0", "0.6"],
-        ["quiet time over the level", "0.00 %", "0.04 %"],
+        ["quiet time in alert", "0.00 %", "2.38 %"],
     ]
     assert all(any(line.startswith(name) for line in lines) for name in METHOD_ROWS)
     assert where_others_win(found) == [
-        "limits caught 1 that oddbranch missed (impeller wear 6 and more), and missed 1 that "
-        "oddbranch",
-        "  caught.",
+        "limits: caught 1 that oddbranch missed (impeller wear 6 and more); missed 1 that "
+        "oddbranch caught."
     ]
+
+
+def test_what_others_caught_is_wrapped_and_counted() -> None:
+    none = judged()
+    (line,) = where_others_win({OURS: judged(told(1.0)), "PCA, T2": none})
+    assert line == "PCA, T2: caught 0 that oddbranch missed; missed 1 that oddbranch caught."
 
 
 @pytest.mark.parametrize(
