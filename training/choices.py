@@ -11,11 +11,12 @@ from collections.abc import Callable
 from dataclasses import dataclass, field
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 
 from training.binning import NodeBins
 from training.structure import held_out_gains, held_out_shapes
+from training.threads import in_slices
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -61,8 +62,10 @@ class Choice:
     tried: list[Tried] = field(default_factory=list)
 
 
-@njit(cache=True, parallel=True)
+@njit(cache=True, nogil=True)
 def _edge_gains(
+    start: int,
+    stop: int,
     counts: Floats,
     left: Ints,
     right: Ints,
@@ -76,14 +79,14 @@ def _edge_gains(
     by_mass: Floats,
     by_share: Floats,
 ) -> None:
-    """Fill held-out sums of ln r over all folds, nats.
+    """Fill held-out sums of ln r over all folds, nats, of the edges from start to before stop.
 
     by_mass: (n_edges, n_masses) under the middle share. by_share: (n_edges, n_shares)
     under each edge's best mass.
     """
     empty = np.empty(0)
     middle = shares[shares.shape[0] // 2 : shares.shape[0] // 2 + 1]
-    for e in prange(left.shape[0]):
+    for e in range(start, stop):
         a, b = left[e], right[e]
         n, m = n_bins[a], n_bins[b]
         left_scores = empty if is_state[a] else scores[a, : n - 1]
@@ -149,10 +152,11 @@ def choose(
         is_state = np.array([bool(node.bins.n_words) for node in coarse])
         by_mass = np.zeros((len(left), len(masses)))
         by_share = np.zeros((len(left), len(shares)))
-        _edge_gains(
+        arrays = (
             merged, left, right, sizes, marginal, scores, is_state, masses, shares, settled,
             by_mass, by_share,
         )  # fmt: skip
+        in_slices(len(left), _edge_gains, *arrays)
         tried.append(Tried(n_bins, by_mass / n_rows, by_share / n_rows))
     # Each pair has the mass that suits it; bins and share are the tree's.
     best = max(tried, key=lambda one: float(one.by_share.sum(axis=0).max()))

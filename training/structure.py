@@ -12,11 +12,12 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
 
 from training.copula import normal_cells
 from training.tables import mutual_information, shaped_joint
+from training.threads import in_slices
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -229,8 +230,10 @@ def _moves(counts: Floats) -> bool:
     return int((counts > 0.0).sum()) > 1
 
 
-@njit(cache=True, parallel=True)
+@njit(cache=True, nogil=True)
 def _weigh(
+    start: int,
+    stop: int,
     counts: NDArray[np.int64],
     left: Ints,
     right: Ints,
@@ -242,7 +245,7 @@ def _weigh(
     shares: Floats,
     gains: Floats,
 ) -> None:
-    for p in prange(left.shape[0]):
+    for p in range(start, stop):
         a, b = left[p], right[p]
         if is_state[a] and is_state[b]:
             continue
@@ -290,7 +293,10 @@ def edge_weights(
     is_state = np.array([node.is_state for node in nodes])
     gains = np.zeros((len(left), len(counts)))
     shares = np.array([WEIGHING_SHARE])
-    _weigh(counts, left, right, n_bins, marginal, scores, is_state, WEIGHING_MASSES, shares, gains)
+    arrays = (
+        counts, left, right, n_bins, marginal, scores, is_state, WEIGHING_MASSES, shares, gains
+    )  # fmt: skip
+    in_slices(len(left), _weigh, *arrays)
     n_rows = counts[:, :, :-1, :-1].sum(axis=(0, 2, 3))
     mean = gains.sum(axis=1) / np.maximum(n_rows, 1)
     error = gains.std(axis=1, ddof=1) * math.sqrt(len(counts)) / np.maximum(n_rows, 1)
