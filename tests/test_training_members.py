@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -9,8 +10,15 @@ import pytest
 from numpy.typing import NDArray
 
 from scoring.channels import ChannelTable, parse_channels
-from tests.spools import measurements, spool_of
-from training.members import MAX_REGIME_STATES, Learned, learn_fleet, learn_member, regimes_to_try
+from tests.spools import measurements, spool_of, times
+from training.members import (
+    MAX_REGIME_STATES,
+    Learned,
+    has_enough,
+    learn_fleet,
+    learn_member,
+    regimes_to_try,
+)
 from training.rows import Rows
 
 Floats = NDArray[np.float64]
@@ -94,3 +102,33 @@ def test_the_fleets_member_is_learned_from_all_sources() -> None:
         assert p[number[1]] < 0.2 * min(p[number[0]], p[number[2]])
     assert len(fleet.usual.rows) == 600
     assert fleet.usual.high > fleet.usual.median > 0
+
+
+def test_stretches_in_alert_are_left_out_of_tables_and_still_scored(tmp_path: Path) -> None:
+    rng = np.random.default_rng(4)
+    flow = rng.normal(size=1400)
+    values = np.column_stack([flow, 0.95 * flow + 0.3 * rng.normal(size=1400)])
+    values[300:500, 1] += 6.0
+    at = times(1400)
+    in_alert = np.array([[at[300], at[499]]])
+    with spool_of({"a": values}) as spool:
+        rows = Rows(spool, measurements(2), ("a",), 60.0, {"a": in_alert})
+        one = learn_member(rows, "a", tmp_path)
+        taught = learn_member(replace(rows, left_out={}), "a", tmp_path)
+    assert one.unused.tolist() == in_alert.tolist()
+    assert one.left_out == []
+    assert one.density.plain.n_records == 1200
+    scored = one.held_out.surprise(300, 500)
+    assert np.nanmedian(scored) > one.member.usual.high
+    assert np.nanmedian(taught.held_out.surprise(300, 500)) < np.nanmedian(scored) - 3.0
+
+
+def test_a_source_in_alert_for_nearly_all_its_time_has_too_little_left() -> None:
+    at = times(1000)
+    with spool_of({"a": np.zeros((1000, 1))}) as spool:
+        rows = Rows(spool, measurements(1), ("a",), 60.0)
+        assert has_enough(rows, "a")
+        assert has_enough(replace(rows, left_out={"a": np.array([[at[0], at[599]]])}), "a")
+        # What is left is all in one fold: without it there is nothing.
+        assert not has_enough(replace(rows, left_out={"a": np.array([[at[0], at[898]]])}), "a")
+        assert not has_enough(replace(rows, left_out={"a": np.array([[at[0], at[850]]])}), "a")

@@ -31,3 +31,13 @@ def test_a_single_stretch_is_one() -> None:
     text = trouble_words([Stretch("a", 0, 1, 5, 3.0)], a_curve(3, 1))
     assert text.startswith("1 stretch (2.00 % of the records) is far more surprising")
     assert text.endswith("0.30 alerts a day with it, 0.10 without")
+
+
+def test_stretches_in_alert_are_told_apart_from_those_found_by_their_surprise() -> None:
+    text = trouble_words([Stretch("a", 0, 1, 5, 3.0)], a_curve(30, 5), n_in_alert=2)
+    assert text.startswith(
+        "2 stretches in alert and 1 stretch far more surprising than the rest (2.00 % of the"
+    )
+    assert trouble_words([], a_curve(3, 1), 1).startswith(
+        "1 stretch in alert (2.00 % of the records): tables do not use it, levels do"
+    )

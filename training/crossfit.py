@@ -116,7 +116,9 @@ class _Seen:
         number, n_blocks = self._blocks.number(times_ns), self._blocks.n_blocks
         self._by_block[:, 0] += np.bincount(number, weights=surprise, minlength=n_blocks)
         self._by_block[:, 1] += np.bincount(number, minlength=n_blocks)
-        self._sampled.add(surprise, own, self._final.bin_table.rows(values))
+        # What is usual is asked of the records that tables may use.
+        kept = chunk.kept[there]
+        self._sampled.add(surprise[kept], own[kept], self._final.bin_table.rows(values[kept]))
         self._histograms.add(values)
         self._coverage.add(times_ns, fold, values)
         self._worst.add(number, times_ns, fold, values, (surprise, own))

@@ -9,6 +9,8 @@ from pathlib import Path
 from typing import Any
 
 import click
+import numpy as np
+from numpy.typing import NDArray
 
 from scoring.artefact import write_model
 from scoring.channels import ChannelTable, load_channels
@@ -18,7 +20,7 @@ from training.history.flags import history_flags, history_options
 from training.history.spool import Spool, spool_history
 from training.learn_report import learn_page
 from training.levels import Curve, set_levels
-from training.members import LEAST_OWN_RECORDS, Learned, learn_fleet, learn_member, share_tables
+from training.members import Learned, has_enough, learn_fleet, learn_member, share_tables
 from training.progress import Progress
 from training.promise import Promise, promise_of
 from training.promise_words import promise_lines
@@ -29,8 +31,9 @@ from training.season import slow_channels, unseen_nats
 from training.settings import LearnSettings, load_learn_settings
 from training.stillness import with_stillness
 from training.treetext import tree_lines
-from training.trouble import as_left_out
 from training.trouble_words import trouble_words
+
+Ints = NDArray[np.int64]
 
 # Stretches left out that the terminal lists; the report has them all.
 MAX_STRETCHES_SHOWN = 12
@@ -48,16 +51,22 @@ class LearnResult:
 
 
 def learn_model(
-    spool: Spool, table: ChannelTable, settings: LearnSettings, progress: Progress | None = None
+    spool: Spool,
+    table: ChannelTable,
+    settings: LearnSettings,
+    progress: Progress | None = None,
+    in_alert: dict[str, Ints] | None = None,
 ) -> LearnResult:
     """Learn a model from spooled history.
 
     Sources with too few records of their own are left to the fleet's member.
+    in_alert: per source (n, 2) first and last times in ns of stretches that tables must not
+    use; levels count them.
     """
     began = time.perf_counter()
     step_s = table.step_s or DEFAULT_STEP_S
-    rows = Rows(spool, table, spool.sources, step_s)
-    enough = [s for s in spool.sources if spool.n_records(s) >= LEAST_OWN_RECORDS]
+    rows = Rows(spool, table, spool.sources, step_s, in_alert or {})
+    enough = [s for s in spool.sources if has_enough(rows, s)]
     with tempfile.TemporaryDirectory(prefix="oddbranch-held-out-") as folder:
         learned = {}
         for source in enough:
@@ -65,6 +74,9 @@ def learn_model(
             if progress is not None:
                 progress.advance(1)
         learned = share_tables(rows, learned, Path(folder))
+        left_out = {s: one.unused for s, one in learned.items() if len(one.unused)}
+        # Sources without a member of their own keep what was known beforehand.
+        rows = replace(rows, left_out={**rows.left_out, **left_out})
         only = learned[enough[0]] if len(spool.sources) == 1 and enough else None
         fleet = learn_fleet(rows, only)
         if progress is not None:
@@ -82,7 +94,6 @@ def learn_model(
         # share of the budget.
         budget = settings.budget.alerts_per_day * len(enough) / max(len(spool.sources), 1)
         held_out = {s: one.held_out for s, one in learned.items()}
-        left_out = {s: as_left_out(one.left_out) for s, one in learned.items() if one.left_out}
         levels, members, curve = set_levels(
             rows, members, held_out, start, budget, left_out=left_out
         )
@@ -241,9 +252,10 @@ def _regime_words(result: LearnResult, one: Learned) -> str:
 def left_out_lines(result: LearnResult) -> list[str]:
     """Return which stretches the tables did not use, and both alert rates."""
     stretches = [stretch for one in result.learned.values() for stretch in one.left_out]
-    if not stretches or result.curve is None:
+    n_in_alert = sum(len(one.in_alert) for one in result.learned.values())
+    if (not stretches and not n_in_alert) or result.curve is None:
         return []
-    return [trouble_words(stretches, result.curve)] + [
+    return [trouble_words(stretches, result.curve, n_in_alert)] + [
         f"  {stretch.source}: {time_text(stretch.start_ns)} to {time_text(stretch.end_ns)}, "
         f"{stretch.n_records} records, up to {stretch.peak:.0f} nats above the usual"
         for stretch in sorted(stretches, key=lambda s: -s.peak)[:MAX_STRETCHES_SHOWN]

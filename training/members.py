@@ -7,6 +7,7 @@ from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
+from numpy.typing import NDArray
 
 from scoring.channels import ChannelTable
 from scoring.model import Member, Usual
@@ -15,6 +16,8 @@ from training.crossfit import HeldOut, hold_out, member_of, score_values, usual_
 from training.fit import Density, Shared, agreed, fit, fit_regimes
 from training.rows import Rows
 from training.trouble import Stretch, as_left_out, find_trouble
+
+Ints = NDArray[np.int64]
 
 # A source with fewer records is scored by the fleet's member.
 LEAST_OWN_RECORDS = 200
@@ -29,12 +32,37 @@ MAX_REGIME_STATES = 4
 
 @dataclass(frozen=True)
 class Learned:
-    """One member with how it was learned, and the stretches its tables did not use."""
+    """One member with how it was learned, and the stretches its tables did not use.
+
+    left_out: found by their surprise. in_alert: (n, 2) first and last times in ns, known
+    beforehand to have been in alert.
+    """
 
     member: Member
     density: Density
     held_out: HeldOut
     left_out: list[Stretch] = field(default_factory=list)
+    in_alert: Ints = field(default_factory=lambda: np.zeros((0, 2), dtype=np.int64))
+
+    @property
+    def unused(self) -> Ints:
+        """All stretches that the tables did not use, (n, 2) first and last times in ns."""
+        return np.concatenate([self.in_alert, as_left_out(self.left_out)])
+
+
+def has_enough(rows: Rows, source: str) -> bool:
+    """Return whether a source has records enough for a member of its own.
+
+    Where the rows leave stretches out, what is left must be enough without any one fold.
+    """
+    if rows.spool.n_records(source) < LEAST_OWN_RECORDS:
+        return False
+    if not len(rows.left_out.get(source, ())):
+        return True
+    n = np.zeros(N_FOLDS, dtype=np.int64)
+    for chunk in rows.of(source).chunks():
+        n += np.bincount(chunk.fold[chunk.kept], minlength=N_FOLDS)
+    return bool(n.sum() - n.max() >= LEAST_OWN_RECORDS)
 
 
 def learn_member(rows: Rows, source: str, folder: Path) -> Learned:
@@ -42,15 +70,19 @@ def learn_member(rows: Rows, source: str, folder: Path) -> Learned:
 
     Where state channels may choose a regime, a tree for each combination is learned too,
     and kept if held-out records are less surprising by more than the doubt of that.
-    Stretches of trouble are left out of the tables, and the rest is learned again.
+    Stretches of trouble are left out of the tables, and the rest is learned again; those
+    that the rows leave out from the start are not looked at.
     """
-    best = _best(rows.of(source), source, folder)
-    left_out = find_trouble(rows.of(source), source, best.held_out)
+    own = rows.of(source)
+    in_alert = own.left_out.get(source, np.zeros((0, 2), dtype=np.int64))
+    best = replace(_best(own, source, folder), in_alert=in_alert)
+    left_out = find_trouble(own, source, best.held_out)
     if not left_out:
         return best
     best.held_out.path.unlink()
-    without = replace(rows.of(source), left_out={source: as_left_out(left_out)})
-    return replace(_best(without, source, folder), left_out=left_out)
+    best = replace(best, left_out=left_out)
+    without = replace(own, left_out={source: best.unused})
+    return replace(_best(without, source, folder), left_out=left_out, in_alert=in_alert)
 
 
 def _best(own: Rows, source: str, folder: Path, shared: Shared | None = None) -> Learned:
@@ -86,11 +118,13 @@ def share_tables(rows: Rows, learned: dict[str, Learned], folder: Path) -> dict[
         found[source] = one
         if rows.spool.n_records(source) >= SETTLED_RECORDS:
             continue
-        own = replace(rows.of(source), left_out={source: as_left_out(one.left_out)})
+        own = replace(rows.of(source), left_out={source: one.unused})
         other = _best(own, source, folder, shared)
         if _pays(one.held_out, other.held_out):
             member = replace(other.member, tables="shared")
-            found[source] = replace(other, member=member, left_out=one.left_out)
+            found[source] = replace(
+                other, member=member, left_out=one.left_out, in_alert=one.in_alert
+            )
     return found
 
 

@@ -82,6 +82,8 @@ def _smoothed(own: Rows, held_out: HeldOut, middle: float, cap: float) -> list[t
     out, start, last_ns, value = [], 0, -1, 0.0
     for chunk in own.chunks():
         beyond = held_out.surprise(start, start + len(chunk.times_ns)) - middle
+        # What is left out already is not found again, nor does it count in the limit.
+        beyond[~chunk.kept] = np.nan
         start += len(chunk.times_ns)
         smooth, _, last_ns, value = sustain(
             chunk.times_ns, beyond, last_ns, value, 0.0, SMOOTH_STEPS * own.step_s, own.step_s, cap

@@ -41,14 +41,15 @@ def trouble_section(learned: Mapping[str, Learned], curve: Curve | None, step_s:
     """Return the stretches of time that tables did not use."""
     title = "Stretches left out of the tables"
     stretches = [stretch for one in learned.values() for stretch in one.left_out]
-    if not stretches or curve is None:
+    n_in_alert = sum(len(one.in_alert) for one in learned.values())
+    if (not stretches and not n_in_alert) or curve is None:
         text = "None: no stretch is so much more surprising than the rest of its source's history."
         return Section(title, (paragraph(text),))
     text = (
-        f"{trouble_words(stretches, curve)}. At most {percent_text(MOST_LEFT_OUT, 0)} of a "
-        "source's records are left out. If a stretch was normal, it will raise alerts when it "
-        "comes again; if it was trouble, name it in the file of `--exclude`, and levels leave it "
-        "out too."
+        f"{trouble_words(stretches, curve, n_in_alert)}. For its surprise at most "
+        f"{percent_text(MOST_LEFT_OUT, 0)} of a source's records are left out. If a stretch was "
+        "normal, it will raise alerts when it comes again; if it was trouble, name it in the file "
+        "of `--exclude`, and levels leave it out too."
     )
     shown = sorted(stretches, key=lambda s: -s.peak)[:MOST_STRETCHES]
     if len(shown) < len(stretches):
@@ -106,7 +107,7 @@ def _worst_row(
 
 
 def _is_left_out(one: Learned, worst: WorstRecord) -> bool:
-    return any(s.start_ns <= worst.time_ns <= s.end_ns for s in one.left_out)
+    return any(start <= worst.time_ns <= end for start, end in one.unused.tolist())
 
 
 def beside_text(channels: ChannelTable, member: Member, worst: WorstRecord) -> str:
