@@ -1,9 +1,9 @@
-"""History out of the service's store: its SQLite file, read beside the running service.
+"""History out of the service's store, read beside the running service.
 
-The store is only read, in short transactions, so that the service is never in the way.
-What is needed of its tables is named here and checked before anything is read. Records
-become batches like those of a history file, so that spans, words and excluded periods
-count as they do there.
+The store is the SQLite file of a data folder, or PostgreSQL. It is only read, in short
+transactions, so that the service is never in the way. What is needed of its tables is
+named here and checked before anything is read. Records become batches like those of a
+history file, so that spans, words and excluded periods count as they do there.
 """
 
 from __future__ import annotations
@@ -40,6 +40,8 @@ COLUMNS = {
         *("id", "source_id", "time_ns", "received_ns", "layout_id", "flags"),
         *("readings", "extra"),
     ),
+    "alert": ("source", "kind", "since_ns", "until_ns", "data"),
+    "action": ("id", "what", "source", "details"),
 }
 # Set on a record whose time was ahead of the service's clock: a wrong clock, not history.
 FLAG_AHEAD = 2
@@ -70,17 +72,47 @@ class Window:
     until_ns: int
 
 
-class Store:
-    """A service's store, opened for reading; a context manager by way of `closing`."""
+def _sqlite(path: Path) -> sa.Engine:
+    if not path.is_file():
+        raise BadStore(str(path), "no such file; is this the service's data folder?")
+    return sa.create_engine(
+        f"sqlite:///file:{quote(str(path.resolve()))}?mode=ro&uri=true",
+        connect_args={"timeout": _BUSY_S},
+    )
 
-    def __init__(self, data: Path) -> None:
-        self.path = data / DATABASE_FILE
-        if not self.path.is_file():
-            raise BadStore(str(self.path), "no such file; is this the service's data folder?")
-        self._engine = sa.create_engine(
-            f"sqlite:///file:{quote(str(self.path.resolve()))}?mode=ro&uri=true",
-            connect_args={"timeout": _BUSY_S},
+
+def _postgresql(url: str) -> sa.Engine:
+    scheme, _, rest = url.partition("://")
+    if scheme not in ("postgresql", "postgres", "postgresql+psycopg") or not rest:
+        raise BadStore(
+            "store.url",
+            "must begin with postgresql://, for example postgresql://oddbranch@localhost/records; "
+            "leave it empty for SQLite",
         )
+    try:
+        return sa.create_engine(
+            f"postgresql+psycopg://{rest}",
+            connect_args={"connect_timeout": _BUSY_S, "application_name": "oddbranch nightly"},
+        )
+    except sa.exc.ArgumentError:
+        raise BadStore("store.url", "is not a URL that PostgreSQL's driver reads") from None
+    except ModuleNotFoundError:
+        raise BadStore(
+            "store.url", "needs the driver of PostgreSQL: pip install 'oddbranch[postgresql]'"
+        ) from None
+
+
+class Store:
+    """A service's store, opened for reading; a context manager by way of `closing`.
+
+    data: its data folder. url: of PostgreSQL, where the service has its records there.
+    """
+
+    def __init__(self, data: Path, url: str = "") -> None:
+        self.path = data / DATABASE_FILE
+        self._engine = _postgresql(url) if url else _sqlite(self.path)
+        if url:
+            self.path = Path(f"the database {self._engine.url.database} of {self._engine.url.host}")
         try:
             self._check_tables()
         except sa.exc.DatabaseError as error:
@@ -89,6 +121,10 @@ class Store:
         except BadStore:
             self.close()
             raise
+
+    def connect(self) -> sa.Connection:
+        """Return a connection to read by; close it soon."""
+        return self._engine.connect()
 
     def close(self) -> None:
         """Close every connection; may be called twice."""
@@ -108,7 +144,7 @@ class Store:
 
     def newest(self, days: float) -> Window:
         """Return the window of some days up to the newest record; raises BadStore if empty."""
-        with self._engine.connect() as connection:
+        with self.connect() as connection:
             last_ns = connection.execute(sa.text("SELECT MAX(last_ns) FROM source")).scalar()
         if last_ns is None or last_ns < 0:
             raise BadStore(str(self.path), "holds no records yet")
@@ -154,7 +190,7 @@ class Store:
         after = self._first_received(window.since_ns - AHEAD_NS) - 1
         while after < last:
             wanted = {"after": after, "last": last, "n": _PAGE_ROWS}
-            with self._engine.connect() as connection:
+            with self.connect() as connection:
                 rows = connection.execute(_PAGE, wanted).all()
             if not rows:
                 return
@@ -162,7 +198,7 @@ class Store:
             after = int(rows[-1].id)
 
     def _ends(self) -> tuple[int, int]:
-        with self._engine.connect() as connection:
+        with self.connect() as connection:
             found = connection.execute(sa.text("SELECT MIN(id), MAX(id) FROM record")).one()
         return int(found[0] or 0), int(found[1] or 0)
 
@@ -170,7 +206,7 @@ class Store:
         """Return the first id that came at or after a time; ids rise with arrival."""
         low, high = self._ends()
         query = sa.text("SELECT received_ns FROM record WHERE id >= :id ORDER BY id LIMIT 1")
-        with self._engine.connect() as connection:
+        with self.connect() as connection:
             while low < high:
                 middle = (low + high) // 2
                 if int(connection.execute(query, {"id": middle}).scalar_one()) < received_ns:
@@ -180,13 +216,13 @@ class Store:
         return low
 
     def _sources(self) -> dict[int, str]:
-        with self._engine.connect() as connection:
+        with self.connect() as connection:
             rows = connection.execute(sa.text("SELECT id, name FROM source ORDER BY id")).all()
         return {int(row.id): str(row.name) for row in rows}
 
     def _layout(self, layout_id: int) -> list[Mapping[str, Any]]:
         query = sa.text("SELECT channels FROM layout WHERE id = :id")
-        with self._engine.connect() as connection:
+        with self.connect() as connection:
             text = connection.execute(query, {"id": layout_id}).scalar_one()
         found: list[Mapping[str, Any]] = json.loads(text)
         return found
