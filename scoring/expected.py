@@ -48,27 +48,54 @@ def _middle(p: Floats, borders: Floats) -> float:
 
 
 @njit(cache=True, nogil=True)
+def _closed(p: Floats, borders: Floats) -> tuple[float, float]:
+    """Return the shortest interval between closed ends; both infinite if they hold too little.
+
+    The shortest interval of a stepwise density has a border at one of its ends. As the one
+    end moves up from border to border, so does the other.
+    """
+    n = borders.shape[0]
+    mass = np.zeros(n)
+    for k in range(1, n):
+        mass[k] = mass[k - 1] + p[k]
+    low, high, width = -np.inf, np.inf, np.inf
+    b = 1
+    for k in range(n):
+        while b < n and mass[b] - mass[k] < EXPECTED_SHARE:
+            b += 1
+        if b >= n:
+            break
+        part = (EXPECTED_SHARE - (mass[b - 1] - mass[k])) / p[b]
+        x = borders[b - 1] + part * (borders[b] - borders[b - 1])
+        if x - borders[k] < width:
+            low, high, width = borders[k], x, x - borders[k]
+    b = n - 1
+    for k in range(n - 1, -1, -1):
+        while b > 0 and mass[k] - mass[b - 1] < EXPECTED_SHARE:
+            b -= 1
+        if b <= 0:
+            break
+        part = (EXPECTED_SHARE - (mass[k] - mass[b])) / p[b]
+        y = borders[b] - part * (borders[b] - borders[b - 1])
+        if borders[k] - y < width:
+            low, high, width = y, borders[k], borders[k] - y
+    return low, high
+
+
+@njit(cache=True, nogil=True)
 def shortest_interval(p: Floats, borders: Floats, resolution: float) -> tuple[float, float, float]:
     """Return low, high and best of a belief over bins, in the channel's unit.
 
     p: (n_borders + 1,) summing to 1; the density is even inside a bin. borders: rising.
     resolution: 0 if unknown; low and high are rounded outward to it.
-    A side that has to reach into an outermost bin is open: -inf or inf. The shortest
-    interval of a stepwise density has a border at one of its ends.
+    A side that has to reach into an outermost bin is open: -inf or inf.
     """
     n = borders.shape[0]
     if n == 0:
         return -np.inf, np.inf, np.nan
     best = _middle(p, borders)
-    low, high, width = -np.inf, np.inf, np.inf
-    for k in range(n):
-        x = _reach(p, borders, k, EXPECTED_SHARE)
-        if x - borders[k] < width:
-            low, high, width = borders[k], x, x - borders[k]
-        y = _reach_down(p, borders, k, EXPECTED_SHARE)
-        if borders[k] - y < width:
-            low, high, width = y, borders[k], borders[k] - y
-    if width == np.inf:
+    low, high = _closed(p, borders)
+    if high == np.inf:
         # The closed bins hold too little, so at least one side is open.
         if p[0] >= p[n] and p[0] < EXPECTED_SHARE:
             high = _reach(p, borders, 0, EXPECTED_SHARE - float(p[0]))

@@ -292,14 +292,10 @@ def _intervals(
     low, high, best = np.full(n, np.nan), np.full(n, np.nan), np.full(n, np.nan)
     hidden = np.empty(rows.shape[1], np.uint8)
     for r in range(n):
-        i = suspect[r]
-        if i < 0:
+        i = int(suspect[r])
+        if i < 0 or borders[i, 0] != borders[i, 0]:
             continue
-        n_borders = 0
-        while n_borders < borders.shape[1] and borders[i, n_borders] == borders[i, n_borders]:
-            n_borders += 1
-        if n_borders + 1 != t.n_bins[i]:
-            continue
+        n_borders = t.n_bins[i] - 1
         hidden[:] = rows[r]
         hidden[i] = MISSING
         for k in range(group_start[i], group_start[i + 1]):

@@ -15,7 +15,7 @@ def best_seconds(
 ) -> list[float]:
     """Return each job's shortest time; rounds alternate, so that all meet the same load.
 
-    clock: time.process_time for what runs on one core, so that waiting for it is not counted.
+    clock: time.thread_time for what runs on one core, so that waiting for it is not counted.
     """
     best = [float("inf")] * len(jobs)
     for _ in range(n_rounds):

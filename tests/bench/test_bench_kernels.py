@@ -98,7 +98,7 @@ def test_binning(model: Model) -> None:
         ]
 
     np.testing.assert_array_equal(ours().T, numpys())
-    mine, theirs = best_seconds(ours, numpys, clock=time.process_time)
+    mine, theirs = best_seconds(ours, numpys, clock=time.thread_time)
     line("binning: ours, ns a reading", f"{mine / values.size * 1e9:.1f}")
     line("binning: numpy.searchsorted", f"{theirs / values.size * 1e9:.1f}")
     line("binning 24 channels, one core: times as fast", f"{theirs / mine:.1f}")
@@ -127,7 +127,7 @@ def test_scoring_arrays(model: Model) -> None:
     for job in (surprise, suspects, everything):
         job()
     plain, named, whole, other = best_seconds(
-        surprise, suspects, everything, theirs, clock=time.process_time
+        surprise, suspects, everything, theirs, clock=time.thread_time
     )
     for what, seconds in (
         ("scoring: surprise alone, ns a reading", plain),
@@ -163,7 +163,7 @@ def test_gaps_cost_a_bounded_factor(model: Model, n_missing: int) -> None:
 
     scored(gaps)
     full, missing = best_seconds(
-        lambda: scored(whole), lambda: scored(gaps), clock=time.process_time
+        lambda: scored(whole), lambda: scored(gaps), clock=time.thread_time
     )
     what = f"scoring with suspects, {n_missing} of 24 readings missing: times as long"
     line(what, f"{missing / full:.1f}")
