@@ -33,6 +33,10 @@ _RECORDS = (1.0, 2.0, 5.0, 10.0, 25.0, 50.0, 100.0, 250.0, 500.0, 1000.0, 2500.0
 # Excess rests near zero; levels usually lie between 5 and 50 nats. What is less than usual
 # counts as zero, because a histogram with negative values has no sum that only rises.
 _NATS = (0.0, 1.0, 2.0, 5.0, 10.0, 15.0, 20.0, 30.0, 50.0, 100.0, 200.0)
+# What can become of a record, and of a model that is found; shown from the start at zero, so
+# that a rule sees the first one too.
+_OUTCOMES = ("stored", "late", "ahead", "known", "conflict", "no_room", "refused")
+_RELOADS = ("taken", "refused")
 # Unknown paths would each be a label value of their own.
 OTHER_ROUTE = "other"
 
@@ -93,7 +97,8 @@ class Metrics:
         self.registry = CollectorRegistry()
         self.registry.register(_Collector(self))
         self._lock = threading.Lock()
-        self.outcomes: Counter[str] = Counter()
+        self.outcomes: Counter[str] = Counter(dict.fromkeys(_OUTCOMES, 0))
+        self.n_not_judged = 0
         self.requests: Counter[tuple[str, str, str]] = Counter()
         self.request_seconds: dict[str, Histogram] = {}
         self.scoring_seconds = Histogram(_SECONDS)
@@ -101,12 +106,14 @@ class Metrics:
         self.batch_records = Histogram(_RECORDS)
         self.group_records = Histogram(_RECORDS)
         self.excess = Histogram(_NATS)
-        self.over_level: Counter[str] = Counter()
+        self.over_level: Counter[str] = Counter(
+            dict.fromkeys((word for word in ALERT_WORDS if word), 0)
+        )
         self.suspects: Counter[str] = Counter()
         self.n_readings, self.missing = 0, Counter[str]()
         self.sources: dict[str, SourceTally] = {}
         self.store_failures = 0
-        self.reloads: Counter[str] = Counter()
+        self.reloads: Counter[str] = Counter(dict.fromkeys(_RELOADS, 0))
         # Read when scraped; filled in by the app.
         self.gauges: Callable[[], Mapping[str, float]] = dict
         self.engine: Callable[[], Engine | None] = lambda: None
@@ -150,8 +157,8 @@ class Metrics:
         if sheet.flags.any():
             late = int(np.count_nonzero(stored & (sheet.flags & FLAG_LATE > 0)))
             ahead = int(np.count_nonzero(stored & (sheet.flags & FLAG_AHEAD > 0)))
-            unjudged = int(np.count_nonzero(stored & (sheet.flags & FLAG_NOT_JUDGED > 0)))
-            self.outcomes["not_judged"] += unjudged
+            unjudged = stored & (sheet.flags & FLAG_NOT_JUDGED > 0)
+            self.n_not_judged += int(np.count_nonzero(unjudged))
         self.outcomes["late"] += late
         self.outcomes["ahead"] += ahead
         self.outcomes["stored"] += n_stored - late - ahead
@@ -227,8 +234,14 @@ class _Collector:
         yield _counter(
             "records_over_level", "Records over a level, by the level's kind.", "kind", m.over_level
         )
-        yield _counter("suspects", "Records over a level by their suspect.", "channel", m.suspects)
-        yield _counter("missing_readings", "Readings that were absent.", "channel", m.missing)
+        yield CounterMetricFamily(
+            "oddbranch_records_not_judged", "Records with too few readings.", value=m.n_not_judged
+        )
+        engine = m.engine()
+        none = dict.fromkeys(engine.layout.names if engine is not None else (), 0)
+        suspects, missing = none | m.suspects, none | m.missing
+        yield _counter("suspects", "Records over a level by their suspect.", "channel", suspects)
+        yield _counter("missing_readings", "Readings that were absent.", "channel", missing)
         yield CounterMetricFamily(
             "oddbranch_readings", "Readings that could have come.", value=m.n_readings
         )
@@ -322,6 +335,7 @@ _GAUGE_HELP = {
     "alarm_budget_alerts_last_day": "Alerts raised in the last day that the budget counts.",
     "start_timestamp_seconds": "When the service started.",
     "model_published_timestamp_seconds": "When the model in use was published.",
+    "model_refused": "1 while the model that was published last cannot be used.",
 }
 # What a model may say of itself, by the name of its metric.
 FIGURE_HELP = {

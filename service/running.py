@@ -175,6 +175,7 @@ class Service:
             "body_memory_bytes": float(self.n_body_bytes),
             "start_timestamp_seconds": self.started_s,
             "model_published_timestamp_seconds": self.models.published_s,
+            "model_refused": float(self.models.refusal is not None),
         }
         used = self._budget_used()
         if used is not None:

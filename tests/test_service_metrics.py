@@ -19,6 +19,7 @@ from hypothesis import strategies as st
 
 from service.metrics import Histogram
 from tests.conftest import need_program
+from tests.service_fakes import write_fake
 from tests.service_http import Api, record, running, serving
 
 
@@ -47,6 +48,37 @@ def test_records_over_a_level_are_counted_by_kind_source_and_suspect(api: Api) -
     assert value(api, "source_records_over_level_total", source="a") == 3
     assert value(api, "source_records_over_level_total", source="b") == 0
     assert value(api, "suspects_total", channel="flow") == 3
+
+
+def test_records_with_too_few_readings_are_counted_beside_the_outcomes(api: Api) -> None:
+    empty = dict.fromkeys(("flow", "power", "pump", "speed"))
+    api.post([record(0), record(1, **empty)])
+    assert value(api, "records_total", outcome="stored") == 2
+    assert value(api, "records_not_judged_total") == 1
+
+
+def test_what_can_be_counted_is_shown_from_the_start(api: Api) -> None:
+    """A rule sees the first one only where there was a zero before."""
+    for outcome in ("stored", "late", "ahead", "known", "conflict", "no_room", "refused"):
+        assert value(api, "records_total", outcome=outcome) == 0
+    for kind in ("record", "sustained"):
+        assert value(api, "records_over_level_total", kind=kind) == 0
+    for channel in ("flow", "power", "pump", "speed"):
+        assert value(api, "suspects_total", channel=channel) == 0
+        assert value(api, "missing_readings_total", channel=channel) == 0
+    for outcome in ("taken", "refused"):
+        assert value(api, "model_reloads_total", outcome=outcome) == 0
+
+
+def test_a_model_that_is_refused_shows_until_another_is_taken(tmp_path: Path) -> None:
+    with running(tmp_path, model={"reload_s": 0.1}) as api:
+        assert value(api, "model_refused") == 0
+        write_fake(tmp_path / "model", "broken")
+        api.call(api.service.models.look())
+        assert value(api, "model_refused") == 1
+        write_fake(tmp_path / "model", "fedcba9876543210")
+        api.call(api.service.models.look())
+        assert value(api, "model_refused") == 0
 
 
 def test_missing_readings_are_counted_by_channel(api: Api) -> None:
