@@ -13,6 +13,7 @@ import importlib
 import importlib.util
 import sys
 from importlib.metadata import PackageNotFoundError, version
+from pathlib import Path
 from typing import NoReturn
 
 import click
@@ -31,8 +32,15 @@ COMMANDS = {
     "export": ("service.export", "export_command", "Write stored records as CSV."),
     "nightly": ("training.nightly", "nightly_command", "Renew the model from stored records."),
     "models": ("training.models", "models_command", "List, compare and choose kept models."),
-    "settings": ("service.settings", "settings_command", "Show what the settings are, and why."),
+    "settings": ("oddbranch", "settings_command", "Show what the settings are, and why."),
     "demo": ("training.demo", "demo_command", "See it all on an invented plant."),
+}
+
+# What `oddbranch settings` can show: (module, function that yields its lines).
+SETTINGS = {
+    "service": ("service.settings", "lines_in_force"),
+    "learn": ("training.settings_shown", "learn_lines"),
+    "nightly": ("training.settings_shown", "nightly_lines"),
 }
 
 # What the machine refuses and its owner can mend: a full or read-only disk, a missing right.
@@ -101,6 +109,25 @@ def _version() -> str:
 @click.version_option(_version(), prog_name="oddbranch", message="%(prog)s %(version)s")
 def cli() -> None:
     """Learn what goes with what in a fleet's sensor history, and score every record by it."""
+
+
+@click.command("settings")
+@click.argument("of", type=click.Choice(tuple(SETTINGS)), default="service")
+@click.option(
+    "--config",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="Settings file, as given there.",
+)
+def settings_command(of: str, config: Path | None) -> None:
+    """Show every setting in force of the service, of learning or of the nightly job.
+
+    Each line says where the value is from: an environment variable wins over the file, that
+    over the default; options of `serve` win over all. Passwords are not shown.
+    """
+    module, function = SETTINGS[of]
+    for line in getattr(importlib.import_module(module), function)(config):
+        click.echo(line)
 
 
 def main() -> NoReturn:

@@ -8,13 +8,11 @@ nearest known name. Variables are ODDBRANCH_ + section + __ + key in capitals.
 from __future__ import annotations
 
 import os
-import re
 import tomllib
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 from typing import Any, Literal
 
-import click
 from pydantic import BaseModel, ConfigDict, Field, SecretStr, ValidationError
 from pydantic_settings import (
     BaseSettings,
@@ -23,12 +21,11 @@ from pydantic_settings import (
     SettingsConfigDict,
 )
 
+from config import known
 from scoring.errors import OddbranchError
 from service.nearest import nearest_of
 
-ENVIRONMENT_PREFIX = "ODDBRANCH_"
-# Variables of the same prefix that belong to the tests and to the learning.
-_OTHER_VARIABLES = ("ODDBRANCH_TEST_", "ODDBRANCH_LEARN__", "ODDBRANCH_NIGHTLY__")
+FILE = "service.toml"
 
 Origin = Literal["option", "environment", "file", "default"]
 
@@ -109,7 +106,7 @@ class Settings(BaseSettings):
     """All settings in force."""
 
     model_config = SettingsConfigDict(
-        env_prefix=ENVIRONMENT_PREFIX,
+        env_prefix=known.PREFIX,
         env_nested_delimiter="__",
         extra="forbid",
         frozen=True,
@@ -163,7 +160,9 @@ def load_settings(
     """
     file = _read_file(path) if path is not None else {}
     _check_file(file, path)
-    _check_environment(os.environ if environment is None else environment)
+    wrong = known.misspelt(os.environ if environment is None else environment)
+    if wrong is not None:
+        raise BadSettings(wrong)
     try:
         return Settings(options=dict(options or {}), file=file)  # type: ignore[call-arg]
     except ValidationError as error:
@@ -195,23 +194,14 @@ def _check_file(file: Mapping[str, Any], path: Path | None) -> None:
                 )
 
 
-def _check_environment(environment: Mapping[str, str]) -> None:
-    known = {variable_of(section, key) for section, key in known_keys()}
-    for name in environment:
-        if name.startswith(_OTHER_VARIABLES) or not name.startswith(ENVIRONMENT_PREFIX):
-            continue
-        if name.upper() not in known:
-            raise BadSettings(f"environment: {name} is not known{_hint(name, known)}")
-
-
-def _hint(name: str, known: Any) -> str:
-    near = nearest_of(name, known)
-    return f"; is {near} meant?" if near else f"; known are {', '.join(sorted(known)[:40])}"
+def _hint(name: str, names: Any) -> str:
+    near = nearest_of(name, names)
+    return f"; is {near} meant?" if near else f"; known are {', '.join(sorted(names)[:40])}"
 
 
 def variable_of(section: str, key: str) -> str:
     """Return the environment variable of a setting."""
-    return f"{ENVIRONMENT_PREFIX}{section}__{key}".upper()
+    return known.variable_of(FILE, section, key)
 
 
 def origin_of(
@@ -260,23 +250,19 @@ def _range(section: str, key: str) -> str | None:
     return f"{what} from {low:,} to {high:,} is wanted ({field.description})".replace(",", " ")
 
 
-@click.command("settings")
-@click.option("--config", type=click.Path(path_type=Path), help="Settings file of the service.")
-def settings_command(config: Path | None) -> None:
-    """Show every setting of the service in force, and where it comes from."""
+def lines_in_force(config: Path | None) -> Iterator[str]:
+    """Yield every setting in force, where it comes from and what it is; raises BadSettings."""
     settings, file = load_settings(config), read_file(config)
     for section, key in known_keys():
         field = type(Settings.model_fields[section].default).model_fields[key]
         value = getattr(getattr(settings, section), key)
         origin = origin_of(section, key, file, {})
-        click.echo(f"{section}.{key} = {_shown(value)}  ({origin}; {field.description})")
+        yield f"{section}.{key} = {_shown(value)}  ({origin}; {field.description})"
 
 
 def _shown(value: object) -> str:
     if isinstance(value, SecretStr):
-        secret = value.get_secret_value()
-        # The password alone is secret; where the store is helps whoever looks for it.
-        return re.sub(r"(?<=:)[^:@/]*(?=@)", "***", secret) if secret else '""'
+        return known.masked(value.get_secret_value()) or '""'
     if isinstance(value, tuple):
         return str(list(value))
     return f'"{value}"' if isinstance(value, str | Path) else str(value).lower()

@@ -100,3 +100,26 @@ def test_what_the_machine_refuses_is_one_sentence(tmp_path: Path) -> None:
 
 def test_version_names_the_command() -> None:
     assert run("--version").stdout.startswith("oddbranch ")
+
+
+@pytest.mark.parametrize(
+    ("words", "key"),
+    [
+        ([], "server.port = 8321  (default;"),
+        (["service"], "server.port = 8321  (default;"),
+        (["learn"], "budget.alerts_per_day = 2.0  (default;"),
+        (["nightly"], "models.keep = 14  (default;"),
+    ],
+)
+def test_settings_shows_what_is_in_force_in_each_file(words: list[str], key: str) -> None:
+    done = CliRunner().invoke(oddbranch.cli, ["settings", *words])
+    assert done.exit_code == 0
+    assert key in done.output
+
+
+def test_settings_refuses_a_misspelt_key_by_name(tmp_path: Path) -> None:
+    path = tmp_path / "service.toml"
+    path.write_text("[server]\nprot = 1\n", encoding="utf-8")
+    done = run("settings", "--config", str(path))
+    assert done.returncode == 1
+    assert "server.prot is not known; is port meant?" in done.stderr
