@@ -1,0 +1,199 @@
+"""What one night learns from, what it is judged by, and what was left out and why.
+
+Periods labelled real, out of service, under maintenance or before a declared change are
+left out of everything. Periods in unlabelled alert are left out of the tables only. What
+was labelled nuisance stays. The newest days are kept for the judge.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass, field, replace
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+
+from scoring.channels import ChannelTable
+from training.changes import Change
+from training.history.batch import HistoryBatch
+from training.history.exclusions import Exclusion
+from training.history.options import HistoryOptions
+from training.history.reading import Advances, read_history
+from training.history.spool import Spool
+from training.history.tally import Tally
+from training.nightly_settings import HistoryWanted
+from training.stored import Store, Window
+from training.stored_alerts import (
+    REAL,
+    OutOfService,
+    StoredAlert,
+    in_alert,
+    read_alerts,
+    read_out_of_service,
+)
+
+Ints = NDArray[np.int64]
+DAY_NS = 86_400 * 10**9
+HOUR_NS = 3600 * 10**9
+_EVER_NS = 1 << 62
+
+
+@dataclass
+class Chosen:
+    """One night's records; a context manager that removes their files.
+
+    learning: what is learned from. held: the newest days, for the judge.
+    window: both together; cut_ns: the judge's days begin after it.
+    in_alert: per source (n, 2) first and last times in ns of unlabelled alert.
+    alerts: that touch the window. hours: with a record to learn from.
+    n_in_alert: records to learn from that lie in unlabelled alert.
+    """
+
+    learning: Spool
+    held: Spool
+    window: Window
+    cut_ns: int
+    in_alert: dict[str, Ints]
+    alerts: tuple[StoredAlert, ...]
+    changes: tuple[Change, ...]
+    hours: int
+    n_in_alert: int
+
+    @property
+    def n_records(self) -> int:
+        """Records to learn from."""
+        return sum(self.learning.report.n_records.values())
+
+    @property
+    def left_out(self) -> Counter[str]:
+        """Records left out of everything, by reason, the judge's days included."""
+        return self.learning.report.excluded + self.held.report.excluded
+
+    def close(self) -> None:
+        """Remove the files; may be called twice."""
+        self.learning.close()
+        self.held.close()
+
+    def __enter__(self) -> Chosen:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.close()
+
+
+@dataclass(frozen=True)
+class Wanted:
+    """What a night may learn from: settings, files and how to read them, periods, changes."""
+
+    history: HistoryWanted
+    judge_days: float
+    files: tuple[str, ...] = ()
+    options: HistoryOptions = field(default_factory=HistoryOptions)
+    exclusions: tuple[Exclusion, ...] = ()
+    changes: tuple[Change, ...] = ()
+
+
+def choose(
+    store: Store,
+    table: ChannelTable,
+    wanted: Wanted,
+    progress: Advances | None = None,
+    folder: Path | None = None,
+) -> Chosen:
+    """Return one night's records, which the caller closes.
+
+    folder: where temporary files go. Raises BadStore for an empty store, BadHistory.
+    """
+    window = store.newest(wanted.history.days)
+    alerts = read_alerts(store, window)
+    exclusions = (
+        *wanted.exclusions,
+        *(change.exclusion for change in wanted.changes),
+        *_real(alerts, window.until_ns),
+        *_out(read_out_of_service(store)),
+    )
+    join_ns = round(wanted.history.join_alerts_h * HOUR_NS)
+    stretches = {
+        source: np.array(found, dtype=np.int64).reshape(-1, 2)
+        for source, found in in_alert(alerts, window.until_ns, join_ns).items()
+    }
+    cut_ns = window.until_ns - round(wanted.judge_days * DAY_NS)
+    both = _Both(len(table.instruments), cut_ns, exclusions, folder)
+    try:
+        with Tally() as tally:
+            for batch in _batches(store, table, window, wanted, tally):
+                both.add(batch, tally)
+                if progress is not None:
+                    progress.advance(batch.n_rows)
+            both.finish(tally)
+        hours, n_in_alert = _look_over(both.learning, stretches)
+    except BaseException:
+        both.close()
+        raise
+    return Chosen(
+        both.learning, both.held, window, cut_ns, stretches, alerts, wanted.changes, hours,
+        n_in_alert,
+    )  # fmt: skip
+
+
+def _batches(
+    store: Store, table: ChannelTable, window: Window, wanted: Wanted, tally: Tally
+) -> Iterator[HistoryBatch]:
+    if wanted.files:
+        yield from read_history(wanted.files, table, wanted.options, tally)
+    yield from store.batches(table, window, tally)
+
+
+def _real(alerts: Sequence[StoredAlert], now_ns: int) -> Iterator[Exclusion]:
+    for alert in alerts:
+        if alert.label == REAL:
+            end_ns = now_ns if alert.until_ns is None else alert.until_ns
+            yield Exclusion(alert.source, alert.since_ns, end_ns + 1, "alert labelled real")
+
+
+def _out(periods: Sequence[OutOfService]) -> Iterator[Exclusion]:
+    for one in periods:
+        end_ns = _EVER_NS if one.end_ns is None else one.end_ns
+        if one.start_ns < end_ns:
+            yield Exclusion(one.source, one.start_ns, end_ns, f"out of service: {one.reason}")
+
+
+class _Both:
+    """Two spools filled from one reading: records up to the cut, and those after it."""
+
+    def __init__(
+        self, n_values: int, cut_ns: int, exclusions: tuple[Exclusion, ...], folder: Path | None
+    ) -> None:
+        self._cut_ns, self._exclusions = cut_ns, exclusions
+        self.learning, self.held = Spool(n_values, folder), Spool(n_values, folder)
+
+    def add(self, batch: HistoryBatch, tally: Tally) -> None:
+        after = batch.times_ns > self._cut_ns
+        for spool, mine in ((self.learning, ~after), (self.held, after)):
+            if (mine & batch.good).any():
+                problem = np.where(mine, batch.problem, "of the other part")
+                spool.add(replace(batch, problem=problem), self._exclusions, tally)
+
+    def finish(self, tally: Tally) -> None:
+        self.learning.finish(tally)
+        self.held.finish(tally)
+
+    def close(self) -> None:
+        self.learning.close()
+        self.held.close()
+
+
+def _look_over(spool: Spool, stretches: dict[str, Ints]) -> tuple[int, int]:
+    """Return how many hours have a record, and how many records lie in stretches."""
+    hours: set[int] = set()
+    n_inside = 0
+    for source in spool.sources:
+        for times_ns, _ in spool.chunks(source):
+            hours.update(np.unique(times_ns // HOUR_NS).tolist())
+            inside = np.zeros(len(times_ns), dtype=bool)
+            for start, end in stretches.get(source, ()):
+                inside |= (times_ns >= start) & (times_ns <= end)
+            n_inside += int(inside.sum())
+    return len(hours), n_inside
