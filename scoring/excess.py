@@ -8,13 +8,15 @@ full record's falls. The two figures per mask are kept in a bounded cache.
 from __future__ import annotations
 
 from collections import OrderedDict
+from functools import cached_property
 from threading import Lock
 
 import numpy as np
 from numpy.typing import NDArray
 
 from scoring.bins import MISSING, BinRows
-from scoring.density import surprise_of
+from scoring.density import rows_by_part, surprise_of
+from scoring.kernels import removal_rows
 from scoring.model import Member
 
 Floats = NDArray[np.float64]
@@ -34,10 +36,12 @@ class ExcessScale:
         self._member = member
         self._known: OrderedDict[bytes, tuple[float, float]] = OrderedDict()
         self._lock = Lock()
-        full = surprise_of(member, member.usual.rows)
-        self._rows_missing = member.usual.rows == MISSING
-        whole = ~self._rows_missing.any(axis=1)
-        self._drawn = _middle_and_high(full[whole] if whole.sum() >= ENOUGH_TRUE_ROWS else full)
+        rows = member.usual.rows
+        self._full = surprise_of(member, rows)
+        self._missing = np.ascontiguousarray((rows == MISSING).T)
+        whole = ~self._missing.any(axis=0)
+        enough = whole.sum() >= ENOUGH_TRUE_ROWS
+        self._drawn = _middle_and_high(self._full[whole] if enough else self._full)
 
     def excess(self, rows: BinRows, surprise: Floats) -> Floats:
         """Return (n,) excess in nats of records with bins `rows` (n, n_nodes)."""
@@ -47,11 +51,14 @@ class ExcessScale:
         gaps = np.flatnonzero(hidden.any(axis=1))
         if not len(gaps):
             return out
-        masks, which = np.unique(hidden[gaps], axis=0, return_inverse=True)
-        for k, mask in enumerate(masks):
-            middle, stretch = self._scale(mask)
-            where = gaps[which.reshape(-1) == k]
-            out[where] = (surprise[where] - middle) * stretch
+        packed = np.packbits(hidden[gaps], axis=1)
+        keys = packed.view(np.dtype((np.void, packed.shape[1]))).reshape(-1)
+        _, first, which = np.unique(keys, return_index=True, return_inverse=True)
+        ends = np.cumsum(np.bincount(which))[:-1]
+        for one, where in zip(first, np.split(np.argsort(which, kind="stable"), ends), strict=True):
+            middle, stretch = self._scale(hidden[gaps[one]])
+            at = gaps[where]
+            out[at] = (surprise[at] - middle) * stretch
         return out
 
     def _scale(self, mask: NDArray[np.bool_]) -> tuple[float, float]:
@@ -70,10 +77,7 @@ class ExcessScale:
     def _measure(self, mask: NDArray[np.bool_]) -> tuple[float, float]:
         """Return the usual median under a mask and the stretch to a full record's scale."""
         usual = self._member.usual
-        true = (self._rows_missing == mask).all(axis=1)
-        rows = usual.rows[true] if true.sum() >= ENOUGH_TRUE_ROWS else usual.rows.copy()
-        rows[:, mask] = MISSING
-        middle, high = _middle_and_high(surprise_of(self._member, rows))
+        middle, high = _middle_and_high(self._under(mask))
         # The kept rows are scored by tables that may have seen them; the figures of a full
         # record were not. The difference is added, so that both speak of unseen records.
         full_middle, full_high = self._drawn
@@ -82,8 +86,68 @@ class ExcessScale:
         share = min(1.0, middle / full_middle) if full_middle > 0 else 1.0
         return middle + unseen * max(share, 0.0), min(stretch, MAX_STRETCH)
 
+    def _under(self, mask: NDArray[np.bool_]) -> Floats:
+        """Return the kept records' surprise under a mask: of those that truly had it, if enough.
+
+        A node whose neighbours are read takes its own surprise with it when it goes, so most
+        masks cost a few subtractions; only where missing nodes touch is anything summed out.
+        """
+        member, rows = self._member, self._member.usual.rows
+        true = self._true.get(np.packbits(mask).tobytes())
+        if true is not None:
+            return self._full[true]
+        around = np.asarray(self._touching[mask].any(axis=0))
+        anew: NDArray[np.bool_] = np.ones(len(rows), dtype=bool)
+        if not (around & mask).any() and not mask[list(member.regime)].any():
+            around[list(member.regime)] = True
+            anew = np.asarray(self._missing[around].any(axis=0))
+        surprise = self._full - self._own[mask].sum(axis=0)
+        anew |= ~np.isfinite(surprise)
+        if anew.any():
+            masked = rows[anew]
+            masked[:, mask] = MISSING
+            surprise[anew] = surprise_of(member, masked)
+        return np.asarray(surprise)
+
+    @cached_property
+    def _true(self) -> dict[bytes, NDArray[np.int64]]:
+        """The kept records of each mask that enough of them truly had."""
+        found: dict[bytes, list[int]] = {}
+        for k, packed in enumerate(np.packbits(self._missing.T, axis=1)):
+            found.setdefault(packed.tobytes(), []).append(k)
+        return {key: np.array(at) for key, at in found.items() if len(at) >= ENOUGH_TRUE_ROWS}
+
+    @cached_property
+    def _touching(self) -> NDArray[np.bool_]:
+        """Which nodes share an edge in any part, (n_nodes, n_nodes)."""
+        touching = np.zeros((len(self._missing),) * 2, dtype=bool)
+        for part in self._member.parts:
+            left, right = part.tree.edges.reshape(-1, 2).T
+            touching[left, right] = touching[right, left] = True
+        return touching
+
+    @cached_property
+    def _own(self) -> Floats:
+        """Every node's own surprise in the kept records, (n_nodes, m), nought where missing."""
+        member, rows = self._member, self._member.usual.rows
+        alone = np.zeros(rows.shape[1] + 1, dtype=np.int64), np.zeros(0, dtype=np.int64)
+        own = np.zeros(rows.shape)
+        if len(member.parts) == 1:
+            own = removal_rows(member.parts[0].tree.arrays, rows, *alone)[1]
+        else:
+            for part, where in rows_by_part(member, rows):
+                own[where] = removal_rows(member.parts[part].tree.arrays, rows[where], *alone)[1]
+        return np.ascontiguousarray(np.where(rows == MISSING, 0.0, own).T)
+
 
 def _middle_and_high(surprise: Floats) -> tuple[float, float]:
+    """Return the median and the 99 % point, interpolated as numpy.quantile does."""
     if not len(surprise):
         return 0.0, 1.0
-    return float(np.median(surprise)), float(np.quantile(surprise, 0.99))
+    at = (len(surprise) - 1) * np.array([0.5, 0.99])
+    low = at.astype(np.int64)
+    high = np.minimum(low + 1, len(surprise) - 1)
+    # One partition for both: a mask that was never met costs hardly more than this.
+    order = np.partition(surprise, np.unique(np.concatenate([low, high])))
+    middle, top = order[low] + (at - low) * (order[high] - order[low])
+    return float(middle), float(top)

@@ -65,6 +65,42 @@ def test_under_gaps_the_middle_is_nought_and_the_high_point_that_of_full_records
     assert np.quantile(excess, 0.99) == pytest.approx(np.quantile(full, 0.99), rel=1e-9)
 
 
+@pytest.mark.parametrize("nodes", [(0,), (1,), (2,), (0, 4), (0, 1), (2, 3, 4), (0, 2, 4)])
+@pytest.mark.parametrize("gappy", [False, True])
+def test_kept_records_under_a_mask_are_scored_as_anything_else(
+    rows: BinRows, nodes: tuple[int, ...], gappy: bool
+) -> None:
+    some = rows[:400].copy()
+    if gappy:
+        some[np.random.default_rng(5).random(some.shape) < 0.2] = MISSING
+    member = a_member(some)
+    mask = np.isin(np.arange(5), nodes)
+    wanted = surprise_of(member, masked(some, *nodes))
+    np.testing.assert_allclose(ExcessScale(member)._under(mask), wanted, rtol=0, atol=1e-10)
+
+
+@pytest.mark.parametrize("nodes", [(0,), (1,), (2,), (4,), (2, 4), (1, 3)])
+def test_so_they_are_where_a_state_chooses_the_tree(rows: BinRows, nodes: tuple[int, ...]) -> None:
+    some = rows[:400].copy()
+    some[np.random.default_rng(6).random(some.shape) < 0.1] = MISSING
+    other = random_tree(12, SIZES, edges=[(0, 2), (1, 2), (3, 4)])
+    plain = a_member(some)
+    parts = (Part(other, (3,), np.log(0.2)), replace(plain.parts[0], log_share=np.log(0.8)))
+    member = replace(plain, parts=parts, regime=(0,))
+    mask = np.isin(np.arange(5), nodes)
+    wanted = surprise_of(member, masked(some, *nodes))
+    np.testing.assert_allclose(ExcessScale(member)._under(mask), wanted, rtol=0, atol=1e-10)
+
+
+def test_the_two_points_are_those_of_numpy() -> None:
+    rng = np.random.default_rng(7)
+    for n in (1, 2, 3, 100, 101, 2999):
+        values = rng.normal(size=n)
+        middle, high = excess_module._middle_and_high(values)
+        assert middle == pytest.approx(np.median(values), abs=1e-12)
+        assert high == pytest.approx(np.quantile(values, 0.99), abs=1e-12)
+
+
 def test_records_that_truly_had_the_gap_are_preferred(rows: BinRows) -> None:
     # The gap comes when channel 0 is in its upper bins, as when a pump stands.
     with_gap = rows.copy()

@@ -69,6 +69,22 @@ def test_the_choice_says_how_each_number_of_bins_compared() -> None:
     assert best.n_bins == choice.n_bins
 
 
+def test_many_edges_are_asked_in_part_and_each_gets_its_own_mass(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    rng = np.random.default_rng(5)
+    values = np.hstack([gaussian_tree(rng, 3000, [(0, 1), (1, 2)], 0.8), bent(3000)])
+    all_asked = choice_of(values)
+    monkeypatch.setattr("training.choices.MOST_ASKED", 2)
+    some_asked = choice_of(values)
+    assert [one.by_mass.shape for one in some_asked.tried] == [(2, 6)] * len(N_BINS)
+    assert some_asked.n_bins in N_BINS
+    # The bent pair wants its counts, whoever was asked for the bins.
+    assert len(some_asked.mass) == len(all_asked.mass) == 3
+    assert some_asked.mass.argmin() == all_asked.mass.argmin() == 2
+    assert some_asked.mass[2] <= 250 < 1000 <= some_asked.mass[:2].min()
+
+
 @given(SEEDS)
 def test_merged_counts_are_sums_over_the_union(seed: int) -> None:
     rng = np.random.default_rng(seed)

@@ -28,6 +28,9 @@ Unions = tuple[list[NodeBins], list[NDArray[np.uint8]]]
 N_BINS = (12, 16, 24, 32, 48)
 MASSES = (10.0, 50.0, 250.0, 1250.0, 6000.0, 100_000.0)
 SHARES = (0.03, 0.01, 0.003, 0.001, 0.0003)
+# Above so many edges the number of bins and the share are settled by so many of them, evenly
+# spread over the channels' order, while every edge still gets the mass that suits it.
+MOST_ASKED = 100
 # Bins with fewer records than this each are not tried. Borders come from all records, so with
 # hardly more records than bins every held-out pair lies in a row and a column that no other
 # record uses, and raking puts the one into the other: 41 records of two independent channels
@@ -40,7 +43,7 @@ class Tried:
     """Held-out gains over independence with one number of bins, nats a record.
 
     by_mass: (n_edges, n_masses) under the middle share. by_share: (n_edges, n_shares) with
-    each edge's best mass.
+    each edge's best mass. Of a tree with more than MOST_ASKED edges, those that were asked.
     """
 
     n_bins: int
@@ -102,10 +105,23 @@ def _edge_gains(
 
 
 @njit(cache=True, nogil=True)
-def _merge(counts: NDArray[np.int64], rows: Columns, columns: Columns, out: Floats) -> None:
-    for i in range(rows.shape[0]):
-        for j in range(columns.shape[0]):
-            out[rows[i], columns[j]] += counts[i, j]
+def _merge(
+    start: int,
+    stop: int,
+    counts: NDArray[np.int64],
+    into: Columns,
+    n_fine: Ints,
+    left: Ints,
+    right: Ints,
+    out: Floats,
+) -> None:
+    for e in range(start, stop):
+        rows, columns = into[left[e]], into[right[e]]
+        for f in range(counts.shape[0]):
+            for i in range(n_fine[left[e]]):
+                for j in range(n_fine[right[e]]):
+                    if counts[f, e, i, j] != 0:
+                        out[f, e, rows[i], columns[j]] += counts[f, e, i, j]
 
 
 def merge_counts(
@@ -116,9 +132,11 @@ def merge_counts(
     counts: (n_folds, n_edges, fine, fine). into: for each node the coarse bin of each fine.
     """
     merged = np.zeros((counts.shape[0], counts.shape[1], width, width))
-    for e, (a, b) in enumerate(zip(left.tolist(), right.tolist(), strict=True)):
-        for f in range(counts.shape[0]):
-            _merge(counts[f, e], into[a], into[b], merged[f, e])
+    n_fine = np.array([len(target) for target in into], dtype=np.int64)
+    padded_into = np.zeros((len(into), int(n_fine.max())), dtype=np.uint8)
+    for k, target in enumerate(into):
+        padded_into[k, : len(target)] = target
+    in_slices(len(left), _merge, counts, padded_into, n_fine, left, right, merged)
     return merged
 
 
@@ -141,28 +159,48 @@ def choose(
     n_bins_tried = enough or n_bins_tried[:1]
     if not len(left):
         return Choice(n_bins_tried[len(n_bins_tried) // 2], np.zeros(0), SHARES[2])
-    masses, shares = np.array(MASSES), np.array(SHARES)
     settled = np.full(len(left), np.nan) if given is None else given
-    tried: list[Tried] = []
-    for n_bins in n_bins_tried:
-        coarse, into = unions(n_bins)
-        sizes = np.array([node.n_bins for node in coarse])
-        marginal, scores = padded(coarse)
-        merged = merge_counts(counts, into, left, right, int(sizes.max()))
-        is_state = np.array([bool(node.bins.n_words) for node in coarse])
-        by_mass = np.zeros((len(left), len(masses)))
-        by_share = np.zeros((len(left), len(shares)))
-        arrays = (
-            merged, left, right, sizes, marginal, scores, is_state, masses, shares, settled,
-            by_mass, by_share,
-        )  # fmt: skip
-        in_slices(len(left), _edge_gains, *arrays)
-        tried.append(Tried(n_bins, by_mass / n_rows, by_share / n_rows))
+    asked = np.arange(len(left))
+    if len(left) > MOST_ASKED and len(n_bins_tried) > 1:
+        asked = np.linspace(0, len(left) - 1, MOST_ASKED).astype(np.int64)
+    some = (counts, left, right)
+    if len(asked) < len(left):
+        some = (counts[:, asked], left[asked], right[asked])
+    tried = [_tried(unions, n_bins, *some, settled[asked], n_rows) for n_bins in n_bins_tried]
     # Each pair has the mass that suits it; bins and share are the tree's.
     best = max(tried, key=lambda one: float(one.by_share.sum(axis=0).max()))
-    mass = masses[best.by_mass.argmax(axis=1)]
-    share = float(shares[int(best.by_share.sum(axis=0).argmax())])
+    share = SHARES[int(best.by_share.sum(axis=0).argmax())]
+    all_of_best = best
+    if len(asked) < len(left):
+        all_of_best = _tried(unions, best.n_bins, counts, left, right, settled, n_rows)
+    mass = np.array(MASSES)[all_of_best.by_mass.argmax(axis=1)]
     return Choice(best.n_bins, mass, share, tried)
+
+
+def _tried(
+    unions: Callable[[int], Unions],
+    n_bins: int,
+    counts: NDArray[np.int64],
+    left: Ints,
+    right: Ints,
+    settled: Floats,
+    n_rows: int,
+) -> Tried:
+    """Return what some edges gain with one number of bins; n_rows: records they come from."""
+    masses, shares = np.array(MASSES), np.array(SHARES)
+    coarse, into = unions(n_bins)
+    sizes = np.array([node.n_bins for node in coarse])
+    marginal, scores = padded(coarse)
+    merged = merge_counts(counts, into, left, right, int(sizes.max()))
+    is_state = np.array([bool(node.bins.n_words) for node in coarse])
+    by_mass = np.zeros((len(left), len(masses)))
+    by_share = np.zeros((len(left), len(shares)))
+    arrays = (
+        merged, left, right, sizes, marginal, scores, is_state, masses, shares, settled,
+        by_mass, by_share,
+    )  # fmt: skip
+    in_slices(len(left), _edge_gains, *arrays)
+    return Tried(n_bins, by_mass / n_rows, by_share / n_rows)
 
 
 def padded(nodes: list[NodeBins]) -> tuple[Floats, Floats]:

@@ -7,8 +7,10 @@ the records of a large fleet over a year overflow 32 bits.
 from __future__ import annotations
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 from numpy.typing import NDArray
+
+from training.threads import in_slices
 
 Columns = NDArray[np.uint8]
 Counts = NDArray[np.int64]
@@ -16,9 +18,11 @@ Counts = NDArray[np.int64]
 # Rows counted into one 32-bit table before it is added up: the table stays in the nearest
 # cache and the columns' pieces too.
 STRIP = 1 << 15
+# Below this many rows times pairs, half a millisecond of counting, threads cost more than
+# they save.
+FEW = 1 << 20
 
 
-@njit(cache=True, parallel=True)
 def count_pairs(
     columns: Columns, left: NDArray[np.int64], right: NDArray[np.int64], width: int, counts: Counts
 ) -> None:
@@ -28,11 +32,28 @@ def count_pairs(
         numbered width - 1 or above by the caller (see `training.fit`).
     left, right: (n_pairs,) column numbers. counts: (n_pairs, width, width) int64.
     """
+    if columns.shape[1] * len(left) < FEW:
+        _count(0, len(left), columns, left, right, width, counts)
+    else:
+        in_slices(len(left), _count, columns, left, right, width, counts)
+
+
+@njit(cache=True, nogil=True)
+def _count(
+    start: int,
+    stop: int,
+    columns: Columns,
+    left: NDArray[np.int64],
+    right: NDArray[np.int64],
+    width: int,
+    counts: Counts,
+) -> None:
     n = columns.shape[1]
-    for p in prange(left.shape[0]):
+    # Four tables take turns, so that a run of equal pairs does not wait on one cell.
+    local = np.empty((4, width * width), np.int32)
+    for p in range(start, stop):
         a, b = columns[left[p]], columns[right[p]]
-        # Four tables take turns, so that a run of equal pairs does not wait on one cell.
-        local = np.zeros((4, width * width), np.int32)
+        local[:] = 0
         for first in range(0, n, STRIP):
             last = min(first + STRIP, n)
             whole = first + (last - first) // 4 * 4

@@ -21,12 +21,14 @@ from scoring.model import Part
 from scoring.tree import Tree
 from training.binning import NodeBins, choose_bins, coarsen, merge_bins, unseen_ends, within
 from training.blocks import N_FOLDS
+from training.candidates import heaviest_forest
 from training.choices import N_BINS, Choice, Unions, choose, merge_counts
-from training.counts import count_pairs
+from training.reader import PairReader, Wanted
 from training.rows import Rows
 from training.structure import (
+    LEAST_ERRORS,
     CoarseNode,
-    edge_correlation,
+    correlations_of,
     edge_weights,
     pair_shape,
     spanning_forest,
@@ -36,10 +38,9 @@ from training.tables import log_ratio, mutual_information, shaped_joint
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-# Bins that weigh edges: finer where there are few pairs.
+# Bins that weigh edges: finer where there are few pairs. Where there are more (64 channels and
+# up), tables of 10 x 10 bins weigh the edges, and only those of pairs that could be edges.
 WEIGHING_BINS_FEW, WEIGHING_BINS_MANY, FEW_PAIRS = 24, 10, 2000
-# An edge must gain this many standard errors of its gain over the folds.
-LEAST_ERRORS = 1.0
 # A combination of regime channels with fewer records, or a smaller share of them, is rare
 # and left to the plain tree; more combinations than this are no regimes.
 LEAST_REGIME_RECORDS, LEAST_REGIME_SHARE, MAX_REGIMES = 300, 0.005, 16
@@ -151,14 +152,13 @@ def fit(
         readings = sample[there, k]
         ends = unseen_ends(readings, blocks[there])
         fine.append(choose_bins(readings, channel, ends=ends))
-    reader = _Reader(rows, folds, BinTable.of(tuple(node.bins for node in fine)))
-    plain = _fit_tree(
-        reader,
-        fine,
-        partial(_unions, fine),
-        like.plain if like else None,
-        shared=shared[()] if shared else None,
-    )
+    reader = PairReader(rows, folds, BinTable.of(tuple(node.bins for node in fine)))
+    settled = shared[()] if shared else None
+    if like is not None:
+        unions = _unions(fine, like.plain.choice.n_bins)
+        (plain,) = _like(reader, [_Plan.of(unions, like.plain, settled)])
+    else:
+        plain = _fit_tree(reader, fine, partial(_unions, fine), shared=settled)
     return Density(fine, plain)
 
 
@@ -179,20 +179,27 @@ def fit_regimes(
     codes = sample[:, list(regime)]
     n_bins = density.plain.choice.n_bins
     into = _unions(density.fine, n_bins)[1]
-    bin_table = BinTable.of(tuple(node.bins for node in density.fine))
-    regimes = {}
-    for key in list(like.regimes) if like else _common(codes):
+    reader = PairReader(rows, folds, BinTable.of(tuple(n.bins for n in density.fine)), regime)
+    keys = list(like.regimes) if like else _common(codes)
+    fine = {}
+    for key in keys:
         holds = (codes == np.array(key)).all(axis=1)
-        nodes = _within(density.fine, sample[holds], blocks[holds], rows.table.nodes, regime, key)
-        merged = [merge_bins(node, i) for node, i in zip(nodes, into, strict=True)]
-        regimes[key] = _fit_tree(
-            _Reader(rows, folds, bin_table, regime, key),
-            nodes,
-            partial(_same, (merged, into)),
-            like.regimes[key] if like else None,
-            (n_bins,),
-            shared.get(key) if shared else None,
+        fine[key] = _within(
+            density.fine, sample[holds], blocks[holds], rows.table.nodes, regime, key
         )
+    unions = {
+        key: ([merge_bins(n, i) for n, i in zip(fine[key], into, strict=True)], into)
+        for key in keys
+    }
+    given = {key: shared.get(key) if shared else None for key in keys}
+    if like:
+        plans = [_Plan.of(unions[key], like.regimes[key], given[key], key) for key in keys]
+        trees = _like(reader, plans)
+        return Density(density.fine, density.plain, regime, dict(zip(keys, trees, strict=True)))
+    regimes = {
+        key: _fit_tree(reader, fine[key], partial(_same, unions[key]), (n_bins,), given[key], key)
+        for key in keys
+    }
     return Density(density.fine, density.plain, regime, regimes)
 
 
@@ -236,28 +243,75 @@ def _within(
     return nodes
 
 
+@dataclass(frozen=True)
+class _Plan:
+    """A tree whose edges and choices are settled: only its counts are missing.
+
+    key: of the regime it is for. correlations: (n_edges,), NaN for the counts' own.
+    """
+
+    unions: Unions
+    edges: list[tuple[int, int]]
+    choice: Choice
+    correlations: Floats
+    key: tuple[int, ...]
+
+    @classmethod
+    def of(
+        cls, unions: Unions, like: Fitted, shared: SharedTree | None, key: tuple[int, ...] = ()
+    ) -> _Plan:
+        """Return the plan to take over another tree's choices and its, or the fleet's, edges."""
+        if shared is not None:
+            return cls(unions, shared.edges, like.choice, shared.correlations, key)
+        return cls(unions, like.edges, like.choice, np.full(len(like.edges), np.nan), key)
+
+    def wanted(self) -> Wanted:
+        """Return the counts it needs, on the bins it will have."""
+        nodes, into = self.unions
+        return Wanted(into, *_ends(self.edges), max(node.n_bins for node in nodes), self.key)
+
+
+def _ends(edges: list[tuple[int, int]]) -> tuple[Ints, Ints]:
+    both = np.array(edges, dtype=np.int64).reshape(-1, 2)
+    return np.ascontiguousarray(both[:, 0]), np.ascontiguousarray(both[:, 1])
+
+
+def _like(reader: PairReader, plans: list[_Plan]) -> list[Fitted]:
+    """Return trees whose edges and choices are settled; records are read once for all of them."""
+    found = []
+    counted = reader.count([plan.wanted() for plan in plans], by_fold=False)
+    for plan, (counts, n_records) in zip(plans, counted, strict=True):
+        nodes = plan.unions[0]
+        cells = counts[0].astype(np.float64)
+        tree = build_tree(nodes, cells, plan.edges, plan.choice, plan.correlations)
+        nothing = np.zeros((len(nodes), len(nodes)))
+        found.append(Fitted(nodes, tree, plan.choice, nothing, n_records, nothing))
+    return found
+
+
 def _fit_tree(
-    reader: _Reader,
+    reader: PairReader,
     fine: list[NodeBins],
     unions: Callable[[int], Unions],
-    like: Fitted | None,
     n_bins_tried: tuple[int, ...] = N_BINS,
     shared: SharedTree | None = None,
+    key: tuple[int, ...] = (),
 ) -> Fitted:
-    """Weigh pairs, choose edges, bins, masses and share, and make the tables of one tree."""
+    """Weigh pairs, choose edges, bins, masses and share, and make the tables of one tree.
+
+    key: of the regime whose records are counted.
+    """
     weights = correlations = np.zeros((len(fine), len(fine)))
     if shared is not None:
-        edges = shared.edges
-    elif like is not None:
-        edges = like.edges
+        edges, given = shared.edges, shared.correlations
     else:
-        weights, correlations, edges = _structure(reader, fine)
-    given = shared.correlations if shared is not None else np.full(len(edges), np.nan)
-    left = np.array([e[0] for e in edges], dtype=np.int64)
-    right = np.array([e[1] for e in edges], dtype=np.int64)
+        weights, correlations, edges = _structure(reader, fine, key)
+        given = np.full(len(edges), np.nan)
+    left, right = _ends(edges)
     same = [np.arange(node.n_bins, dtype=np.uint8) for node in fine]
-    counts, n_records = reader.count(same, left, right, max(node.n_bins for node in fine))
-    choice = like.choice if like else choose(counts, left, right, unions, n_bins_tried, given)
+    width = max(node.n_bins for node in fine)
+    ((counts, n_records),) = reader.count([Wanted(same, left, right, width, key)])
+    choice = choose(counts, left, right, unions, n_bins_tried, given)
     nodes, into = unions(choice.n_bins)
     width = max(node.n_bins for node in nodes)
     merged = merge_counts(counts.sum(axis=0)[None], into, left, right, width)[0]
@@ -294,22 +348,21 @@ def build_tree(
 
 
 def _structure(
-    reader: _Reader, fine: list[NodeBins]
+    reader: PairReader, fine: list[NodeBins], key: tuple[int, ...]
 ) -> tuple[Floats, Floats, list[tuple[int, int]]]:
-    """Weigh all pairs on coarse bins; return weights, correlations and the forest's edges."""
+    """Weigh pairs on coarse bins; return weights, correlations and the forest's edges."""
     left, right = np.triu_indices(len(fine), 1)
     wanted = WEIGHING_BINS_FEW if len(left) <= FEW_PAIRS else WEIGHING_BINS_MANY
     merged = [by_mass(node, wanted) for node in fine]
-    width = max(len(node.marginal) for node, _ in merged)
-    counts, _ = reader.count([into for _, into in merged], left, right, width)
-    weights, doubt = edge_weights(counts, left, right, [node for node, _ in merged])
-    correlations = np.zeros_like(weights)
-    for p, (a, b) in enumerate(zip(left.tolist(), right.tolist(), strict=True)):
-        one, other = merged[a][0], merged[b][0]
-        cells = counts[:, p, : len(one.marginal), : len(other.marginal)].sum(axis=0)
-        r = edge_correlation(cells.astype(np.float64), one, other)
-        correlations[a, b] = correlations[b, a] = r
+    nodes = [node for node, _ in merged]
+    width = max(len(node.marginal) for node in nodes)
+    ((counts, _),) = reader.count([Wanted([into for _, into in merged], left, right, width, key)])
+    correlations = correlations_of(counts, left, right, nodes)
     required, forbidden = _site_says(reader.rows.table)
+    if len(left) > FEW_PAIRS:
+        weights, edges = heaviest_forest(counts, left, right, nodes, required, forbidden)
+        return weights, correlations, edges
+    weights, doubt = edge_weights(counts, left, right, nodes)
     paying = np.where(weights > LEAST_ERRORS * doubt, weights, -1.0)
     return weights, correlations, spanning_forest(paying, required, forbidden)
 
@@ -336,41 +389,3 @@ def by_mass(node: NodeBins, n_bins: int) -> tuple[CoarseNode, NDArray[np.uint8]]
     ends = np.flatnonzero(np.diff(group))
     marginal = np.bincount(group, weights=node.marginal).astype(np.float64)
     return CoarseNode(node.scores[ends], marginal, False), group.astype(np.uint8)
-
-
-@dataclass(frozen=True)
-class _Reader:
-    """Counts pairs of bins over some rows, the given folds, and maybe one regime of them."""
-
-    rows: Rows
-    folds: tuple[int, ...]
-    bin_table: BinTable
-    regime: tuple[int, ...] = ()
-    key: tuple[int, ...] = ()
-
-    def count(
-        self, into: list[NDArray[np.uint8]], left: Ints, right: Ints, width: int
-    ) -> tuple[NDArray[np.int64], int]:
-        """Count pairs per fold, (n_folds, n_pairs, width + 1, width + 1), and the records.
-
-        into: for each node the bin that each fine bin is counted as. The number `width`
-        stands for a missing reading; its row and column are not used.
-        """
-        lookup = np.full((len(into), MISSING + 1), width, dtype=np.uint8)
-        for k, target in enumerate(into):
-            lookup[k, : len(target)] = target
-        counts = np.zeros((len(self.folds), len(left), width + 1, width + 1), dtype=np.int64)
-        n_records = 0
-        for chunk in self.rows.chunks():
-            columns = self.bin_table.columns(chunk.values)
-            keep = chunk.kept.copy()
-            for node, bin_number in zip(self.regime, self.key, strict=True):
-                keep &= columns[node] == bin_number
-            coarse = np.stack([lookup[k][column] for k, column in enumerate(columns)])
-            for f, fold in enumerate(self.folds):
-                use = keep & (chunk.fold == fold)
-                if use.any():
-                    part = np.ascontiguousarray(coarse[:, use])
-                    count_pairs(part, left, right, width + 1, counts[f])
-                    n_records += int(use.sum())
-        return counts, n_records

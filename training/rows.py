@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, field
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -11,7 +12,7 @@ from numpy.typing import NDArray
 from scoring.channels import ChannelTable
 from scoring.derived import Carry, derive
 from training.blocks import Blocks
-from training.history.spool import Spool
+from training.history.spool import N_CHUNK_ROWS, Spool
 
 Ints = NDArray[np.int64]
 Floats = NDArray[np.float64]
@@ -20,6 +21,9 @@ Floats = NDArray[np.float64]
 DEFAULT_STEP_S = 60.0
 # A sample of this many records settles where bins lie; tables count every record.
 MAX_SAMPLE = 40_000
+# Values that are in hand at once, 64 MB: from about 120 channels on chunks are shorter, so that
+# memory grows with the sample and the tables alone.
+MAX_CHUNK_VALUES = 8_000_000
 # No source has this many blocks of time.
 MAX_BLOCKS = 1_000_000
 
@@ -69,10 +73,11 @@ class Rows:
 
     def chunks(self) -> Iterator[Chunk]:
         """Yield all records source by source."""
+        n_rows = max(1, min(N_CHUNK_ROWS, MAX_CHUNK_VALUES // len(self.table.nodes)))
         for source in self.sources:
             blocks = self.blocks(source)
             carry: Carry | None = None
-            for times_ns, values in self.spool.chunks(source):
+            for times_ns, values in self.spool.chunks(source, n_rows):
                 nodes, carry = derive(self.table, times_ns, values, carry)
                 kept = np.ones(len(times_ns), dtype=bool)
                 for start, end in self.left_out.get(source, np.zeros((0, 2), np.int64)):
@@ -87,17 +92,25 @@ class Rows:
         The second result is the block of time of each, (m,), no two sources' alike.
         Chosen by a hash of their time, so that neither order nor chunking matters.
         """
+        values, blocks, fold = self._sampled
+        use = np.isin(fold, folds)
+        return (values, blocks) if use.all() else (values[use], blocks[use])
+
+    @cached_property
+    def _sampled(self) -> tuple[Floats, Ints, Ints]:
+        """The sample of all folds: values, blocks and folds. Read once, asked for once a fit."""
         share = MAX_SAMPLE / max(self.n_records, 1)
-        found, blocks = [], []
+        found, blocks, folds = [], [], []
         number = {source: k for k, source in enumerate(self.sources)}
         for chunk in self.chunks():
-            use = chunk.kept & np.isin(chunk.fold, folds)
+            use = chunk.kept
             if share < 1:
-                use &= hashed(chunk.times_ns) < share
+                use = use & (hashed(chunk.times_ns) < share)
             found.append(chunk.values[use])
             block = self.blocks(chunk.source).number(chunk.times_ns[use])
             blocks.append(number[chunk.source] * MAX_BLOCKS + block)
-        return np.concatenate(found), np.concatenate(blocks)
+            folds.append(chunk.fold[use])
+        return np.concatenate(found), np.concatenate(blocks), np.concatenate(folds)
 
 
 def hashed(times_ns: Ints) -> Floats:

@@ -26,6 +26,8 @@ Ints = NDArray[np.int64]
 # is weighed with the mass that suits it, since a short history says little by counts.
 WEIGHING_MASSES = np.array([30.0, 300.0, 3000.0, 100_000.0])
 WEIGHING_SHARE = 0.01
+# An edge must gain this many standard errors of its gain over the folds.
+LEAST_ERRORS = 1.0
 # Sweeps of raking while tables are compared: what is left to rake then is far below the
 # differences between choices.
 ROUGH_SWEEPS = 6
@@ -70,6 +72,8 @@ def spanning_forest(
     left_nodes, right_nodes = np.triu_indices(n, 1)
     order = np.lexsort((right_nodes, left_nodes, -weights[left_nodes, right_nodes]))
     for k in order.tolist():
+        if len(chosen) == n - 1:
+            break
         left, right = int(left_nodes[k]), int(right_nodes[k])
         if not weights[left, right] > least:
             break
@@ -264,15 +268,66 @@ def _weigh(
         gains[p] = found[:, best, 0]
 
 
-def edge_correlation(counts: Floats, left: CoarseNode, right: CoarseNode) -> float:
-    """Return the correlation of two channels' normal scores, NaN where one is a state.
+@njit(cache=True, nogil=True)
+def _correlate(
+    start: int,
+    stop: int,
+    counts: NDArray[np.int64],
+    left: Ints,
+    right: Ints,
+    n_bins: Ints,
+    means: Floats,
+    is_state: NDArray[np.bool_],
+    found: Floats,
+) -> None:
+    for p in range(start, stop):
+        a, b = left[p], right[p]
+        if not (is_state[a] or is_state[b]):
+            cells = np.zeros((n_bins[a], n_bins[b]))
+            for f in range(counts.shape[0]):
+                for i in range(n_bins[a]):
+                    for j in range(n_bins[b]):
+                        cells[i, j] += counts[f, p, i, j]
+            found[p] = score_correlation(cells, means[a], means[b])
 
-    counts: (n_left, n_right) records per cell.
+
+@dataclass(frozen=True)
+class Laid:
+    """Coarse nodes as arrays: n_bins, is_state (n_nodes,), the rest (n_nodes, width)."""
+
+    n_bins: Ints
+    is_state: NDArray[np.bool_]
+    marginal: Floats
+    scores: Floats
+    means: Floats
+
+    @classmethod
+    def of(cls, nodes: list[CoarseNode]) -> Laid:
+        """Lay out nodes; means: of the normal scores inside each bin, nought for a state."""
+        n_bins = np.array([len(node.marginal) for node in nodes])
+        is_state = np.array([node.is_state for node in nodes])
+        marginal, scores, means = (np.zeros((len(nodes), n_bins.max())) for _ in range(3))
+        for k, node in enumerate(nodes):
+            marginal[k, : n_bins[k]] = node.marginal
+            scores[k, : len(node.scores)] = node.scores
+            if not node.is_state:
+                means[k, : n_bins[k]] = bin_scores(node.scores, node.marginal)
+        return cls(n_bins, is_state, marginal, scores, means)
+
+
+def correlations_of(
+    counts: NDArray[np.int64], left: Ints, right: Ints, nodes: list[CoarseNode]
+) -> Floats:
+    """Return the correlation of every pair's normal scores, (n_nodes, n_nodes).
+
+    counts: (n_folds, n_pairs, width, width). NaN where one of two is a state.
     """
-    if left.is_state or right.is_state:
-        return float("nan")
-    left_means = bin_scores(left.scores, left.marginal)
-    return float(score_correlation(counts, left_means, bin_scores(right.scores, right.marginal)))
+    laid, found = Laid.of(nodes), np.full(len(left), np.nan)
+    arrays = (counts, left, right, laid.n_bins, laid.means, laid.is_state, found)
+    in_slices(len(left), _correlate, *arrays)
+    correlations = np.zeros((len(nodes), len(nodes)))
+    correlations[left, right] = correlations[right, left] = found
+    return correlations
 
 
 def edge_weights(
@@ -283,18 +338,23 @@ def edge_weights(
     counts: (n_folds, n_pairs, width, width). The doubt is the standard error over folds
     (0 for state pairs); a pair never read together weighs nothing.
     """
-    n_nodes = len(nodes)
-    n_bins = np.array([len(node.marginal) for node in nodes])
-    marginal = np.zeros((n_nodes, n_bins.max()))
-    scores = np.zeros((n_nodes, n_bins.max()))
-    for k, node in enumerate(nodes):
-        marginal[k, : n_bins[k]] = node.marginal
-        scores[k, : len(node.scores)] = node.scores
-    is_state = np.array([node.is_state for node in nodes])
+    mean, error = pair_weights(counts, left, right, Laid.of(nodes))
+    weights, doubt = np.zeros((len(nodes), len(nodes))), np.zeros((len(nodes), len(nodes)))
+    weights[left, right] = weights[right, left] = mean
+    doubt[left, right] = doubt[right, left] = error
+    return weights, doubt
+
+
+def pair_weights(
+    counts: NDArray[np.int64], left: Ints, right: Ints, laid: Laid
+) -> tuple[Floats, Floats]:
+    """Return pairs' weights and the doubt of each, (n_pairs,) nats; see edge_weights."""
+    n_bins, is_state = laid.n_bins, laid.is_state
     gains = np.zeros((len(left), len(counts)))
     shares = np.array([WEIGHING_SHARE])
     arrays = (
-        counts, left, right, n_bins, marginal, scores, is_state, WEIGHING_MASSES, shares, gains
+        counts, left, right, n_bins, laid.marginal, laid.scores, is_state, WEIGHING_MASSES,
+        shares, gains,
     )  # fmt: skip
     in_slices(len(left), _weigh, *arrays)
     n_rows = counts[:, :, :-1, :-1].sum(axis=(0, 2, 3))
@@ -303,7 +363,4 @@ def edge_weights(
     for p in np.flatnonzero(is_state[left] & is_state[right]):
         a, b = n_bins[left[p]], n_bins[right[p]]
         mean[p], error[p] = suzuki_weight(counts[:, p, :a, :b].sum(axis=0)), 0.0
-    weights, doubt = np.zeros((n_nodes, n_nodes)), np.zeros((n_nodes, n_nodes))
-    weights[left, right] = weights[right, left] = mean
-    doubt[left, right] = doubt[right, left] = error
-    return weights, doubt
+    return mean, error

@@ -1,0 +1,86 @@
+"""Counts of pairs of bins over the records of some rows, all that is wanted in one reading."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numba import njit
+from numpy.typing import NDArray
+
+from scoring.bins import MISSING, BinTable
+from training.counts import count_pairs
+from training.rows import Rows
+
+Ints = NDArray[np.int64]
+
+
+@dataclass(frozen=True)
+class Wanted:
+    """Counts of pairs: of which records, and on which bins.
+
+    into: for each node the bin that each fine bin is counted as. left, right: (n_pairs,)
+    nodes. width: the number that stands for a missing reading; its row and column in the
+    counts are not used. key: bins of the regime's nodes that records must have, () for all.
+    """
+
+    into: list[NDArray[np.uint8]]
+    left: Ints
+    right: Ints
+    width: int
+    key: tuple[int, ...] = ()
+
+    def lookup(self) -> NDArray[np.uint8]:
+        """Return (n_nodes, MISSING + 1) what each bin number is counted as."""
+        lookup = np.full((len(self.into), MISSING + 1), self.width, dtype=np.uint8)
+        for k, target in enumerate(self.into):
+            lookup[k, : len(target)] = target
+        return lookup
+
+
+@dataclass(frozen=True)
+class PairReader:
+    """Counts pairs of bins over some rows and the given folds; regime: nodes that keys are of."""
+
+    rows: Rows
+    folds: tuple[int, ...]
+    bin_table: BinTable
+    regime: tuple[int, ...] = ()
+
+    def count(
+        self, wanted: list[Wanted], by_fold: bool = True
+    ) -> list[tuple[NDArray[np.int64], int]]:
+        """Read the records once; return for each wanted its counts and number of records.
+
+        counts: (n_folds, n_pairs, width + 1, width + 1), one for all folds together unless
+        by_fold.
+        """
+        groups = [(fold,) for fold in self.folds] if by_fold else [self.folds]
+        lookups = [one.lookup() for one in wanted]
+        shapes = [(len(groups), len(o.left), o.width + 1, o.width + 1) for o in wanted]
+        counts = [np.zeros(shape, dtype=np.int64) for shape in shapes]
+        n_records = [0] * len(wanted)
+        for chunk in self.rows.chunks():
+            columns = self.bin_table.columns(chunk.values)
+            for k, one in enumerate(wanted):
+                keep = chunk.kept.copy()
+                for node, bin_number in zip(self.regime if one.key else (), one.key, strict=True):
+                    keep &= columns[node] == bin_number
+                for g, group in enumerate(groups):
+                    use = np.flatnonzero(keep & np.isin(chunk.fold, group))
+                    if len(use):
+                        part = _looked_up(lookups[k], columns, use)
+                        count_pairs(part, one.left, one.right, one.width + 1, counts[k][g])
+                        n_records[k] += len(use)
+        return list(zip(counts, n_records, strict=True))
+
+
+@njit(cache=True, nogil=True)
+def _looked_up(
+    lookup: NDArray[np.uint8], columns: NDArray[np.uint8], use: Ints
+) -> NDArray[np.uint8]:
+    out = np.empty((columns.shape[0], use.shape[0]), dtype=np.uint8)
+    for k in range(columns.shape[0]):
+        for r in range(use.shape[0]):
+            out[k, r] = lookup[k, columns[k, use[r]]]
+    return out
