@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from dataclasses import replace
 from pathlib import Path
 
@@ -11,6 +12,8 @@ from click.testing import CliRunner
 from scoring.artefact import write_model
 from scoring.errors import BadArtefact, OddbranchError
 from tests.models import a_model
+from training.changes import BadChange
+from training.kept import BusyModels, KeptModels
 from training.models import models_command
 
 DAY_NS = 86_400 * 10**9
@@ -35,6 +38,13 @@ def a_directory(folder: Path, level: float) -> tuple[Path, str]:
     return path, write_model(model, path).name
 
 
+def judged(path: Path, numbers: dict[str, float]) -> None:
+    """Put a judge's numbers into a kept model, beside the content its name is the hash of."""
+    data = json.loads((path / "model.json").read_text(encoding="utf-8"))
+    data["about"]["model"]["judge"] = numbers
+    (path / "model.json").write_text(json.dumps(data), encoding="utf-8")
+
+
 def test_an_empty_folder_says_how_to_begin(tmp_path: Path) -> None:
     assert "no models in" in models(tmp_path, "list")
     assert "oddbranch models add MODEL" in models(tmp_path, "list")
@@ -44,11 +54,20 @@ def test_models_are_added_listed_used_and_gone_back_from(tmp_path: Path) -> None
     (one, first), (two, second) = a_directory(tmp_path, 11.0), a_directory(tmp_path, 12.0)
     assert f"{first} is kept as" in models(tmp_path, "add", one)
     models(tmp_path, "add", two)
+    judged(
+        tmp_path / "models" / "current", {"held-out density": -0.0123, "alerts": 3, "run-away": 0.8}
+    )
     lines = models(tmp_path, "list").splitlines()
-    assert lines[0].split() == ["model", "published", "records", "sources", "days"]
+    assert lines[0].split() == [
+        "model", "published", "history", "days", "records", "sources",
+        "density", "alerts", "furthest",
+    ]  # fmt: skip
     assert lines[2].split()[0] == first
     assert lines[3].split()[:3] == ["in", "use", second]
-    assert lines[3].split()[-3:] == ["5000", "2", "7.0"]
+    assert lines[3].split()[5:] == [
+        "1970-01-01", "to", "1970-01-08", "7.0", "5000", "2", "-0.0123", "3", "0.8",
+    ]  # fmt: skip
+    assert lines[2].split()[-3:] == ["-", "-", "-"]
     assert f"{first} is in use." in models(tmp_path, "back")
     assert models(tmp_path, "list").splitlines()[2].startswith("in use")
     assert "the next nightly run publishes anew" in models(tmp_path, "use", second[:6])
@@ -58,3 +77,21 @@ def test_a_directory_that_is_no_model_is_not_kept(tmp_path: Path) -> None:
     with pytest.raises(BadArtefact, match="is no model directory"):
         models(tmp_path, "add", tmp_path)
     assert not (tmp_path / "models").exists()
+
+
+def test_a_change_of_plant_is_declared_listed_and_taken_back(tmp_path: Path) -> None:
+    assert models(tmp_path, "since") == "no change of plant was declared\n"
+    at = "2025-12-01T07:00:00+01:00"
+    says = models(tmp_path, "since", at, "--source", "mill-lane", "--reason", "new impeller")
+    assert says.startswith("mill-lane: history counts from 2025-12-01T06:00:00Z on: new impeller")
+    assert models(tmp_path, "since") == says
+    with pytest.raises(BadChange, match="no change of all sources"):
+        models(tmp_path, "since", at, "--take-back")
+    back = models(tmp_path, "since", at, "--source", "mill-lane", "--take-back")
+    assert back == f"taken back: {says}"
+    assert "no change" in models(tmp_path, "since")
+
+
+def test_a_change_is_not_declared_while_a_night_is_at_work(tmp_path: Path) -> None:
+    with KeptModels(tmp_path / "models").lock(), pytest.raises(BusyModels, match="another job"):
+        models(tmp_path, "since", "2025-12-01T07:00:00Z", "--reason", "new impeller")

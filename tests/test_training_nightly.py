@@ -1,9 +1,15 @@
-"""`oddbranch nightly`: from a service's own records to a model in use."""
+"""`oddbranch nightly`: from a service's own records to a model in use, or a refusal."""
 
 from __future__ import annotations
 
+import json
 import math
+import os
 import random
+import re
+import signal
+import subprocess
+import sys
 from collections.abc import Iterator
 from datetime import UTC, datetime
 from pathlib import Path
@@ -11,18 +17,19 @@ from typing import Any
 
 import numpy as np
 import pytest
-from click.testing import CliRunner
+from click.testing import CliRunner, Result
 
 from scoring.artefact import read_model
 from scoring.errors import OddbranchError
 from scoring.scorer import Scorer
+from tests.conftest import ROOT
 from tests.models import a_model
-from tests.service_http import Api, record, running
+from tests.service_http import START_S, Api, record, running
+from tests.stored_alerts import put_alert
 from training import nightly
-from training.kept import BusyModels, KeptModels
-from training.nightly import TooLittle, nightly_command
-from training.settings_file import BadSettings
-from training.stored import BadStore
+from training.kept import KeptModels
+from training.night_files import NightFiles
+from training.nightly import Failed, Refused, nightly_command
 
 CHANNELS = """\
 format = 1
@@ -34,8 +41,23 @@ name = "power"
 [[channel]]
 name = "speed"
 """
-N_RECORDS = 400
+# The last 72 of the minutes are the judge's.
+SETTINGS = """\
+[history]
+least_records = 100
+least_hours = 3
+join_alerts_h = 0.0
+[judge]
+days = 0.05
+least_hours = 1
+block_h = 0.25
+drill_trials = 0
+[report]
+metrics = "night.prom"
+"""
+N_RECORDS, N_HELD = 500, 72
 LAST_WEEK = datetime(2026, 11, 24, 2, 15, tzinfo=UTC)
+SOURCES = ("mill-lane", "quarry-rise")
 
 
 def some_records(source: str, seed: int) -> list[dict[str, Any]]:
@@ -51,41 +73,68 @@ def some_records(source: str, seed: int) -> list[dict[str, Any]]:
 
 
 @pytest.fixture
-def api(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[Api]:
-    """Run a service with records of two sources; the site's folder is the working one."""
+def site(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    """Make the site's folder the working one, with its settings."""
     monkeypatch.chdir(tmp_path)
     Path("channels.toml").write_text(CHANNELS, encoding="utf-8")
-    Path("nightly.toml").write_text("[history]\nleast_records = 100\n", encoding="utf-8")
-    with running(tmp_path) as found:
-        for number, source in enumerate(("mill-lane", "quarry-rise")):
+    Path("nightly.toml").write_text(SETTINGS, encoding="utf-8")
+    return tmp_path
+
+
+@pytest.fixture
+def api(site: Path) -> Iterator[Api]:
+    """Run a service with records of two sources."""
+    with running(site) as found:
+        for number, source in enumerate(SOURCES):
             assert found.post(some_records(source, number)).status_code == 200
         yield found
 
 
-def run(*words: str) -> str:
+def invoke() -> Result:
+    return CliRunner().invoke(nightly_command, ["--config", "nightly.toml"], standalone_mode=False)
+
+
+def run() -> str:
     """Run the command and return what it says; what it refuses is raised."""
-    line = list(words) or ["--config", "nightly.toml"]
-    result = CliRunner().invoke(nightly_command, line, standalone_mode=False)
+    result = invoke()
     if isinstance(result.exception, OddbranchError):
         raise result.exception
     assert result.exception is None, result.exception
     return result.output
 
 
+def last_night() -> dict[str, Any]:
+    """Return the newest report's data."""
+    found: dict[str, Any] = json.loads(sorted(Path("nightly").glob("*.json"))[-1].read_text())
+    return found
+
+
+def metrics() -> dict[str, float]:
+    """Return the numbers for Prometheus by name and labels."""
+    lines = [x for x in Path("night.prom").read_text().splitlines() if not x.startswith("#")]
+    return {line.rpartition(" ")[0]: float(line.rpartition(" ")[2]) for line in lines}
+
+
+def changed(before: str, after: str) -> None:
+    """Change the site's settings."""
+    assert before in SETTINGS
+    Path("nightly.toml").write_text(SETTINGS.replace(before, after), encoding="utf-8")
+
+
 @pytest.mark.usefixtures("api")
-def test_a_night_publishes_a_model_of_the_stored_records_and_says_what_it_did(
-    tmp_path: Path,
-) -> None:
+def test_a_night_publishes_a_model_of_the_stored_records_and_says_what_it_did(site: Path) -> None:
     says = run()
-    current = KeptModels(tmp_path / "models").current()
+    current = KeptModels(site / "models").current()
     assert current is not None
-    model = read_model(tmp_path / "models" / "current")
-    assert set(model.members) == {"mill-lane", "quarry-rise"}
-    assert model.about["n_records"] == 2 * N_RECORDS
+    model = read_model(site / "models" / "current")
+    assert set(model.members) == set(SOURCES)
+    assert model.about["n_records"] == 2 * (N_RECORDS - N_HELD)
     assert model.about["created_timestamp_seconds"] > 1.7e9
-    assert f"{2 * N_RECORDS} rows read" in says
-    assert f"model {current.name} is in use" in says
-    assert "the first one" in says
+    assert model.about["judge"]["records"] == 2 * (N_RECORDS - N_HELD)
+    assert f"reading: {2 * (N_RECORDS - N_HELD)} records of 2 sources to learn from" in says
+    for stage in ("reading", "learning", "judging", "reporting", "publishing"):
+        assert len(re.findall(rf"^{stage}: .* s$|^{stage}: [\d.]+ s$", says, re.M)) == 1, says
+    assert f"Model {current.name} is in use, the first one." in says
     # What it learned: a flow that fits its speed is usual, one that does not is not.
     scorer = Scorer(model)
     values = np.array([[1300 / 6, 30.0, 1300.0], [1400 / 6, 30.0, 1300.0]])
@@ -93,67 +142,176 @@ def test_a_night_publishes_a_model_of_the_stored_records_and_says_what_it_did(
         scores, _ = scorer.score(source, np.array([0, 60 * 10**9]), values, None)
         assert scores.excess[1] > scores.excess[0] + 3.0
         assert scorer.instruments[scores.suspect[1]].name == "flow"
+    night = last_night()
+    assert (night["verdict"], night["model"], night["before"]) == ("published", current.name, "")
+    page = sorted(Path("nightly").glob("*.html"))[-1].read_text()
+    assert "published</h1>" in page
+    assert "advice" in page
+    assert metrics()['oddbranch_nightly_verdict{verdict="published"}'] == 1
+    assert metrics()["oddbranch_nightly_published_timestamp_seconds"] > 1.7e9
+    assert math.isfinite(metrics()["oddbranch_nightly_held_out_nats_per_reading"])
 
 
-def test_excluded_periods_are_kept_out_and_old_models_go(tmp_path: Path, api: Api) -> None:
-    del api
+@pytest.mark.usefixtures("api")
+def test_the_next_night_is_held_against_the_first_and_both_are_kept(site: Path) -> None:
+    run()
+    first = KeptModels(site / "models").current()
+    assert first is not None
+    says = run()
+    second = KeptModels(site / "models").current()
+    assert second is not None
+    assert second.path != first.path
+    # The same records and settings are the same model.
+    assert second.name == first.name
+    assert f"instead of {first.name}. All 13 questions were passed." in says
+    answers = {one["name"]: one for one in last_night()["answers"]}
+    assert answers["held-out density"]["number"] == 0.0
+    assert answers["tree"]["number"] == 0.0
+    assert answers["left out"]["number"] == 0.0
+    assert answers["spans"]["number"] == 1.0
+    assert f"Under the oldest kept model, {first.name}" in answers["run-away"]["sentence"]
+
+
+@pytest.mark.usefixtures("api")
+def test_excluded_periods_are_kept_out_and_old_models_go(site: Path) -> None:
     Path("exclude.csv").write_text(
-        "source,start,end,reason\nmill-lane,2025-12-01T03:00:00Z,2025-12-01T04:00:00Z,cleaning\n",
+        "source,start,end,reason\nmill-lane,2025-12-01T00:00:00Z,2025-12-01T01:00:00Z,cleaning\n",
         encoding="utf-8",
     )
-    Path("nightly.toml").write_text(
-        '[history]\nleast_records = 100\n[learn]\nexclude = "exclude.csv"\n[models]\nkeep = 2\n',
-        encoding="utf-8",
-    )
-    models = KeptModels(tmp_path / "models")
+    more = '[learn]\nexclude = "exclude.csv"\n[models]\nkeep = 2\n[report]'
+    changed("[report]", more)
+    models = KeptModels(site / "models")
     first, second = (models.publish(a_model(), LAST_WEEK) for _ in range(2))
     says = run()
-    assert "excluded: 60 cleaning" in says
+    assert "60 left out of everything" in says
+    assert last_night()["history"]["left_out"] == {"cleaning": 60}
     assert f"instead of {second.name}" in says
     assert first not in models.kept()
     assert [models.kept()[0], models.current()] == [second, models.kept()[1]]
 
 
 @pytest.mark.usefixtures("api")
-def test_too_few_records_publish_nothing(tmp_path: Path) -> None:
-    Path("nightly.toml").write_text("[history]\nleast_records = 801\n", encoding="utf-8")
-    with pytest.raises(TooLittle, match="800 records of the last 28 days are fewer than.*801"):
+def test_too_few_records_are_refused_with_a_report_and_publish_nothing(site: Path) -> None:
+    changed("least_records = 100", "least_records = 857")
+    with pytest.raises(Refused, match="records: 856 records are too few; at least 857") as refused:
         run()
-    assert KeptModels(tmp_path / "models").kept() == ()
+    assert refused.value.exit_code == 1
+    assert KeptModels(site / "models").kept() == ()
+    assert last_night()["verdict"] == "refused"
+    assert metrics()['oddbranch_nightly_verdict{verdict="refused"}'] == 1
+    assert metrics()['oddbranch_nightly_passed{question="records"}'] == 0
+    page = sorted(Path("nightly").glob("*-refused.html"))[-1].read_text()
+    assert "No model is in use" in page
 
 
 @pytest.mark.usefixtures("api")
-def test_a_second_job_at_once_leaves_the_first_alone(tmp_path: Path) -> None:
-    with KeptModels(tmp_path / "models").lock(), pytest.raises(BusyModels, match="another job"):
+def test_alerts_unlabelled_leave_the_tables_and_real_ones_everything(site: Path) -> None:
+    start_ns = (START_S - 400 * 60) * 10**9
+    put_alert(site / "data", "mill-lane", start_ns, start_ns + 99 * 60 * 10**9)
+    put_alert(site / "data", "quarry-rise", start_ns, start_ns + 9 * 60 * 10**9, "real")
+    put_alert(site / "data", "quarry-rise", start_ns + 3600 * 10**9, None, "nuisance")
+    says = run()
+    assert "10 left out of everything, 100 in unlabelled alert" in says
+    night = last_night()
+    assert night["history"]["left_out"] == {"alert labelled real": 10}
+    assert [one["source"] for one in night["history"]["left_out_of_tables"]] == ["mill-lane"]
+    assert 0.08 < night["left_out_share"] < 0.16
+    assert night["alerts_seen_without_left_out"] <= night["alerts_seen"]
+    assert [(one["nuisance"], one["real"]) for one in night["feedback"]] == [(1, 1)]
+    model = read_model(site / "models" / "current")
+    assert model.members["mill-lane"].about["n_records"] == N_RECORDS - N_HELD - 100
+    assert model.members["quarry-rise"].about["n_records"] == N_RECORDS - N_HELD - 10
+
+
+@pytest.mark.usefixtures("api")
+def test_a_second_job_at_once_leaves_the_first_alone(site: Path) -> None:
+    with (
+        KeptModels(site / "models").lock(),
+        pytest.raises(Failed, match="another job .process") as failed,
+    ):
         run()
+    assert failed.value.exit_code == 3
+    assert not Path("night.prom").exists()
 
 
 @pytest.mark.usefixtures("api")
 def test_a_failure_while_learning_leaves_the_model_in_use(
-    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+    site: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
-    models = KeptModels(tmp_path / "models")
+    models = KeptModels(site / "models")
     before = (models.publish(a_model(), LAST_WEEK),)
 
     def fail(*_: object) -> None:
         raise MemoryError
 
     monkeypatch.setattr(nightly, "learn_model", fail)
-    result = CliRunner().invoke(nightly_command, ["--config", "nightly.toml"])
-    assert result.exit_code == 1
+    with pytest.raises(Failed, match="ended early: MemoryError.*the model in use goes on"):
+        run()
     assert models.kept() == before
     assert models.current() == before[-1]
+    assert metrics()['oddbranch_nightly_verdict{verdict="failed"}'] == 1
+    assert metrics()["oddbranch_nightly_published_timestamp_seconds"] == LAST_WEEK.timestamp()
 
 
-def test_a_missing_store_table_or_setting_is_named(
+class Died(BaseException):
+    """Ends a job where no handler of errors reaches."""
+
+
+@pytest.mark.parametrize(
+    ("owner", "name"), [(NightFiles, "prepare"), (KeptModels, "publish_prepared")]
+)
+@pytest.mark.usefixtures("api")
+def test_a_job_that_dies_before_publishing_leaves_everything_as_it_was(
+    site: Path, monkeypatch: pytest.MonkeyPatch, owner: type, name: str
+) -> None:
+    models = KeptModels(site / "models")
+    before = models.publish(a_model(), LAST_WEEK)
+
+    def die(*_: object) -> None:
+        raise Died
+
+    monkeypatch.setattr(owner, name, die)
+    with pytest.raises(Died):
+        invoke()
+    assert models.kept() == (before,)
+    assert models.current() == before
+    assert not list(Path("nightly").glob("[0-9]*"))
+
+
+@pytest.mark.usefixtures("api")
+def test_a_job_killed_between_rename_and_switch_leaves_the_old_model_in_use(site: Path) -> None:
+    models = KeptModels(site / "models")
+    before = models.publish(a_model(), LAST_WEEK)
+    program = (
+        "import os, signal\n"
+        "from training import nightly\n"
+        "nightly.KeptModels.switch = lambda *a: os.kill(os.getpid(), signal.SIGKILL)\n"
+        "nightly.nightly_command(['--config', 'nightly.toml'])\n"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", program], env={**os.environ, "PYTHONPATH": str(ROOT)},
+        capture_output=True, check=False,
+    )  # fmt: skip
+    assert done.returncode == -signal.SIGKILL, done.stderr.decode()
+    assert models.current() == before
+    assert read_model(site / "models" / "current").name == before.name
+    assert not list(Path("nightly").glob("[0-9]*"))
+    # The next night goes on from there and clears up.
+    run()
+    assert models.current() != before
+    assert not [p for p in (site / "models").glob(".*") if p.is_dir()]
+    assert not list(Path("nightly").glob(".night-*"))
+
+
+def test_a_missing_store_table_or_setting_is_a_failure_that_names_it(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     monkeypatch.chdir(tmp_path)
-    with pytest.raises(BadSettings, match=r"nightly.toml: no such file"):
+    with pytest.raises(Failed, match=r"nightly.toml: no such file"):
         run()
     Path("nightly.toml").write_text("", encoding="utf-8")
-    with pytest.raises(OddbranchError, match=r"channels.toml: no such file"):
+    with pytest.raises(Failed, match=r"channels.toml: no such file"):
         run()
     Path("channels.toml").write_text(CHANNELS, encoding="utf-8")
-    with pytest.raises(BadStore, match="no such file"):
+    with pytest.raises(Failed, match="no such file; is this the service's data folder"):
         run()

@@ -110,10 +110,19 @@ class KeptModels:
 
     def publish(self, model: Model, now: datetime) -> Kept:
         """Write a model beside the others and use it; hold the lock meanwhile."""
-        incoming = self.folder / _INCOMING
-        name = write_model(model, incoming).name
+        return self.publish_prepared(self.prepare(model).name, now)
+
+    def prepare(self, model: Model) -> Model:
+        """Write a model where nobody looks, and return it with its name; hold the lock.
+
+        It comes into use by `publish_prepared`, or is gone when the next job begins.
+        """
+        return write_model(model, self.folder / _INCOMING)
+
+    def publish_prepared(self, name: str, now: datetime) -> Kept:
+        """Use the model that was prepared, by its name; hold the lock meanwhile."""
         path = self._path(name, now)
-        incoming.rename(path)
+        (self.folder / _INCOMING).rename(path)
         _to_disk(self.folder)
         kept = Kept.of(path)
         assert kept is not None, "a name that publish wrote is one that Kept reads"

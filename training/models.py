@@ -9,9 +9,19 @@ from typing import Any
 import click
 
 from scoring.artefact import read_model
+from training.changes import (
+    change_line,
+    declare,
+    load_changes,
+    parse_time,
+    take_back,
+)
 from training.channel_toml import text_table
 from training.kept import Kept, KeptModels
+from training.report.readings import day_text
 
+# The judge's numbers that are listed, by question, with their headings.
+JUDGED = {"held-out density": "density", "alerts": "alerts", "run-away": "furthest"}
 _STAYS = "A running service takes it within seconds; the next nightly run publishes anew."
 
 
@@ -38,19 +48,35 @@ def list_command(models: KeptModels) -> None:
         click.echo(f"no models in {models.folder}; `oddbranch models add MODEL` keeps one")
         return
     rows = [_row(one, one == current) for one in kept]
-    click.echo(text_table(["", "model", "published", "records", "sources", "days"], rows, left=3))
+    heading = ["", "model", "published", "history", "days", "records", "sources"]
+    click.echo(text_table([*heading, *JUDGED.values()], rows, left=4))
+    click.echo(
+        "judged: the newest days' surprise against the model then in use, nats a reading; alerts "
+        "in them; furthest channel from its neighbours, conditional spreads; - not judged."
+    )
 
 
 def _row(kept: Kept, in_use: bool) -> list[str]:
     about = kept.about()
     published = kept.published.strftime("%Y-%m-%d %H:%M:%SZ")
-    figures = [str(about.get("n_records", "?")), str(about.get("n_sources", "?")), _days(about)]
-    return ["in use" if in_use else "", kept.name, published, *figures]
+    figures = [str(about.get("n_records", "?")), str(about.get("n_sources", "?"))]
+    judged = about.get("judge")
+    numbers = judged if isinstance(judged, dict) else {}
+    return [
+        "in use" if in_use else "", kept.name, published, *_span(about), *figures,
+        *(_number(numbers.get(name)) for name in JUDGED),
+    ]  # fmt: skip
 
 
-def _days(about: dict[str, Any]) -> str:
+def _span(about: dict[str, Any]) -> list[str]:
     first, last = about.get("first_ns"), about.get("last_ns")
-    return f"{(last - first) / 86_400e9:.1f}" if first is not None and last is not None else "?"
+    if first is None or last is None:
+        return ["?", "?"]
+    return [f"{day_text(first)} to {day_text(last)}", f"{(last - first) / 86_400e9:.1f}"]
+
+
+def _number(value: object) -> str:
+    return f"{value:.3g}" if isinstance(value, int | float) else "-"
 
 
 @models_command.command("add")
@@ -81,3 +107,33 @@ def back_command(models: KeptModels) -> None:
     with models.lock():
         kept = models.back()
     click.echo(f"{kept.name} is in use. {_STAYS}")
+
+
+@models_command.command("since")
+@click.argument("time", required=False, metavar="[TIME]")
+@click.option("--source", default="", metavar="NAME", help="One source.  [default: all]")
+@click.option("--reason", default="", metavar="TEXT", help="What was changed.")
+@click.option(
+    "--take-back", "is_wrong", is_flag=True, help="The change at TIME was none after all."
+)
+@click.pass_obj
+def since_command(
+    models: KeptModels, time: str | None, source: str, reason: str, is_wrong: bool
+) -> None:
+    """Declare a real change of plant: history counts from TIME on. Without TIME: list them.
+
+    TIME is RFC 3339 with its offset, for example 2026-12-01T06:00:00Z. What came before is
+    left out of the next nights, and models from before are no measure for what changed.
+    """
+    if time is None:
+        changes = load_changes(models.folder)
+        lines = [change_line(change) for change in changes]
+        click.echo("\n".join(lines) if lines else "no change of plant was declared")
+        return
+    since_ns = parse_time(time)
+    with models.lock():
+        if is_wrong:
+            change = take_back(models.folder, source, since_ns)
+        else:
+            change = declare(models.folder, source, since_ns, reason, datetime.now(UTC))
+    click.echo(f"{'taken back: ' if is_wrong else ''}{change_line(change)}")

@@ -89,7 +89,7 @@ class JudgeLimits(Section):
     most_tree_change: float = Field(default=0.6, ge=0, le=1)
     run_away_spreads: float = Field(default=2.0, ge=0.1, le=100)
     run_away_most_tie: float = Field(default=0.5, gt=0, le=1)
-    most_left_out_growth: float = Field(default=0.02, ge=0, le=1)
+    most_left_out_growth: float = Field(default=0.03, ge=0, le=1)
 
 
 class ModelsKept(Section):

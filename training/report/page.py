@@ -53,6 +53,9 @@ figure svg { width: 100%; height: auto; max-width: 40rem; display: block; }
 nav ul { padding: 0; list-style: none; display: flex; flex-wrap: wrap; gap: .1rem 1.1rem; }
 a { color: var(--teal); }
 .scroll { overflow-x: auto; }
+.pair { display: grid; grid-template-columns: repeat(auto-fit, minmax(min(19rem, 100%), 1fr));
+  gap: 0 1.5rem; }
+@media (min-width: 79rem) { .pair { margin-right: -17rem; } }
 @media (min-width: 79rem) { .wide { margin-right: -17rem; } }
 .wide td:not(.number, .whole) { min-width: 11rem; }
 .wide table { font-size: .88rem; }
@@ -178,6 +181,15 @@ def table(
         f"<thead><tr>{head}</tr></thead>\n"
         f"<tbody>{body}</tbody></table></div>\n"
     )
+
+
+def side_by_side(titled: Iterable[tuple[str, str]]) -> str:
+    """Return pieces beside each other, below each other on a narrow screen.
+
+    titled: a title and a piece for each.
+    """
+    parts = "".join(f"<div>{paragraph(title)}{piece}</div>" for title, piece in titled)
+    return f'<div class="pair">{parts}</div>\n'
 
 
 def _kind(is_words: bool, is_whole: bool) -> str:
