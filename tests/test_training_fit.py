@@ -214,3 +214,16 @@ def test_regimes_and_the_rest_are_one_density() -> None:
     assert share == pytest.approx((pump == 0).mean(), abs=0.01)
     for part in density.parts:
         agrees(part.tree) if part.key is None else evidence_rows(part.tree.arrays, everything)
+
+
+def test_many_channels_leave_room_for_the_commonest_regimes_alone(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    rng = np.random.default_rng(10)
+    state = rng.choice(3, 3000, p=[0.2, 0.5, 0.3]).astype(float)
+    values = np.column_stack([state, rng.integers(0, 2, 3000)])
+    monkeypatch.setattr("training.fit.MAX_REGIME_NODES", 4)
+    with spool_of({"a": values}) as spool:
+        rows = Rows(spool, states(3, 2), ("a",), 60.0)
+        density = fit_regimes(rows, fit(rows), (0,))
+    assert list(density.regimes) == [(1,), (2,)]

@@ -16,9 +16,7 @@ from tests.spools import gaussian_tree
 from tests.strategies import SEEDS
 from training.structure import (
     CoarseNode,
-    bin_scores,
     edge_weights,
-    score_correlation,
     spanning_forest,
     suzuki_weight,
 )
@@ -108,38 +106,6 @@ def test_suzukis_penalty_is_half_a_logarithm_for_each_free_cell() -> None:
     assert suzuki_weight(np.diag([50, 50])) == pytest.approx(
         math.log(2) - math.log(100) / 200, rel=1e-12
     )
-
-
-def test_the_correlation_of_scores_is_that_of_the_records() -> None:
-    rng = np.random.default_rng(2)
-    values = gaussian_tree(rng, 200_000, [(0, 1)], 0.7)
-    borders = ndtri(np.arange(1, 24) / 24)
-    bins = [np.searchsorted(borders, values[:, k]) for k in range(2)]
-    counts = np.bincount(bins[0] * 24 + bins[1], minlength=576).reshape(24, 24).astype(float)
-    mean = bin_scores(borders, np.full(24, 1 / 24))
-    assert score_correlation(counts, mean, mean) == pytest.approx(0.7, abs=0.01)
-    assert score_correlation(counts[::-1], mean, mean) == pytest.approx(-0.7, abs=0.01)
-
-
-def test_a_channel_that_does_not_move_has_no_correlation() -> None:
-    counts = np.array([[5.0, 5.0], [0.0, 0.0]])
-    scores = np.array([-1.0, 1.0])
-    assert score_correlation(counts, scores, scores) == 0.0
-    assert score_correlation(np.zeros((2, 2)), scores, scores) == 0.0
-
-
-def test_few_records_are_shrunk_towards_independence() -> None:
-    scores = np.array([-1.0, 1.0])
-    few = score_correlation(np.diag([2.0, 2.0]), scores, scores)
-    many = score_correlation(np.diag([2e4, 2e4]), scores, scores)
-    assert few < 0.7 < 0.999 < many
-
-
-def test_mean_scores_lie_inside_their_bins() -> None:
-    borders = np.array([-3.0, -1.0, 0.5, 4.0])
-    p = np.diff(np.concatenate([[0], [0.001, 0.16, 0.69, 0.99997], [1]]))
-    mean = bin_scores(borders, p)
-    assert mean[0] < -3 <= mean[1] <= -1 <= mean[2] <= 0.5 <= mean[3] <= 4 < mean[4]
 
 
 def coarse(values: Floats, n_bins: int = 8) -> tuple[list[CoarseNode], NDArray[np.uint8]]:

@@ -15,7 +15,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from training.binning import NodeBins
-from training.structure import held_out_gains, held_out_shapes
+from training.heldgains import best_mass, gathered, held_out_gains, held_out_shapes
 from training.threads import in_slices
 
 Floats = NDArray[np.float64]
@@ -88,20 +88,25 @@ def _edge_gains(
     under each edge's best mass.
     """
     empty = np.empty(0)
-    middle = shares[shares.shape[0] // 2 : shares.shape[0] // 2 + 1]
+    middle, chosen = np.empty(1), np.empty(1)
+    middle[0] = shares[shares.shape[0] // 2]
     for e in range(start, stop):
         a, b = left[e], right[e]
         n, m = n_bins[a], n_bins[b]
         left_scores = empty if is_state[a] else scores[a, : n - 1]
         right_scores = empty if is_state[b] else scores[b, : m - 1]
-        cells = np.ascontiguousarray(counts[:, e, :n, :m])
+        cells = gathered(counts, e, n, m)
         p, q = marginal[a, :n], marginal[b, :m]
         shapes = held_out_shapes(cells, p, q, left_scores, right_scores, given[e])
         found = held_out_gains(cells, shapes, p, q, masses, middle)
-        by_mass[e] = found[:, :, 0].sum(axis=0)
-        best = np.argmax(by_mass[e])
-        found = held_out_gains(cells, shapes, p, q, masses[best : best + 1], shares)
-        by_share[e] = found[:, 0].sum(axis=0)
+        for f in range(cells.shape[0]):
+            for k in range(masses.shape[0]):
+                by_mass[e, k] += found[f, k, 0]
+        chosen[0] = masses[best_mass(found)]
+        found = held_out_gains(cells, shapes, p, q, chosen, shares)
+        for f in range(cells.shape[0]):
+            for k in range(shares.shape[0]):
+                by_share[e, k] += found[f, 0, k]
 
 
 @njit(cache=True, nogil=True)

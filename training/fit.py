@@ -25,12 +25,12 @@ from training.candidates import heaviest_forest
 from training.choices import N_BINS, Choice, Unions, choose, merge_counts
 from training.reader import PairReader, Wanted
 from training.rows import Rows
+from training.shapes import pair_shape
 from training.structure import (
     LEAST_ERRORS,
     CoarseNode,
     correlations_of,
     edge_weights,
-    pair_shape,
     spanning_forest,
 )
 from training.tables import log_ratio, mutual_information, shaped_joint
@@ -44,6 +44,10 @@ WEIGHING_BINS_FEW, WEIGHING_BINS_MANY, FEW_PAIRS = 24, 10, 2000
 # A combination of regime channels with fewer records, or a smaller share of them, is rare
 # and left to the plain tree; more combinations than this are no regimes.
 LEAST_REGIME_RECORDS, LEAST_REGIME_SHARE, MAX_REGIMES = 300, 0.005, 16
+# From 101 channels on there are fewer, the commonest: all trees together have about this many
+# edges, because each edge's table takes 0.2 MB where it scores and six members are in hand at
+# once. 16 trees of 500 channels took 16 GB.
+MAX_REGIME_NODES = 1600
 
 
 @dataclass(frozen=True)
@@ -180,7 +184,8 @@ def fit_regimes(
     n_bins = density.plain.choice.n_bins
     into = _unions(density.fine, n_bins)[1]
     reader = PairReader(rows, folds, BinTable.of(tuple(n.bins for n in density.fine)), regime)
-    keys = list(like.regimes) if like else _common(codes)
+    n_most = min(MAX_REGIMES, MAX_REGIME_NODES // len(density.fine))
+    keys = list(like.regimes) if like else _common(codes, n_most)
     fine = {}
     for key in keys:
         holds = (codes == np.array(key)).all(axis=1)
@@ -212,12 +217,15 @@ def _same(unions: Unions, n_bins: int) -> Unions:  # noqa: ARG001 - the number i
     return unions
 
 
-def _common(codes: Floats) -> list[tuple[int, ...]]:
-    """Return the combinations of regime channels that are not rare, most records first."""
+def _common(codes: Floats, n_most: int) -> list[tuple[int, ...]]:
+    """Return the combinations of regime channels that are not rare, most records first.
+
+    n_most: no more than so many.
+    """
     codes = codes[~np.isnan(codes).any(axis=1)]
     found, counts = np.unique(codes, axis=0, return_counts=True)
     least = max(LEAST_REGIME_RECORDS, LEAST_REGIME_SHARE * len(codes))
-    order = np.argsort(-counts, kind="stable")[:MAX_REGIMES]
+    order = np.argsort(-counts, kind="stable")[:n_most]
     return [tuple(int(x) for x in found[k]) for k in order if counts[k] >= least]
 
 

@@ -14,6 +14,10 @@ from training.rows import Rows
 
 Ints = NDArray[np.int64]
 
+# Bins wait until so many are together: a regime's share of a chunk may be a few rows, and
+# opening the tables of 125,000 pairs for them takes longer than counting.
+MAX_WAITING_BYTES = 32 * 1024 * 1024
+
 
 @dataclass(frozen=True)
 class Wanted:
@@ -60,6 +64,7 @@ class PairReader:
         shapes = [(len(groups), len(o.left), o.width + 1, o.width + 1) for o in wanted]
         counts = [np.zeros(shape, dtype=np.int64) for shape in shapes]
         n_records = [0] * len(wanted)
+        waiting = _Waiting(wanted, counts)
         for chunk in self.rows.chunks():
             columns = self.bin_table.columns(chunk.values)
             for k, one in enumerate(wanted):
@@ -69,10 +74,33 @@ class PairReader:
                 for g, group in enumerate(groups):
                     use = np.flatnonzero(keep & np.isin(chunk.fold, group))
                     if len(use):
-                        part = _looked_up(lookups[k], columns, use)
-                        count_pairs(part, one.left, one.right, one.width + 1, counts[k][g])
+                        waiting.add(k, g, _looked_up(lookups[k], columns, use))
                         n_records[k] += len(use)
+        waiting.count()
         return list(zip(counts, n_records, strict=True))
+
+
+class _Waiting:
+    """Columns that wait to be counted, so that each pair's table is opened for many rows."""
+
+    def __init__(self, wanted: list[Wanted], counts: list[NDArray[np.int64]]) -> None:
+        self._wanted, self._counts = wanted, counts
+        self._parts: dict[tuple[int, int], list[NDArray[np.uint8]]] = {}
+        self._n_bytes = 0
+
+    def add(self, k: int, g: int, columns: NDArray[np.uint8]) -> None:
+        """Take (n_nodes, n) bins for group g of the k-th wanted."""
+        self._parts.setdefault((k, g), []).append(columns)
+        self._n_bytes += columns.nbytes
+        if self._n_bytes > MAX_WAITING_BYTES:
+            self.count()
+
+    def count(self) -> None:
+        """Count what waits."""
+        for (k, g), parts in self._parts.items():
+            one, columns = self._wanted[k], np.concatenate(parts, axis=1)
+            count_pairs(columns, one.left, one.right, one.width + 1, self._counts[k][g])
+        self._parts, self._n_bytes = {}, 0
 
 
 @njit(cache=True, nogil=True)

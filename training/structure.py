@@ -15,8 +15,9 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-from training.copula import normal_cells
-from training.tables import mutual_information, shaped_joint
+from training.heldgains import best_mass, gathered, held_out_gains, held_out_shapes
+from training.shapes import bin_scores, score_correlation
+from training.tables import mutual_information
 from training.threads import in_slices
 
 Floats = NDArray[np.float64]
@@ -28,9 +29,6 @@ WEIGHING_MASSES = np.array([30.0, 300.0, 3000.0, 100_000.0])
 WEIGHING_SHARE = 0.01
 # An edge must gain this many standard errors of its gain over the folds.
 LEAST_ERRORS = 1.0
-# Sweeps of raking while tables are compared: what is left to rake then is far below the
-# differences between choices.
-ROUGH_SWEEPS = 6
 
 
 @dataclass(frozen=True)
@@ -101,137 +99,19 @@ def suzuki_weight(counts: NDArray[np.int64]) -> float:
 
 
 @njit(cache=True, nogil=True)
-def score_correlation(counts: Floats, left: Floats, right: Floats) -> float:
-    """Return the correlation of two channels' normal scores from their counts per cell.
-
-    left, right: mean normal score of each bin. 0 where a channel does not move.
-    """
-    n = sx = sy = sxx = syy = sxy = 0.0
-    for i in range(counts.shape[0]):
-        for j in range(counts.shape[1]):
-            c = counts[i, j]
-            n += c
-            sx += c * left[i]
-            sy += c * right[j]
-            sxx += c * left[i] * left[i]
-            syy += c * right[j] * right[j]
-            sxy += c * left[i] * right[j]
-    if n < 3.0:
-        return 0.0
-    vx, vy = sxx - sx * sx / n, syy - sy * sy / n
-    if vx <= 1e-12 * n or vy <= 1e-12 * n:
-        return 0.0
-    # A few records say little: shrunk as by two more that agree with independence.
-    return (sxy - sx * sy / n) / math.sqrt(vx * vy) * n / (n + 2.0)
-
-
-@njit(cache=True, nogil=True)
-def bin_scores(scores: Floats, marginal: Floats) -> Floats:
-    """Return the mean normal score of each bin, (n_bins,), from its borders' scores."""
-    n = scores.shape[0] + 1
-    out = np.empty(n)
-    for b in range(n):
-        low = math.exp(-0.5 * scores[b - 1] ** 2) if b > 0 else 0.0
-        high = math.exp(-0.5 * scores[b] ** 2) if b < n - 1 else 0.0
-        mean = (low - high) / math.sqrt(2.0 * math.pi) / max(marginal[b], 1e-300)
-        # Beyond the range the marginal need not be the normal's: keep inside the borders.
-        if b > 0:
-            mean = max(mean, scores[b - 1])
-        if b < n - 1:
-            mean = min(mean, scores[b])
-        out[b] = mean
-    return out
-
-
-@njit(cache=True, nogil=True)
-def pair_shape(
-    counts: Floats,
-    left: Floats,
-    right: Floats,
-    left_scores: Floats,
-    right_scores: Floats,
-    given: float = np.nan,
-) -> Floats:
-    """Return the shape of one pair's table: the normal copula with the counts' correlation.
-
-    given: a correlation that the fleet has settled, NaN to take the counts' own.
-
-    counts: (n, m). left, right: marginals. *_scores: borders' normal scores, empty for a
-    state, whose shape is the product of the marginals.
-    """
-    n, m = counts.shape
-    if left_scores.shape[0] + 1 != n or right_scores.shape[0] + 1 != m:
-        shape = np.empty((n, m))
+def _move(counts: Floats) -> bool:
+    """Return whether both channels have more than one bin: a constant one goes with nothing."""
+    n_folds, n, m = counts.shape
+    left, right = -1, -1
+    left_moves = right_moves = False
+    for f in range(n_folds):
         for i in range(n):
             for j in range(m):
-                shape[i, j] = left[i] * right[j]
-        return shape
-    r = given
-    if r != r:
-        left_means, right_means = bin_scores(left_scores, left), bin_scores(right_scores, right)
-        r = score_correlation(counts, left_means, right_means)
-    return normal_cells(left_scores, right_scores, r)
-
-
-@njit(cache=True, nogil=True)
-def held_out_shapes(
-    counts: Floats,
-    left: Floats,
-    right: Floats,
-    left_scores: Floats,
-    right_scores: Floats,
-    given: float = np.nan,
-) -> Floats:
-    """Return the shape of one pair's table made without each fold, (n_folds, n, m)."""
-    shapes = np.empty(counts.shape)
-    total = _over_folds(counts)
-    for f in range(counts.shape[0]):
-        seen = total - counts[f]
-        shapes[f] = pair_shape(seen, left, right, left_scores, right_scores, given)
-    return shapes
-
-
-@njit(cache=True, nogil=True)
-def _over_folds(counts: Floats) -> Floats:
-    total = np.zeros(counts.shape[1:])
-    for f in range(counts.shape[0]):
-        total += counts[f]
-    return total
-
-
-@njit(cache=True, nogil=True)
-def held_out_gains(
-    counts: Floats, shapes: Floats, left: Floats, right: Floats, masses: Floats, shares: Floats
-) -> Floats:
-    """Return what one pair's table gains on folds that it did not see, in nats.
-
-    counts: (n_folds, n, m) records per cell; shapes: as held_out_shapes gives them.
-    Tables are made from the other folds, for each weight of the shape and each share.
-    Returns (n_folds, n_masses, n_shares), sums over the fold's records of
-    ln(joint / (left * right)).
-    """
-    n_folds, n, m = counts.shape
-    total = _over_folds(counts)
-    gains = np.zeros((n_folds, masses.shape[0], shares.shape[0]))
-    for f in range(n_folds):
-        seen = total - counts[f]
-        for k in range(masses.shape[0]):
-            joint = shaped_joint(seen, shapes[f], masses[k], 0.0, left, right, ROUGH_SWEEPS)
-            for i in range(n):
-                for j in range(m):
-                    if counts[f, i, j] > 0.0:
-                        ratio = joint[i, j] / (left[i] * right[j])
-                        for s in range(shares.shape[0]):
-                            gains[f, k, s] += counts[f, i, j] * math.log(
-                                (1.0 - shares[s]) * ratio + shares[s]
-                            )
-    return gains
-
-
-@njit(cache=True, nogil=True)
-def _moves(counts: Floats) -> bool:
-    """Return whether more than one bin was met: a constant channel goes with nothing."""
-    return int((counts > 0.0).sum()) > 1
+                if counts[f, i, j] > 0.0:
+                    left_moves |= left not in (-1, i)
+                    right_moves |= right not in (-1, j)
+                    left, right = i, j
+    return left_moves and right_moves
 
 
 @njit(cache=True, nogil=True)
@@ -249,23 +129,23 @@ def _weigh(
     shares: Floats,
     gains: Floats,
 ) -> None:
+    empty = np.empty(0)
     for p in range(start, stop):
         a, b = left[p], right[p]
         if is_state[a] and is_state[b]:
             continue
         n, m = n_bins[a], n_bins[b]
-        cells = counts[:, p, :n, :m].astype(np.float64)
-        empty = np.empty(0)
+        cells = gathered(counts, p, n, m)
+        if not _move(cells):
+            continue
         left_scores = empty if is_state[a] else scores[a, : n - 1]
         right_scores = empty if is_state[b] else scores[b, : m - 1]
-        total = _over_folds(cells)
-        if not (_moves(total.sum(axis=1)) and _moves(total.sum(axis=0))):
-            continue
         own, other = marginal[a, :n], marginal[b, :m]
         shapes = held_out_shapes(cells, own, other, left_scores, right_scores)
         found = held_out_gains(cells, shapes, own, other, masses, shares)
-        best = np.argmax(found[:, :, 0].sum(axis=0))
-        gains[p] = found[:, best, 0]
+        best = best_mass(found)
+        for f in range(gains.shape[1]):
+            gains[p, f] = found[f, best, 0]
 
 
 @njit(cache=True, nogil=True)
