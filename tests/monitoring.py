@@ -126,7 +126,7 @@ def alerting(
         config["scrape_configs"].append(one | {"static_configs": [{"targets": addresses}]})
     (folder / "prometheus.yml").write_text(yaml.safe_dump(config), encoding="utf-8")
     told = change((FOLDER / "alertmanager.yml").read_text())
-    told = told.replace("127.0.0.1:9094", f"127.0.0.1:{webhook.port}")
+    told = told.replace("127.0.0.1:9095", f"127.0.0.1:{webhook.port}")
     (folder / "alertmanager.yml").write_text(told, encoding="utf-8")
     with contextlib.ExitStack() as stack:
         stack.callback(webhook.close)

@@ -14,6 +14,7 @@ import shutil
 import site
 import subprocess
 import sys
+import tempfile
 import time
 import tomllib
 from importlib.metadata import PackageNotFoundError, requires, version
@@ -253,16 +254,22 @@ def test_every_secret_and_every_file_beforehand_is_kept_out_of_the_image() -> No
 
 
 @pytest.mark.soak
-def test_the_whole_build_starts_quickly_as_another_user_who_cannot_write(tmp_path: Path) -> None:
+def test_the_whole_build_starts_quickly_as_another_user_who_cannot_write() -> None:
     """Libraries come from the registry; the kernels are compiled into the environment."""
-    tmp_path.chmod(0o755)
-    source = context(tmp_path)
-    build(source, tmp_path / "opt", "serve", NUMBA_CPU_NAME="generic")
-    home = tmp_path / "home"
+    # Not the tests' own folder, which another user may not enter.
+    with tempfile.TemporaryDirectory(prefix="oddbranch-built-") as name:
+        Path(name).chmod(0o755)
+        _build_and_start(Path(name))
+
+
+def _build_and_start(folder: Path) -> None:
+    source = context(folder)
+    build(source, folder / "opt", "serve", NUMBA_CPU_NAME="generic")
+    home = folder / "home"
     home.mkdir()
     home.chmod(0o777)
     environment = {
-        "PATH": "/usr/bin:/bin", "HOME": str(home), "INSTALLED": str(tmp_path / "opt"),
+        "PATH": "/usr/bin:/bin", "HOME": str(home), "INSTALLED": str(folder / "opt"),
         "NUMBA_CACHE_DIR": str(home / "kernels"), "NUMBA_CPU_NAME": "generic",
     }  # fmt: skip
     model = source / "tests" / "data" / "formats" / "model-1"
@@ -278,5 +285,5 @@ def test_the_whole_build_starts_quickly_as_another_user_who_cannot_write(tmp_pat
         process.terminate()
     assert "Serving on" in said
     sys.stdout.write(f"built, started as another user in {took_s:.1f} s\n")
-    compiled = sum(1 for _ in (tmp_path / "opt" / "kernels").rglob("*.nbc"))
+    compiled = sum(1 for _ in (folder / "opt" / "kernels").rglob("*.nbc"))
     assert sum(1 for _ in (home / "kernels").rglob("*.nbc")) == compiled > 10
