@@ -14,7 +14,15 @@ from scoring.model import Levels
 from scoring.sustained import sustain
 from tests.spools import gaussian_tree, measurements, spool_of, times
 from training.blocks import N_FOLDS
-from training.crossfit import MAX_USUAL_ROWS, follow, hold_out, member_of, score_values, usual_of
+from training.crossfit import (
+    MAX_USUAL_ROWS,
+    _Sampled,
+    follow,
+    hold_out,
+    member_of,
+    score_values,
+    usual_of,
+)
 from training.fit import fit
 from training.rows import Rows
 
@@ -122,3 +130,15 @@ def test_scoring_values_is_the_removal_of_their_bins() -> None:
     wanted = removal_of(member, member.bin_table.rows(values[:20]), *none)
     np.testing.assert_array_equal(surprise, wanted[0])
     np.testing.assert_array_equal(own, wanted[1])
+
+
+def test_of_wide_records_fewer_are_kept_for_what_is_usual(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr("training.crossfit.MAX_MEASURED_READINGS", 300)
+    surprise, own = np.arange(100.0), np.zeros((100, 6))
+    sampled = _Sampled(100, 6)
+    for first in range(0, 100, 25):
+        part = slice(first, first + 25)
+        sampled.add(surprise[part], own[part], np.zeros((25, 6), dtype=np.uint8))
+    usual = sampled.usual()
+    assert len(usual.rows) == 50
+    assert usual.median == np.median(surprise[::2])

@@ -33,8 +33,9 @@ Ints = NDArray[np.int64]
 
 # Held-out records that a member carries as bins, for what is usual under any mask.
 MAX_USUAL_ROWS = 3000
-# Records from which medians and 99 % points are taken.
-MAX_MEASURED = 60_000
+# Records from which medians and 99 % points are taken; from 134 channels on as many as make
+# eight million readings, 64 MB.
+MAX_MEASURED, MAX_MEASURED_READINGS = 60_000, 8_000_000
 
 
 @dataclass(frozen=True)
@@ -103,7 +104,7 @@ class _Seen:
         self._final = final
         self._blocks = rows.blocks(source)
         self._by_block = np.zeros((self._blocks.n_blocks, 2))
-        self._sampled = _Sampled(n_records)
+        self._sampled = _Sampled(n_records, len(rows.table.instruments))
         self._histograms = Histograms(final, n_records)
         self._coverage = CoverageSample(rows.table, n_records)
         self._worst = Worst(rows.table, self._blocks.n_blocks)
@@ -144,8 +145,9 @@ class _Seen:
 class _Sampled:
     """A sample of held-out records: surprise, each channel's own, bins under the final member."""
 
-    def __init__(self, n_records: int) -> None:
-        self._every = max(1, n_records // MAX_MEASURED)
+    def __init__(self, n_records: int, n_instruments: int) -> None:
+        most = min(MAX_MEASURED, MAX_MEASURED_READINGS // n_instruments)
+        self._every = max(1, n_records // max(most, 1))
         self._seen = 0
         self._parts: list[tuple[Floats, Floats, NDArray[np.uint8]]] = []
 

@@ -24,6 +24,7 @@ from training.learn import learn_command, learn_model
 from training.settings import LearnSettings
 
 N_BATCH = 5000
+GAP_SHARE = 0.001
 
 
 def learn_files(model: str, history: str, channels: str) -> None:
@@ -44,6 +45,8 @@ def learn_wide(n_channels: int, n_records: int) -> None:
             values = rng.normal(size=(n, n_channels))
             for child, parent in enumerate(parents, 1):
                 values[:, child] = 0.8 * values[:, parent] + 0.6 * values[:, child]
+            # Gaps that come one by one: nearly every record with one has a mask of its own.
+            values[rng.random(values.shape) < GAP_SHARE] = np.nan
             at = START_NS + (first + np.arange(n)) * 60 * 1_000_000_000
             spool.add(
                 HistoryBatch(
