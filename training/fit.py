@@ -44,10 +44,10 @@ WEIGHING_BINS_FEW, WEIGHING_BINS_MANY, FEW_PAIRS = 24, 10, 2000
 # A combination of regime channels with fewer records, or a smaller share of them, is rare
 # and left to the plain tree; more combinations than this are no regimes.
 LEAST_REGIME_RECORDS, LEAST_REGIME_SHARE, MAX_REGIMES = 300, 0.005, 16
-# From 63 channels on there are fewer, the commonest: their trees together have at most this many
+# From 51 channels on there are fewer, the commonest: their trees together have at most this many
 # nodes, because an edge's table takes 0.2 MB where it scores and the trees of five folds are in
 # hand at once. 16 trees of 500 channels took 16 GB.
-MAX_REGIME_NODES = 1000
+MAX_REGIME_NODES = 800
 
 
 @dataclass(frozen=True)
