@@ -19,9 +19,10 @@ def put_alert(
     label: str = "",
     kind: str = "scored",
     channel: str = "flow",
+    model: str = "",
 ) -> None:
     """Add one alert to the SQLite store of a data folder."""
-    told: dict[str, Any] = {"label": label, "channels": [channel], "notes": []}
+    told: dict[str, Any] = {"label": label, "channels": [channel], "notes": [], "model": model}
     told["suspects"] = [{"channel": channel}]
     row = (
         f"{source} {kind} {since_ns}", source, kind, "raised" if until_ns is None else "cleared",

@@ -112,6 +112,22 @@ def test_unlabelled_alerts_are_stretches_and_nuisance_is_neither(tmp_path: Path)
 
 
 @pytest.mark.usefixtures("api")
+def test_alerts_of_a_declared_change_are_no_trouble(tmp_path: Path) -> None:
+    for since, until in ((8, 9), (12, 20), (40, 44)):
+        put_alert(tmp_path / "data", "a", at(since), at(until), model=f"m{since}")
+    put_alert(tmp_path / "data", "b", at(12), at(20), model="m12")
+    change = Change("a", at(10), "new meter", at(30))
+    # The last alert was raised by a model that knows the new meter, the first was before.
+    known = {("m12", "a"): at(0), ("m40", "a"): at(10)}
+    with chosen(tmp_path, changes=(change,), learned_from=lambda *names: known.get(names)) as found:
+        assert found.in_alert["a"].tolist() == [[at(8), at(9)], [at(40), at(44)]]
+        assert found.in_alert["b"].tolist() == [[at(12), at(20)]]
+    # Of models that are no longer kept: what was raised until the change was declared.
+    with chosen(tmp_path, changes=(change,)) as found:
+        assert found.in_alert["a"].tolist() == [[at(8), at(9)], [at(40), at(44)]]
+
+
+@pytest.mark.usefixtures("api")
 def test_files_are_added_and_what_stands_in_both_counts_once(tmp_path: Path) -> None:
     lines = ["time,source,flow,power"]
     for day, minute in ((1, 0), (1, 1), (30, 0)):

@@ -12,7 +12,7 @@ import pytest
 from scoring.channels import ChannelTable
 from scoring.model import Model
 from tests.nights import CUT_NS, LIMITS, N_HELD, Floats, a_case, known_model
-from tests.pump import N_LEARNED, NAMES, SOURCES, pump_values
+from tests.pump import N_LEARNED, NAMES, SOURCES, STEP_NS, pump_values
 from tests.spools import START_NS
 from training.changes import Change
 from training.judge import Case, Judgement, comparable, enough, is_after, judge, respooled
@@ -132,7 +132,7 @@ def test_after_a_change_of_plant_models_from_before_are_no_measure(tmp_path: Pat
     found, by_name = answers(a_case(tmp_path, in_use=old, witnesses=[old], changes=everything))
     assert found.passed, found.refusals
     assert "tree" not in by_name
-    assert "no common reading" in by_name["held-out density"].sentence
+    assert "no reading of the judge's days" in by_name["held-out density"].sentence
 
 
 def test_the_oldest_model_that_may_speak_is_the_witness(tmp_path: Path) -> None:
@@ -145,11 +145,29 @@ def test_the_oldest_model_that_may_speak_is_the_witness(tmp_path: Path) -> None:
     assert not by_name["run-away"].passed
 
 
+def test_days_that_the_model_in_use_has_learned_are_no_measure(tmp_path: Path) -> None:
+    model = known_model()
+    half_ns = CUT_NS + N_HELD // 2 * STEP_NS
+    members = {
+        s: replace(m, about={**m.about, "last_ns": half_ns}) for s, m in model.members.items()
+    }
+    found, _ = answers(a_case(tmp_path, in_use=replace(model, members=members)))
+    assert found.compared is not None
+    assert found.compared.n_readings == pytest.approx(2 * N_HELD // 2 * 5, rel=0.03)
+    members = {
+        s: replace(m, about={**m.about, "last_ns": NOW_NS}) for s, m in model.members.items()
+    }
+    found, by_name = answers(a_case(tmp_path, in_use=replace(model, members=members)))
+    assert found.compared is None
+    assert by_name["held-out density"].passed
+
+
 def test_days_without_a_record_are_refused_and_nothing_breaks(tmp_path: Path) -> None:
     model = known_model()
     found, by_name = answers(a_case(tmp_path, in_use=model, witnesses=[model], held={}))
     refused = [one.name for one in found.refusals]
-    assert refused == ["judge's hours", "drill"]
+    assert refused == ["judge's hours"]
+    assert "No drill with the new model" in by_name["drill"].sentence
     assert by_name["judge's hours"].number == 0.0
 
 

@@ -2,22 +2,24 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import pytest
 
 from tests.pump import SOURCES, pump_model, pump_values
 from tests.spools import spool_of
 from training.drilled import Result
 from training.history.spool import Spool
-from training.judge_drill import MOST_SPREADS, Drilled, drill_model, smallest, worst
+from training.judge_drill import MOST_SPREADS, Drilled, Quiet, drill_both, smallest, worst
 from training.planting import OFFSET
 
 
 def drilled(**sizes: float | None) -> Drilled:
     """Return results by channel; every channel's spread is 1."""
     results = tuple(
-        Result(name, OFFSET, "bar", size, None, "", 20, 20, 18, 3.0) for name, size in sizes.items()
+        Result(name, OFFSET, "bar", None, size, "", 20, 20, 18, 3.0) for name, size in sizes.items()
     )
-    return Drilled(results, dict.fromkeys(sizes, 1.0))
+    return Drilled(results, dict.fromkeys(sizes, 1.0), 20)
 
 
 def test_the_factor_is_new_over_old_and_none_counts_as_the_most() -> None:
@@ -43,22 +45,49 @@ def test_without_another_model_the_new_ones_offsets_are_told() -> None:
     assert (found[0].new, found[0].old, found[0].factor) == (2.0, None, 1.0)
 
 
+def later() -> Spool:
+    """Return records that the pump's model did not learn from."""
+    return spool_of({source: pump_values(source, 900, 3000) for source in SOURCES})
+
+
 def test_tied_channels_are_caught_small_and_the_room_is_not() -> None:
-    records = {source: pump_values(source, 900, 3000) for source in SOURCES}
-    with spool_of(records) as spool:
-        found = drill_model(pump_model(), spool, 20, 60)
-    assert isinstance(found, Drilled)
-    sizes = {one.channel: one.size for one in found.results}
+    with later() as spool:
+        quiet = Quiet.of(pump_model(), spool, 20, 60)
+    assert isinstance(quiet, Quiet)
+    found = quiet.drilled()
+    sizes = {one.channel: one.half for one in found.results}
     assert sorted(sizes) == ["flow", "power", "pressure", "room", "speed"]
     # Noise of the flow about what its speed says is 0.9, its own spread about 13.
     assert sizes["flow"] is not None
-    assert sizes["flow"] < 8.0
+    assert sizes["flow"] < 6.0
     assert sizes["room"] is None or sizes["room"] > 2.0 * found.spread["room"]
     assert found.spread["flow"] == pytest.approx(13.0, rel=0.6)
+    assert found.n_trials == 20
+
+
+def test_two_models_are_tried_on_the_stretches_that_are_quiet_to_both() -> None:
+    model = pump_model()
+    deaf = replace(model, levels=replace(model.levels, record=60.0, sustained=50.0))
+    with later() as spool:
+        mine, theirs = (Quiet.of(one, spool, 20, 60) for one in (deaf, model))
+    assert isinstance(mine, Quiet)
+    assert isinstance(theirs, Quiet)
+    both = drill_both(mine, theirs)
+    assert both is not None
+    assert both[0].n_trials == both[1].n_trials == len(mine.starts & theirs.starts)
+    found = smallest(*both)
+    got_worse = worst(found)
+    assert got_worse is not None
+    assert got_worse.factor > 1.5
+    same = drill_both(theirs, theirs)
+    assert same is not None
+    assert {one.factor for one in smallest(*same)} == {1.0}
+    few = sorted(theirs.starts)[:9]
+    assert drill_both(theirs, theirs.only(set(few))) is None
 
 
 def test_records_that_cannot_carry_a_drill_say_why() -> None:
     with spool_of({SOURCES[0]: pump_values(SOURCES[0], 100)}) as spool:
-        assert "quiet stretches" in str(drill_model(pump_model(), spool, 20, 60))
+        assert "quiet stretches" in str(Quiet.of(pump_model(), spool, 20, 60))
     with Spool(5) as empty:
-        assert "no record" in str(drill_model(pump_model(), empty, 20, 60))
+        assert "no record" in str(Quiet.of(pump_model(), empty, 20, 60))

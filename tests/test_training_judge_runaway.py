@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from scoring.channels import parse_channels
 from scoring.derived import derive
 from tests.pump import NAMES, SOURCES, pump_model, pump_times, pump_values
 from tests.spools import spool_of
@@ -15,6 +16,8 @@ from training.judge_runaway import (
     own_middles,
     residuals_of,
 )
+from training.learn import learn_model
+from training.settings import LearnSettings
 
 A = SOURCES[0]
 N, START = 1440, 3000
@@ -57,12 +60,23 @@ def test_a_channel_that_moves_with_its_neighbours_moved_but_has_not_run_away() -
         assert abs(found[name].apart) < 1.0
 
 
-def test_an_instrument_that_stands_at_one_value_has_no_distance() -> None:
-    values = pump_values(A, N, START)
-    found = {r.channel: r for r in residuals_of(pump_model(), A, pump_times(N, START), values)}
-    exact = np.round(values, 0)
-    rounded = {r.channel: r for r in residuals_of(pump_model(), A, pump_times(N, START), exact)}
-    assert rounded["speed"].apart == pytest.approx(found["speed"].apart, abs=0.2)
+def test_a_stopped_pump_at_the_end_of_its_bin_has_not_run_away() -> None:
+    rng = np.random.default_rng(5)
+    speed = 1300 + 80 * rng.normal(size=4000)
+    stopped = np.arange(4000) // 50 % 2 == 0
+    values = np.column_stack([speed, speed / 6]) + rng.normal(size=(4000, 2))
+    values[stopped] = 0.0
+    table = parse_channels({"step_s": 60, "channel": [{"name": "speed"}, {"name": "flow"}]}, "test")
+    with spool_of({"a": values}) as spool:
+        model = learn_model(spool, table, LearnSettings()).model
+    rows = np.flatnonzero(stopped)[:1000]
+    assert residuals_of(model, "a", pump_times(1000), values[rows]) == []
+    # Nor does it outvote what is off when the pump runs.
+    moved = values[2900:3950].copy()
+    moved[moved[:, 1] > 0, 1] += 6.0
+    assert (moved[:, 0] == 0.0).mean() > 0.5
+    by_name = {r.channel: r for r in residuals_of(model, "a", pump_times(1050), moved)}
+    assert by_name["flow"].apart > 2.0
 
 
 def test_few_readings_say_nothing() -> None:

@@ -8,7 +8,7 @@ was labelled nuisance stays. The newest days are kept for the judge.
 from __future__ import annotations
 
 from collections import Counter
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 
@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scoring.channels import ChannelTable
-from training.changes import Change
+from training.changes import Change, since
 from training.history.batch import HistoryBatch
 from training.history.exclusions import Exclusion
 from training.history.options import HistoryOptions
@@ -85,7 +85,10 @@ class Chosen:
 
 @dataclass(frozen=True)
 class Wanted:
-    """What a night may learn from: settings, files and how to read them, periods, changes."""
+    """What a night may learn from: settings, files and how to read them, periods, changes.
+
+    learned_from: model and source to the first time its member knows, None for one unknown.
+    """
 
     history: HistoryWanted
     judge_days: float
@@ -93,6 +96,18 @@ class Wanted:
     options: HistoryOptions = field(default_factory=HistoryOptions)
     exclusions: tuple[Exclusion, ...] = ()
     changes: tuple[Change, ...] = ()
+    learned_from: Callable[[str, str], int | None] = lambda _model, _source: None
+
+    def is_of_a_change(self, alert: StoredAlert) -> bool:
+        """Return whether an alert tells of a declared change: raised by a model from before."""
+        change = since(self.changes, alert.source)
+        if change is None or alert.since_ns < change.since_ns:
+            return False
+        first_ns = self.learned_from(alert.model, alert.source)
+        if first_ns is None:
+            # That model is no longer kept; what was raised later was no longer of the change.
+            return alert.since_ns <= change.declared_ns
+        return first_ns < change.since_ns
 
 
 def choose(
@@ -115,9 +130,10 @@ def choose(
         *_out(read_out_of_service(store)),
     )
     join_ns = round(wanted.history.join_alerts_h * HOUR_NS)
+    trouble = [alert for alert in alerts if not wanted.is_of_a_change(alert)]
     stretches = {
         source: np.array(found, dtype=np.int64).reshape(-1, 2)
-        for source, found in in_alert(alerts, window.until_ns, join_ns).items()
+        for source, found in in_alert(trouble, window.until_ns, join_ns).items()
     }
     cut_ns = window.until_ns - round(wanted.judge_days * DAY_NS)
     both = _Both(len(table.instruments), cut_ns, exclusions, folder)

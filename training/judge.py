@@ -31,7 +31,7 @@ from training.judge_cover import (
     tree_change,
 )
 from training.judge_density import Compared, Records, as_read_by, compare
-from training.judge_drill import Drilled, Smallest, drill_model, smallest, worst
+from training.judge_drill import Quiet, Smallest, drill_both, smallest, worst
 from training.judge_runaway import Residual, residuals_of
 from training.judging import DAY_NS
 from training.learn import LearnResult
@@ -150,7 +150,9 @@ def judge(case: Case, first: Sequence[Answer] = ()) -> Judgement:
         return Judgement(tuple(found), None, offsets, residuals, None, n_alerts)
     alike = comparable(case.new, case.in_use, case.changes)
     names = [source for source in case.chosen.held.sources if source in alike]
-    compared = compare(case.new, case.in_use, case.records(names), round(limits.block_h * HOUR_NS))
+    compared = compare(
+        case.new, case.in_use, unseen(case, case.in_use, names), round(limits.block_h * HOUR_NS)
+    )
     tree = tree_change(case.new, case.in_use, alike) if alike else None
     offsets, drilled = _drill(case, case.in_use if alike else None)
     found += [
@@ -171,6 +173,18 @@ def judge(case: Case, first: Sequence[Answer] = ()) -> Judgement:
 def comparable(new: Model, old: Model, changes: Sequence[Change]) -> list[str]:
     """Return the sources of both whose old member is not from before a declared change."""
     return [source for source in both_own(new, old) if is_after(old, source, changes)]
+
+
+def unseen(case: Case, old: Model, sources: Sequence[str]) -> Iterator[Records]:
+    """Yield the judge's records of some sources that an older model did not learn from.
+
+    One that was learned by hand may know the judge's days; what it knows is no measure.
+    """
+    for source, times_ns, values in case.records(sources):
+        last_ns = old.members[source].about.get("last_ns") if source in old.members else None
+        later = times_ns > (last_ns if last_ns is not None else -1)
+        if later.any():
+            yield source, times_ns[later], values[later]
 
 
 def is_after(model: Model, source: str, changes: Sequence[Change]) -> bool:
@@ -237,22 +251,24 @@ def _drill(case: Case, old: Model | None) -> tuple[tuple[Smallest, ...], Answer]
     limits = case.limits
     if not limits.drill_trials:
         return (), Answer("drill", None, limits.drill_factor, True, "Switched off by the site.")
-    mine = drill_model(case.new, case.chosen.held, limits.drill_trials, limits.drill_within)
+    wanted = (limits.drill_trials, limits.drill_within)
+    mine = Quiet.of(case.new, case.chosen.held, *wanted)
     if isinstance(mine, str):
+        # A model that is in alert all the time fails by its alerts, not by this.
         sentence = f"No drill with the new model: {mine}."
-        return (), Answer("drill", None, limits.drill_factor, False, sentence)
-    theirs: Drilled | str | None = None
+        return (), Answer("drill", None, limits.drill_factor, True, sentence)
     alone = answers.NOTHING_IN_USE
     if case.in_use is not None:
         alone = "The one in use is from before a change of plant, and no measure."
+    both = None
     if old is not None:
         with respooled(case, old) as spool:
-            theirs = drill_model(old, spool, limits.drill_trials, limits.drill_within)
-    if isinstance(theirs, str):
-        # The one in use is in alert all the time: no measure for the new one.
-        theirs, alone = None, f"No drill with the one in use: {theirs}."
-    found = smallest(mine, theirs)
-    answer = answers.drill(found, worst(found), limits.drill_factor, limits.drill_trials, alone)
+            theirs = Quiet.of(old, spool, *wanted)
+        both = None if isinstance(theirs, str) else drill_both(mine, theirs)
+        alone = "Too few stretches are quiet to both models."
+    new, other = both if both is not None else (mine.drilled(), None)
+    found = smallest(new, other)
+    answer = answers.drill(found, worst(found), limits.drill_factor, new.n_trials, alone)
     return tuple(found), answer
 
 

@@ -88,7 +88,9 @@ def without_readings(channels: Sequence[Channel], removed: Sequence[str]) -> str
 def density(found: Compared | None, slack: float) -> Answer:
     """Return whether the judge's days surprise the new model more than the one in use."""
     if found is None:
-        sentence = "The two models know no common reading of the judge's days."
+        sentence = (
+            "There is no reading of the judge's days that both know and neither learned from."
+        )
         return Answer("held-out density", None, slack, True, sentence)
     # Worse only if the whole interval lies beyond what is allowed.
     passed = found.low <= slack
@@ -140,7 +142,7 @@ def drill(
         for size in (worst.new, worst.old)
     ]
     sentence = (
-        f"The smallest offset caught in nine of ten of {n_trials} trials grew most for "
+        f"The smallest offset that half of {n_trials} trials catch grew most for "
         f"{worst.channel}: {sizes[0]} for {sizes[1]}, {worst.factor:.2f} times; at most "
         f"{limit:g} times is allowed."
     )

@@ -33,6 +33,8 @@ MOST_RECORDS: Final = 400
 LEAST_RESIDUALS: Final = 30
 # Half of an interval that holds 95 % of a normal distribution, in its standard deviations.
 _HALF_95: Final = 1.959964
+# A value that so large a share of the readings have is one at which the channel stands.
+_COMMON: Final = 0.05
 # Of a channel without a stated resolution, this share of its own spread is taken for one.
 _GRAIN: Final = 1e-3
 
@@ -69,12 +71,15 @@ def residuals_of(witness: Model, source: str, times_ns: Ints, values: Floats) ->
         there = np.isfinite(width[:, i]) & np.isfinite(nodes[:, i])
         if channel.is_state or there.sum() < LEAST_RESIDUALS or not np.isfinite(own_width[i]):
             continue
-        # Rounding, and where exactly in its bin a value that repeats lies, is no distance.
+        # Rounding is no distance.
         own, reading = own_width[i] / 2 / _HALF_95, nodes[there, i]
         grain = max(channel.resolution or 0.0, _GRAIN * own)
         spread = np.maximum(width[there, i] / 2, grain) / _HALF_95
         apart = reading - middle[there, i]
         apart = np.sign(apart) * np.maximum(np.abs(apart) - grain, 0.0) / spread
+        apart = apart[~_standing(reading, middle[there, i], member.bins[i].borders)]
+        if len(apart) < LEAST_RESIDUALS:
+            continue
         found.append(
             Residual(
                 source,
@@ -82,10 +87,23 @@ def residuals_of(witness: Model, source: str, times_ns: Ints, values: Floats) ->
                 float(np.median(apart)),
                 float(np.median(spread)) / own,
                 float(np.median(reading) - middles[i]) / own,
-                int(there.sum()),
+                len(apart),
             )
         )
     return found
+
+
+def _standing(reading: Floats, middle: Floats, borders: Floats) -> NDArray[np.bool_]:
+    """Return where a channel stands at its commonest value and is expected in that bin, (n,).
+
+    A stopped pump reads 0 all the time: that 0 lies at one end of its bin says nothing, and
+    half a day of it must not outvote what is read when the pump runs.
+    """
+    values, counts = np.unique(reading, return_counts=True)
+    if counts.max() < _COMMON * len(reading):
+        return np.zeros(len(reading), dtype=np.bool_)
+    same = np.searchsorted(borders, reading, "right") == np.searchsorted(borders, middle, "right")
+    return np.asarray(same & (reading == values[counts.argmax()]))
 
 
 def expected_middles(member: Member, table: ChannelTable, nodes: Floats) -> tuple[Floats, Floats]:

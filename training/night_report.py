@@ -237,7 +237,7 @@ def _drill(found: Sequence[Smallest]) -> Section:
         (one.channel, _size(one.old, one.unit), _size(one.new, one.unit), f"{one.factor:.2f}")
         for one in found
     ]
-    text = "Planted into the judge's days, caught in nine of ten trials; oddbranch drill tells all."
+    text = "Planted into the judge's days, caught in half of the trials; oddbranch drill tells all."
     return Section(
         title, (table(("channel", "in use", "new", "times"), rows), paragraph(text, quiet=True))
     )

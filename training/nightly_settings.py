@@ -85,11 +85,11 @@ class JudgeLimits(Section):
     alert_confidence: float = Field(default=0.99, ge=0.5, lt=1)
     drill_trials: int = Field(default=20, ge=0, le=1000)
     drill_within: int = Field(default=60, ge=2, le=10_000)
-    drill_factor: float = Field(default=2.0, ge=1, le=100)
+    drill_factor: float = Field(default=3.0, ge=1, le=100)
     most_tree_change: float = Field(default=0.6, ge=0, le=1)
     run_away_spreads: float = Field(default=2.0, ge=0.1, le=100)
     run_away_most_tie: float = Field(default=0.5, gt=0, le=1)
-    most_left_out_growth: float = Field(default=0.03, ge=0, le=1)
+    most_left_out_growth: float = Field(default=0.05, ge=0, le=1)
 
 
 class ModelsKept(Section):

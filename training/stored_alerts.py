@@ -38,6 +38,7 @@ class StoredAlert:
     """One alert. until_ns: None while it is open. label: "", "real" or "nuisance".
 
     channel: its first suspect, "" without one. comment: what was last written about it.
+    model: under which it was raised.
     """
 
     source: str
@@ -47,6 +48,7 @@ class StoredAlert:
     label: str
     channel: str
     comment: str = ""
+    model: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,6 +82,7 @@ def _alert(store: Store, row: Any) -> StoredAlert:
         label=str(data.get("label") or ""),
         channel=str(channel),
         comment=str(notes[-1]["text"]) if notes else "",
+        model=str(data.get("model") or ""),
     )
 
 
