@@ -93,7 +93,7 @@ def test_the_drill_names_the_channel_that_got_worst() -> None:
     assert "more than 30 spreads for 5 m3/h" in drill([never], never, 2.0, 20).sentence
     assert drill([FLOW], FLOW, 2.4, 20).passed
     first = replace(FLOW, old=None, factor=1.0)
-    assert "an offset of 1 is caught" in drill([first], first, 2.0, 20).sentence
+    assert "An offset is caught on 1 of 1 channels." in drill([first], first, 2.0, 20).sentence
     assert drill([], None, 2.0, 20).passed
 
 

@@ -24,7 +24,7 @@ from scoring.errors import OddbranchError
 from scoring.scorer import Scorer
 from tests.conftest import ROOT
 from tests.models import a_model
-from tests.service_http import START_S, Api, record, running
+from tests.service_http import NOW_NS, START_S, Api, record, running
 from tests.stored_alerts import put_alert
 from training import nightly
 from training.kept import KeptModels
@@ -60,11 +60,11 @@ LAST_WEEK = datetime(2026, 11, 24, 2, 15, tzinfo=UTC)
 SOURCES = ("mill-lane", "quarry-rise")
 
 
-def some_records(source: str, seed: int) -> list[dict[str, Any]]:
-    """Return records of a pump whose flow and power follow its speed."""
+def some_records(source: str, seed: int, until: int = 0) -> list[dict[str, Any]]:
+    """Return records of a pump whose flow and power follow its speed, up to a minute."""
     rng = random.Random(seed)
     found = []
-    for minute in range(-N_RECORDS, 0):
+    for minute in range(until - N_RECORDS, until):
         speed = 1300 + 120 * math.sin(minute / 40) + rng.gauss(0, 5)
         flow, power = speed / 6 + rng.gauss(0, 1), (speed / 1300) ** 3 * 30 + rng.gauss(0, 0.2)
         readings = {"flow": round(flow, 1), "power": round(power, 2), "speed": round(speed)}
@@ -170,6 +170,39 @@ def test_the_next_night_is_held_against_the_first_and_both_are_kept(site: Path) 
     assert answers["left out"]["number"] == 0.0
     assert answers["spans"]["number"] == 1.0
     assert f"Under the oldest kept model, {first.name}" in answers["run-away"]["sentence"]
+
+
+def test_sources_and_channels_come_and_go_from_one_night_to_the_next(site: Path) -> None:
+    clock = [NOW_NS]
+    with running(site, clock_ns=lambda: clock[0]) as api:
+        for number, source in enumerate(SOURCES):
+            api.post(some_records(source, number))
+        run()
+        # A pump is new, one was silent for longer than the window, power is measured no longer,
+        # and humidity is.
+        # Seven hours of one phase of the pump's round say little of another.
+        more = "least_hours = 3\ndays = 0.4\n[judge]\ndensity_slack_nats = 1.0"
+        changed("least_hours = 3\njoin_alerts_h = 0.0\n[judge]", more)
+        table = CHANNELS.replace('"power"', '"humidity"')
+        Path("channels.toml").write_text(table, encoding="utf-8")
+        clock[0] += 10 * 3600 * 10**9
+        for source in (SOURCES[0], "new-cross"):
+            later = some_records(source, 2, 600)
+            for one in later:
+                one["readings"]["humidity"] = 50.0 + one["readings"].pop("power") / 10
+            api.post(later)
+        says = run()
+    answers = {one["name"]: one for one in last_night()["answers"]}
+    assert answers["known sources"]["passed"], says
+    told = answers["known sources"]["sentence"]
+    assert "new with a member: new-cross" in told
+    assert f"without a record in the window, and so let go: {SOURCES[1]}" in told
+    assert answers["channels"]["sentence"].endswith(
+        "New in the channel table: humidity; no longer in it: power."
+    )
+    model = read_model(site / "models" / "current")
+    assert set(model.members) == {SOURCES[0], "new-cross"}
+    assert model.table.names == ("flow", "humidity", "speed")
 
 
 @pytest.mark.usefixtures("api")

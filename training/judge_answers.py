@@ -98,8 +98,8 @@ def density(found: Compared | None, slack: float) -> Answer:
     share = found.n_hidden / max(found.n_hidden + found.n_readings, 1)
     sentence = (
         f"The judge's days surprise the new model {abs(found.nats):.3f} nats a reading {how} than "
-        f"the one in use (95 % from {found.low:.3f} to {found.high:.3f} over {found.n_blocks} "
-        f"blocks of time); by {'less' if passed else 'more'} than {slack:g} beyond its doubt. "
+        f"the one in use (95 % from {found.low:+.3f} to {found.high:+.3f} over {found.n_blocks} "
+        f"blocks of time); the lower end may be {slack:g} at most. "
         f"Compared are {found.n_readings:,} readings that both know, {share:.1%} hidden."
     )
     return Answer("held-out density", found.nats, slack, passed, sentence)
@@ -132,7 +132,7 @@ def drill(
         return Answer("drill", None, limit, True, "No channel to plant a fault into.")
     if all(one.old is None and one.factor == 1.0 for one in found):
         n = sum(one.new is not None for one in found)
-        sentence = f"Of {len(found)} channels an offset of {n} is caught. {alone}"
+        sentence = f"An offset is caught on {n} of {len(found)} channels. {alone}"
         return Answer("drill", 1.0, limit, True, sentence)
     passed = worst.factor <= limit
     sizes = [

@@ -127,10 +127,10 @@ def _history(night: Night) -> Section:
     reasons = [(reason, count_text(n)) for reason, n in chosen.left_out.most_common()]
     pieces = [strip]
     if reasons:
-        pieces.append(paragraph("Left out of everything, the judge's days included:"))
+        pieces.append(paragraph("Left out altogether, the judge's days included:"))
         pieces.append(table(("why", "records"), reasons))
     else:
-        pieces.append(paragraph("Nothing was left out of everything."))
+        pieces.append(paragraph("No record was left out altogether."))
     stretches = _stretches(night)
     if stretches:
         pieces.append(paragraph(f"Left out of the tables, not of the levels: {_rates(night)}."))
@@ -139,7 +139,7 @@ def _history(night: Night) -> Section:
             for source, start, end, why in stretches[:_MOST_ROWS]
         ]
         heading = ("source", "from", "to", "why")
-        pieces.append(table(heading, shown, words=(0, 1, 2, 3), whole=(0, 1, 2)))
+        pieces.append(table(heading, shown, words=(0, 1, 2, 3), whole=(0, 1, 2, 3)))
         if len(stretches) > _MOST_ROWS:
             pieces.append(paragraph(f"And {len(stretches) - _MOST_ROWS} more."))
     pieces.append(bullets(change_line(change) for change in chosen.changes))

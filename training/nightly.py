@@ -40,7 +40,7 @@ from training.kept import BusyModels, Kept, KeptModels
 from training.learn import LearnResult, learn_model
 from training.night_files import NightFiles
 from training.night_metrics import FAILED, PUBLISHED, REFUSED, night_metrics, write_metrics
-from training.night_report import Night, lead, night_data, night_page, number_text
+from training.night_report import Night, lead, night_data, night_page
 from training.nightly_settings import NightlySettings, load_nightly_settings
 from training.progress import Progress
 from training.settings import LearnSettings, load_learn_settings
@@ -278,7 +278,7 @@ def _write(
 
 def _line(answer: Answer) -> str:
     verdict = "passed" if answer.passed else "REFUSED"
-    return f"  {answer.name}: {verdict}, {number_text(answer.number)}. {answer.sentence}"
+    return f"  {answer.name}: {verdict}. {answer.sentence}"
 
 
 def _note_failure(job: Job | None) -> None:
