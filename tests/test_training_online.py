@@ -129,9 +129,9 @@ def test_the_excess_is_kept_for_the_sweep_without_late_records(tmp_path: Path) -
 @pytest.mark.parametrize("run", [1, 3])
 def test_settings_of_alerts_are_used(tmp_path: Path, run: int) -> None:
     times_ns, values = pump_times(300, N_LEARNED), pump_values(SOURCES[0], 300, N_LEARNED)
-    values[100:102, 2] += 40.0
+    values[150:152, 2] += 40.0
     online = Online(pump_model(), tmp_path, AlertSettings(record_run=run))
     online.add(SOURCES[0], times_ns, values)
     online.finish()
-    raised = [a for a in online.alerts if times_ns[100] <= a.raised_ns <= times_ns[101]]
+    raised = [a for a in online.alerts if times_ns[150] <= a.raised_ns <= times_ns[151]]
     assert bool([a for a in raised if a.level == "record"]) == (run == 1)

@@ -68,6 +68,21 @@ def test_without_a_state_the_neighbours_motion_tells_standing_from_stuck() -> No
     assert limits.moving_s[0, OUT] <= 100.0
 
 
+def test_records_left_out_are_neither_a_stillness_nor_an_absence() -> None:
+    times_ns, values = machine_history(4000)
+    plain = learn(times_ns, values)
+    stuck = values.copy()
+    stuck[900:1100, IN] = 3.0
+    left_out = np.array([[times_ns[900], times_ns[1099]]])
+    with spool_of({"a": stuck}, step_s=10.0) as spool:
+        first_ns = next(Rows(spool, TABLE, ("a",), 10.0).chunks()).times_ns[0]
+        rows = Rows(spool, TABLE, ("a",), 10.0, {"a": left_out - times_ns[0] + first_ns})
+        member = with_stillness(rows, a_model().members, a_model().fleet)[0]["a"]
+    assert member.stillness is not None
+    assert member.stillness.away_s[-1] == plain.away_s[-1] == 10.0
+    assert member.stillness.still_s[0, IN] <= plain.still_s[0, IN]
+
+
 def test_absence_is_measured_in_time_that_was_seen() -> None:
     times_ns, values = machine_history(1000)
     values[100:110, IN] = np.nan

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import replace
 from typing import NamedTuple
 
@@ -143,7 +143,8 @@ def learn_stillness(
     """Return the limits of one source.
 
     chunks: times (n,) rising over all chunks, values (n, >= n_instruments), NaN = missing;
-        further columns are not looked at. edges: of the source's tree, as node numbers.
+        further columns are not looked at. An empty chunk parts what is before it from what
+        is after, because records between them are not to be learned from. edges: of the source's tree, as node numbers.
     step_s: the usual interval between records.
     """
     n = len(table.instruments)
@@ -168,6 +169,10 @@ def learn_stillness(
         n_records=np.zeros(1, dtype=np.int64),
     )
     for times_ns, values in chunks:
+        if not len(times_ns):
+            clocks.anchor[:], clocks.last_ns[:] = np.nan, -1
+            clocks.still_s[:], clocks.moving_s[:], clocks.away_s[:] = 0.0, 0.0, 0.0
+            continue
         own = np.ascontiguousarray(values[:, :n])
         _pass_over(times_ns, own, step_s, motion.rows, motion.states, neighbours, clocks, found)
     _cut_short(clocks, found)
@@ -184,14 +189,20 @@ def with_stillness(
     """
     found = {}
     for source, member in members.items():
-        chunks = (
-            (chunk.times_ns[chunk.kept], chunk.values[chunk.kept])
-            for chunk in rows.of(source).chunks()
-        )
+        chunks = _parted(rows.of(source))
         found[source] = learn_stillness(chunks, rows.table, _edges(member), rows.step_s)
     members = {s: replace(member, stillness=found[s]) for s, member in members.items()}
     limits = widest(list(found.values()), neighbour_lists(rows.table, _edges(fleet)))
     return members, replace(fleet, stillness=limits)
+
+
+def _parted(rows: Rows) -> Iterator[tuple[Ints, Floats]]:
+    """Yield times and values of what tables may use, an empty chunk where records are left out."""
+    for chunk in rows.chunks():
+        cuts = np.flatnonzero(np.diff(chunk.kept)) + 1
+        for part in np.split(np.arange(len(chunk.kept)), cuts):
+            use = slice(part[0], part[-1] + 1 if chunk.kept[part[0]] else part[0])
+            yield chunk.times_ns[use], chunk.values[use]
 
 
 def _edges(member: Member) -> list[tuple[int, int]]:
