@@ -144,7 +144,8 @@ def learn_stillness(
 
     chunks: times (n,) rising over all chunks, values (n, >= n_instruments), NaN = missing;
         further columns are not looked at. An empty chunk parts what is before it from what
-        is after, because records between them are not to be learned from. edges: of the source's tree, as node numbers.
+        is after, because records between them are not to be learned from.
+    edges: of the source's tree, as node numbers.
     step_s: the usual interval between records.
     """
     n = len(table.instruments)
