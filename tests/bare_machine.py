@@ -12,6 +12,7 @@ import json
 import os
 import subprocess
 import sys
+import time
 from pathlib import Path
 
 COPIED = ("/etc", "/opt", "/usr/local", "/var")
@@ -45,6 +46,7 @@ def main(folder: Path) -> None:
     bare = {"PATH": path, "HOME": "/root", "LC_ALL": "C.UTF-8"}
     done = []
     for step in steps:
+        began = time.monotonic()
         found = subprocess.run(
             ["sh", "-eu", "-c", step["script"]],
             env=bare | step.get("environment", {}),
@@ -54,7 +56,8 @@ def main(folder: Path) -> None:
             check=False,
             timeout=STEP_S,
         )
-        done.append({"name": step["name"], "code": found.returncode, "out": found.stdout,
+        done.append({"name": step["name"], "code": found.returncode,
+                     "seconds": time.monotonic() - began, "out": found.stdout,
                      "err": found.stderr})  # fmt: skip
         (folder / "done.json").write_text(json.dumps(done), encoding="utf-8")
         if found.returncode:

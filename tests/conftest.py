@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import os
 import shutil
+import subprocess
+import sys
 from pathlib import Path
 
 import pytest
@@ -38,6 +40,27 @@ def need_program(name: str, *others: str) -> str:
     if os.environ.get("ODDBRANCH_TEST_ALL") == "1":
         pytest.fail(reason)
     pytest.skip(reason)
+
+
+def machine_python() -> str:
+    """Return a Python of this version that every user of the machine may run, or skip.
+
+    One in somebody's home folder serves that user alone.
+    """
+    wanted = f"{sys.version_info[0]}.{sys.version_info[1]}"
+    for name in (f"python{wanted}", "python3"):
+        found = shutil.which(name, path="/usr/bin:/usr/local/bin")
+        if found is None:
+            continue
+        done = subprocess.run(
+            [found, "-c", "import sys, venv; print('{}.{}'.format(*sys.version_info))"],
+            capture_output=True,
+            text=True,
+            check=False,
+        )
+        if done.stdout.strip() == wanted:
+            return found
+    pytest.skip(f"the machine has no Python {wanted} of its own, only the tests' one")
 
 
 @pytest.fixture(autouse=True)

@@ -26,7 +26,7 @@ import yaml
 from packaging.requirements import Requirement
 
 from config import known
-from tests.conftest import ROOT, need_program
+from tests.conftest import ROOT, machine_python, need_program
 from tests.test_deploy_systemd import read as read_unit
 
 FOLDER = ROOT / "deploy" / "container"
@@ -265,7 +265,8 @@ def test_the_whole_build_starts_quickly_as_another_user_who_cannot_write() -> No
 
 def _build_and_start(folder: Path) -> None:
     source = context(folder)
-    build(source, folder / "opt", "serve", NUMBA_CPU_NAME="generic")
+    python = machine_python()
+    build(source, folder / "opt", "serve", NUMBA_CPU_NAME="generic", PYTHON=python)
     home = folder / "home"
     home.mkdir()
     home.chmod(0o777)

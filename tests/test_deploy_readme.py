@@ -20,7 +20,7 @@ import numpy as np
 import pytest
 
 from service.scoring_engine import load_engine
-from tests.conftest import ROOT, need_program
+from tests.conftest import ROOT, machine_python, need_program
 from tests.learned import small_fleet
 from tests.test_deploy_container import context
 
@@ -34,8 +34,6 @@ TLS = (
     "--resolve pumps.example:443:127.0.0.1 https://pumps.example"
 )
 N_RECORDS = 700
-# The machine's own Python, which every user of it may run.
-PYTHON = "/usr/bin/python3"
 
 
 def need_a_machine() -> None:
@@ -124,9 +122,10 @@ SEND_TOKEN = (
 
 def steps(folder: Path) -> list[dict[str, Any]]:
     """Return the page's commands in order, with what looks at their work between them."""
+    machine = machine_python()
     source, python = folder / "source", f"python{sys.version_info[0]}.{sys.version_info[1]}"
     registry = {"PIP_NO_DEPS": "1", "PIP_NO_BUILD_ISOLATION": "0", "PIP_NO_INDEX": "1",
-                "PYTHONPATH": str(PACKAGES), "PYTHON": PYTHON}  # fmt: skip
+                "PYTHONPATH": str(PACKAGES), "PYTHON": machine}  # fmt: skip
     program = BLOCKS["program"].replace("/opt/oddbranch all", "/opt/oddbranch none")
     assert program != BLOCKS["program"]
     libraries = f"echo {PACKAGES} > /opt/oddbranch/lib/{python}/site-packages/libraries.pth"
@@ -223,14 +222,16 @@ def followed() -> Iterator[dict[str, dict[str, Any]]]:
         (folder / "units").mkdir()
         (folder / "bin").mkdir()
         stand_in = folder / "bin" / "systemctl"
-        text = f'#!/bin/sh\nexec {PYTHON} {ROOT}/tests/understudy.py {folder}/units "$@"\n'
+        text = (
+            f'#!/bin/sh\nexec {machine_python()} {ROOT}/tests/understudy.py {folder}/units "$@"\n'
+        )
         stand_in.write_text(text, encoding="utf-8")
         stand_in.chmod(0o755)
         taken_over(folder, f"python{sys.version_info[0]}.{sys.version_info[1]}")
         (folder / "steps.json").write_text(json.dumps(steps(folder)), encoding="utf-8")
         spaces = ["unshare", "--mount", "--net", "--pid", "--fork", "--mount-proc", "--kill-child"]
         done = subprocess.run(
-            [*spaces, PYTHON, str(ROOT / "tests" / "bare_machine.py"), name],
+            [*spaces, machine_python(), str(ROOT / "tests" / "bare_machine.py"), name],
             capture_output=True, text=True, check=False,
         )  # fmt: skip
         path = folder / "done.json"

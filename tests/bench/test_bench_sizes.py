@@ -8,8 +8,10 @@ from __future__ import annotations
 
 import os
 import re
+import sqlite3
 import sys
 import tempfile
+from contextlib import closing
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -44,8 +46,9 @@ class Sizes:
         return (
             f"{store}: {self.one_per_core:.0f} records a second and core one by one, "
             f"{self.many_per_core:.0f} by the thousand; {self.bytes_per_record:.0f} bytes each; "
-            f"{self.mb_idle:.0f} MB at rest, {self.kb_per_source:.1f} KB a source more, "
-            f"{self.kb_per_member:.0f} KB a member of its own\n"
+            f"{self.mb_idle:.0f} MB at rest, {self.kb_per_source:.1f} KB a source more"
+            + (f", {self.kb_per_member:.0f} KB a member of its own" if self.kb_per_member else "")
+            + "\n"
         )
 
 
@@ -97,8 +100,12 @@ def measure(folder: Path, url: str = "") -> Sizes:
 
 def _stored_bytes(folder: Path, url: str) -> int:
     if not url:
-        # The log of the last pages has a fixed size and is no part of a record.
-        return (folder / "data" / "records.sqlite3").stat().st_size
+        # Pages that are still in the log are counted, the log itself is not.
+        with closing(sqlite3.connect(folder / "data" / "records.sqlite3")) as store:
+            pages, size = (
+                store.execute(f"PRAGMA {k}").fetchone()[0] for k in ("page_count", "page_size")
+            )
+        return int(pages * size)
     with psycopg.connect(url) as connection:
         row = connection.execute("SELECT pg_total_relation_size('record')").fetchone()
     assert row is not None
