@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Sequence
 from dataclasses import replace
 from pathlib import Path
@@ -79,7 +80,7 @@ def a_case(
         alerts=(),
         changes=changes,
         hours=50,
-        n_in_alert=0,
+        n_in_alert_of=Counter(),
     )
     return Case(
         chosen,

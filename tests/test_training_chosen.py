@@ -104,8 +104,12 @@ def test_unlabelled_alerts_are_stretches_and_nuisance_is_neither(tmp_path: Path)
         assert found.in_alert["a"].tolist() == [[at(10), at(14)], [at(15), at(16)]]
         assert "b" not in found.in_alert
         assert found.n_in_alert == 7
+        assert found.unlabelled_for_long == []
         assert found.n_records == 100
         assert [alert.label for alert in found.alerts] == ["", "nuisance", "", ""]
+    put_alert(tmp_path / "data", "b", at(20), at(33))
+    with chosen(tmp_path) as found:
+        assert found.unlabelled_for_long == ["b"]
     joined = HistoryWanted(days=1.0, join_alerts_h=1 / 60)
     with chosen(tmp_path, history=joined) as found:
         assert found.in_alert["a"].tolist() == [[at(10), at(16)]]

@@ -84,6 +84,10 @@ def test_few_readings_say_nothing() -> None:
     values[LEAST_RESIDUALS - 1 :, 2] = np.nan
     found = residuals_of(pump_model(), A, pump_times(N, START), values)
     assert "power" not in {r.channel for r in found}
+    values = pump_values(A, N, START)
+    values[N // 10 :, 2] = np.nan
+    found = residuals_of(pump_model(), A, pump_times(N, START), values)
+    assert "power" not in {r.channel for r in found}
 
 
 def test_the_middle_is_where_readings_that_fit_lie() -> None:

@@ -140,3 +140,19 @@ def test_ten_times_the_time_needs_no_more_memory(tmp_path: Path) -> None:
 
     peak_of(20_000)
     assert peak_of(200_000) <= 1.2 * peak_of(20_000)
+
+
+def test_time_left_out_of_the_tables_lends_the_rest_no_time_in_alert(tmp_path: Path) -> None:
+    # Were it so, false alerts that nobody labels would lower the levels night after night.
+    plain, kept = a_curve(tmp_path, alerts_per_day=1000.0)
+    assert plain.quiet_share is plain.time_share
+    left_out = {}
+    for one in kept:
+        times = np.concatenate([times_ns for times_ns, _ in one.chunks()])
+        left_out[one.source] = np.array([[times[0], times[len(times) // 4]]])
+    curve = curve_of(kept, NEVER, 1000.0, SETTINGS, left_out)
+    assert curve is not None
+    assert curve.left_share == pytest.approx(0.25, abs=0.01)
+    assert curve.quiet_share[curve.chosen] <= MAX_TIME_SHARE
+    assert curve.record[curve.chosen] >= 0.9 * plain.record[plain.chosen]
+    assert curve.seen_without <= curve.seen[curve.chosen]

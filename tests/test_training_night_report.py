@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import re
+from collections import Counter
 from collections.abc import Iterator
 from dataclasses import replace
 from datetime import UTC, datetime
@@ -48,6 +49,7 @@ def night(tmp_path: Path) -> Iterator[Night]:
     chosen = replace(
         case.chosen,
         in_alert={"east": in_alert},
+        n_in_alert_of=Counter({"mill-lane": 2000}),
         alerts=tuple(StoredAlert("east", "scored", 0, 1, "nuisance", SPITEFUL) for _ in range(3)),
         changes=(Change("east", CUT_NS, f"new {SPITEFUL}", CUT_NS),),
     )
@@ -73,7 +75,8 @@ def test_the_verdict_comes_first_and_every_section_has_its_say(night: Night) -> 
     ]  # fmt: skip
     told = (
         "REFUSED", "cleaning", "in alert, not labelled", "31 nats above the usual", "gained",
-        "look at the instrument", "alerts a day with", "history counts from",
+        "67% of mill-lane lie in alerts that nobody labelled", "look at the instrument",
+        "alerts a day with", "history counts from",
     )  # fmt: skip
     for words in told:
         assert words in page, words

@@ -38,6 +38,8 @@ Ints = NDArray[np.int64]
 DAY_NS = 86_400 * 10**9
 HOUR_NS = 3600 * 10**9
 _EVER_NS = 1 << 62
+# From this share of its records in unlabelled alert on, a source is told by name.
+LONG_SHARE = 0.25
 
 
 @dataclass
@@ -48,7 +50,7 @@ class Chosen:
     window: both together; cut_ns: the judge's days begin after it.
     in_alert: per source (n, 2) first and last times in ns of unlabelled alert.
     alerts: that touch the window. hours: with a record to learn from.
-    n_in_alert: records to learn from that lie in unlabelled alert.
+    n_in_alert_of: by source, records to learn from that lie in unlabelled alert.
     """
 
     learning: Spool
@@ -59,7 +61,18 @@ class Chosen:
     alerts: tuple[StoredAlert, ...]
     changes: tuple[Change, ...]
     hours: int
-    n_in_alert: int
+    n_in_alert_of: Counter[str]
+
+    @property
+    def n_in_alert(self) -> int:
+        """Records to learn from that lie in unlabelled alert."""
+        return self.n_in_alert_of.total()
+
+    @property
+    def unlabelled_for_long(self) -> list[str]:
+        """Sources of which little is learned, because they are in alert that nobody labels."""
+        n = self.learning.report.n_records
+        return [s for s, k in sorted(self.n_in_alert_of.items()) if k > LONG_SHARE * n.get(s, 0)]
 
     @property
     def n_records(self) -> int:
@@ -144,13 +157,13 @@ def choose(
                 if progress is not None:
                     progress.advance(batch.n_rows)
             both.finish(tally)
-        hours, n_in_alert = _look_over(both.learning, stretches)
+        hours, n_in_alert_of = _look_over(both.learning, stretches)
     except BaseException:
         both.close()
         raise
     return Chosen(
         both.learning, both.held, window, cut_ns, stretches, alerts, wanted.changes, hours,
-        n_in_alert,
+        n_in_alert_of,
     )  # fmt: skip
 
 
@@ -201,15 +214,15 @@ class _Both:
         self.held.close()
 
 
-def _look_over(spool: Spool, stretches: dict[str, Ints]) -> tuple[int, int]:
-    """Return how many hours have a record, and how many records lie in stretches."""
+def _look_over(spool: Spool, stretches: dict[str, Ints]) -> tuple[int, Counter[str]]:
+    """Return how many hours have a record, and by source how many lie in stretches."""
     hours: set[int] = set()
-    n_inside = 0
+    n_inside: Counter[str] = Counter()
     for source in spool.sources:
         for times_ns, _ in spool.chunks(source):
             hours.update(np.unique(times_ns // HOUR_NS).tolist())
             inside = np.zeros(len(times_ns), dtype=bool)
             for start, end in stretches.get(source, ()):
                 inside |= (times_ns >= start) & (times_ns <= end)
-            n_inside += int(inside.sum())
+            n_inside[source] += int(inside.sum())
     return len(hours), n_inside

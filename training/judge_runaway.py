@@ -29,8 +29,10 @@ Ints = NDArray[np.int64]
 
 # Records of one source that are tried, at 20 to 50 microseconds a reading.
 MOST_RECORDS: Final = 400
-# A middle of fewer residuals says nothing.
+# A middle of fewer residuals says nothing, nor one of a smaller share of the records: the
+# few hours in two days in which a standby pump runs are its own weather.
 LEAST_RESIDUALS: Final = 30
+LEAST_SHARE: Final = 0.2
 # Half of an interval that holds 95 % of a normal distribution, in its standard deviations.
 _HALF_95: Final = 1.959964
 # A value that so large a share of the readings have is one at which the channel stands.
@@ -78,7 +80,7 @@ def residuals_of(witness: Model, source: str, times_ns: Ints, values: Floats) ->
         apart = reading - middle[there, i]
         apart = np.sign(apart) * np.maximum(np.abs(apart) - grain, 0.0) / spread
         apart = apart[~_standing(reading, middle[there, i], member.bins[i].borders)]
-        if len(apart) < LEAST_RESIDUALS:
+        if len(apart) < max(LEAST_RESIDUALS, LEAST_SHARE * len(nodes)):
             continue
         found.append(
             Residual(

@@ -51,7 +51,8 @@ class Curve:
 
     record, sustained: (n,) nats, falling. alone: (n,) how often sustained would be passed
     by itself. seen: (n,) episodes of the pair. expected: (n,) the same, along the
-    tail where too few were seen. time_share: (n,) of records that held an alert.
+    tail where too few were seen. time_share: (n,) of records that held an alert;
+    quiet_share: (n,) the same outside the stretches that the tables do not use.
     by_day: (n, n_days) seen episodes by day of held-out time.
     source_days: judged time summed over sources. n_sources: how many those are.
     chosen: the place that keeps the budget. left_share: share of the records that lie in
@@ -64,6 +65,7 @@ class Curve:
     seen: Ints
     expected: Floats
     time_share: Floats
+    quiet_share: Floats
     by_day: Ints
     source_days: float
     n_sources: int
@@ -75,8 +77,10 @@ class Curve:
 
     def place(self, allowed: float) -> int:
         """Return the loosest pair that, with every stricter one, keeps to a count."""
-        # Stretches of trouble are in alert and should be; the limit is for the rest.
-        too_long = self.time_share > MAX_TIME_SHARE + self.left_share
+        # Stretches of trouble are in alert and should be; the limit is for the rest. Were their
+        # share allowed on top, every false alert that nobody labelled would lower the levels
+        # of the night after it.
+        too_long = self.quiet_share > MAX_TIME_SHARE
         bad = (self.expected > allowed) | (self.seen > allowed) | too_long
         first_bad = int(np.argmax(bad)) if bad.any() else len(bad)
         return max(first_bad - 1, 0)
@@ -247,13 +251,20 @@ def _curve(
     sweep = Sweep(pairs, start, settings)
     by_day = _by_day(sweep, sources)
     seen = by_day.sum(axis=1)
+    time_share = sweep.n_over / max(sweep.n_judged, 1)
+    quiet_share, without = time_share, seen
+    if left_out:
+        rest = Sweep(pairs, start, settings)
+        without = _by_day(rest, sources, left_out).sum(axis=1)
+        quiet_share = rest.n_over / max(rest.n_judged, 1)
     curve = Curve(
         record=record,
         sustained=sustained,
         alone=alone,
         seen=seen,
         expected=_expected(alone, seen),
-        time_share=sweep.n_over / max(sweep.n_judged, 1),
+        time_share=time_share,
+        quiet_share=quiet_share,
         by_day=by_day,
         source_days=source_days,
         n_sources=len(sources),
@@ -263,12 +274,7 @@ def _curve(
         left_share=_left_share(sources, left_out),
     )
     curve = replace(curve, chosen=curve.place(allowed))
-    if not left_out:
-        return replace(curve, seen_without=int(seen[curve.chosen]))
-    at = [curve.chosen]
-    alone_pair = Pairs(pairs.record[at], pairs.sustained[at], pairs.cap[at])
-    without = _by_day(Sweep(alone_pair, start, settings), sources, left_out)
-    return replace(curve, seen_without=int(without.sum()))
+    return replace(curve, seen_without=int(without[curve.chosen]))
 
 
 def _left_share(sources: list[HeldExcess], left_out: dict[str, Ints]) -> float:
@@ -306,6 +312,8 @@ def _by_day(
             for day in np.unique(days).tolist():
                 pairs = marks.pair[marks.raised][days == day]
                 found[day] += np.bincount(pairs, minlength=len(sweep.pairs))
+    if not found:
+        return np.zeros((len(sweep.pairs), 0), dtype=np.int64)
     return np.stack([found[day] for day in sorted(found)], axis=1)
 
 

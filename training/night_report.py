@@ -131,6 +131,7 @@ def _history(night: Night) -> Section:
         pieces.append(table(("why", "records"), reasons))
     else:
         pieces.append(paragraph("No record was left out altogether."))
+    pieces += [warning(unlabelled_words(chosen, s)) for s in chosen.unlabelled_for_long]
     stretches = _stretches(night)
     if stretches:
         pieces.append(paragraph(f"Left out of the tables, not of the levels: {_rates(night)}."))
@@ -152,6 +153,16 @@ def _history(night: Night) -> Section:
         problems += [f"{channel}: {n} readings {what}" for channel, n in counter.most_common()]
     pieces.append(bullets(problems[:_MOST_ROWS]))
     return Section("What was learned from, and what was left out", tuple(pieces))
+
+
+def unlabelled_words(chosen: Chosen, source: str) -> str:
+    """Return what to do about a source that is in alert and never learned from."""
+    share = chosen.n_in_alert_of[source] / chosen.learning.report.n_records[source]
+    return (
+        f"{share:.0%} of {source} lie in alerts that nobody labelled, and are not learned. Label "
+        "them: real leaves everything, nuisance is learned. A season that is never labelled stays "
+        "an alert."
+    )
 
 
 def _stretches(night: Night) -> list[tuple[str, int, int, str]]:

@@ -40,7 +40,7 @@ from training.kept import BusyModels, Kept, KeptModels
 from training.learn import LearnResult, learn_model
 from training.night_files import NightFiles
 from training.night_metrics import FAILED, PUBLISHED, REFUSED, night_metrics, write_metrics
-from training.night_report import Night, lead, night_data, night_page
+from training.night_report import Night, lead, night_data, night_page, unlabelled_words
 from training.nightly_settings import NightlySettings, load_nightly_settings
 from training.progress import Progress
 from training.settings import LearnSettings, load_learn_settings
@@ -128,6 +128,8 @@ def run_night(job: Job, now: Callable[[], datetime], tell: Tell) -> Outcome:
             judgement = Judgement(tuple(first))
         for answer in judgement.answers:
             tell(_line(answer))
+        for source in chosen.unlabelled_for_long:
+            tell(f"  {unlabelled_words(chosen, source)}")
         prepared = _prepare(models, learned, judgement, now()) if judgement.passed else None
         night = Night(
             PUBLISHED if prepared else REFUSED, now(), chosen, judgement, learned,
