@@ -120,7 +120,7 @@ class Month:
         current = {"path": self.models.folder / "current"}
         with running(
             self.folder, load=load_engine, clock_ns=self.clock, model=current,
-            limits={"n_batch": 100_000},
+            limits={"n_batch": 100_000, "body_mb": 256},
         ) as api:  # fmt: skip
             self._api = api
             for day, chunks in enumerate(days):
