@@ -19,6 +19,7 @@ from typing import Any
 import numpy as np
 import pytest
 
+from config import known
 from service.scoring_engine import load_engine
 from tests.conftest import ROOT, machine_python, need_program
 from tests.learned import small_fleet
@@ -192,6 +193,8 @@ def steps(folder: Path) -> list[dict[str, Any]]:
         look("records to replicas", send("/root/sender", records("east", 0, 12))),
         look("one is gone", "kill -9 $(cat " + f"{folder}/units/oddbranch.pid)"),
         look("records to the other", send("/root/sender", records("east", 12, 12))),
+        look("a night with the database", "systemctl start oddbranch-nightly\n"
+             f"grep 'to judge by' {folder}/units/oddbranch-nightly.log | tail -n 1"),
         page("backup-postgresql", **database),
         look("after that backup", send("/root/sender", records("west", 0, 5))),
         look("stopped", "systemctl stop oddbranch-2"),
@@ -313,6 +316,7 @@ def test_a_restored_store_is_the_one_that_was_copied(followed: dict[str, dict[st
 def test_a_restored_database_too(followed: dict[str, dict[str, Any]]) -> None:
     assert len(json.loads(followed["records to replicas"]["out"])) == 12
     assert len(json.loads(followed["records to the other"]["out"])) == 12
+    assert " 24 to judge by" in followed["a night with the database"]["out"]
     assert len(json.loads(followed["after that backup"]["out"])) == 5
     assert followed["as before"]["out"].split() == ["east|24"]
 
@@ -330,3 +334,6 @@ def test_containers_get_a_password_and_names_that_are_theirs(
     assert urls[0] == urls[1]
     assert '"replica-1:8321", "replica-2:8321"' in out
     assert "alertmanager:9093" in out
+    variables = dict(line.split("=", 1) for line in out.splitlines() if line.startswith("ODDB"))
+    assert len(variables) == 2
+    assert known.misspelt(variables) is None

@@ -6,6 +6,7 @@ import itertools
 import re
 import shutil
 import sqlite3
+import subprocess
 import time
 from contextlib import closing
 from dataclasses import replace
@@ -76,6 +77,27 @@ def test_a_full_disk_is_mended_by_letting_old_records_go(tmp_path: Path) -> None
         answer = api.post([record((n + i) / 6) for i in range(20)])
         assert answer.status_code == 200
         assert n_stored(api) == left + 20
+
+
+def test_a_full_disk_is_mended_by_giving_it_room(tmp_path: Path) -> None:
+    """A real one, small and in memory; the service goes on by itself."""
+    disk = tmp_path / "data"
+    disk.mkdir()
+    words = ["mount", "-t", "tmpfs", "-o", "size=2m", "tmpfs", str(disk)]
+    done = subprocess.run(words, capture_output=True, text=True, check=False)
+    if done.returncode:
+        pytest.skip(f"no disk of its own can be made here: {done.stderr.strip()}")
+    try:
+        with running(tmp_path) as api:
+            n = until_refused(api)
+            assert shutil.disk_usage(disk).free < 64_000
+            assert n_stored(api) == n
+            subprocess.run(["mount", "-o", "remount,size=8m", str(disk)], check=True)
+            answer = api.post([record((n + i) / 6) for i in range(20)])
+            assert answer.status_code == 200
+            assert n_stored(api) == n + 20
+    finally:
+        subprocess.run(["umount", str(disk)], check=True)
 
 
 def test_a_clock_that_jumped_ahead_moves_no_standing(tmp_path: Path) -> None:
