@@ -10,7 +10,15 @@ from tests.pump import SOURCES, pump_model, pump_values
 from tests.spools import spool_of
 from training.drilled import Result
 from training.history.spool import Spool
-from training.judge_drill import MOST_SPREADS, Drilled, Quiet, drill_both, smallest, worst
+from training.judge_drill import (
+    LEAST_SPREADS,
+    MOST_SPREADS,
+    Drilled,
+    Quiet,
+    drill_both,
+    smallest,
+    worst,
+)
 from training.planting import OFFSET
 
 
@@ -38,6 +46,12 @@ def test_the_factor_is_new_over_old_and_none_counts_as_the_most() -> None:
 def test_an_offset_beyond_the_most_is_as_good_as_none() -> None:
     found = smallest(drilled(flow=100.0), drilled(flow=50.0))
     assert (found[0].new, found[0].old, found[0].factor) == (None, None, 1.0)
+
+
+def test_an_offset_below_the_least_is_caught_small_enough() -> None:
+    found = smallest(drilled(flow=0.2, power=1.0), drilled(flow=0.01, power=0.1))
+    assert [one.factor for one in found] == [1.0, 1.0 / LEAST_SPREADS]
+    assert (found[0].new, found[0].old) == (0.2, 0.01)
 
 
 def test_without_another_model_the_new_ones_offsets_are_told() -> None:

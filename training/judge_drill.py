@@ -19,8 +19,11 @@ from training.history.spool import Spool
 from training.planting import OFFSET
 from training.trials import LEAST_TRIALS, BadTrials, OnlinePath, Trials, find_trials
 
-# Offsets beyond so many spreads of the channel are as good as not caught.
+# Offsets beyond so many spreads of the channel are as good as not caught; below so many they
+# are caught small enough. Without the latter a stopped pump's 0, from which any step is
+# caught under one model and the next but one under the other, decided one night in seven.
 MOST_SPREADS: Final = 30.0
+LEAST_SPREADS: Final = 0.25
 _SEED: Final = 1
 # A channel that the site took out of its table is absent to the older model; that is no
 # alert to wait for here.
@@ -33,7 +36,7 @@ class Smallest:
 
     Half, because nine in ten of a few trials hang on the hardest two of them, and would
     change from night to night by chance. new, old: None for none up to MOST_SPREADS.
-    factor: new over old; none counts as MOST_SPREADS.
+    factor: new over old; none counts as MOST_SPREADS, less than LEAST_SPREADS as that.
     """
 
     channel: str
@@ -127,10 +130,9 @@ def smallest(new: Drilled, old: Drilled | None) -> list[Smallest]:
             continue
         name = one.channel
         sizes = [_within(one.half, new, name), _within(before[name].half, new, name)]
-        most = MOST_SPREADS * new.spread[name]
-        mine, theirs = (most if size is None else size for size in sizes)
-        factor = mine / theirs if theirs > 0 else 1.0
-        found.append(Smallest(name, one.unit, sizes[0], sizes[1], factor))
+        least, most = (share * new.spread[name] for share in (LEAST_SPREADS, MOST_SPREADS))
+        mine, theirs = (most if size is None else max(size, least) for size in sizes)
+        found.append(Smallest(name, one.unit, sizes[0], sizes[1], mine / theirs))
     return found
 
 
