@@ -192,4 +192,4 @@ def _is_missing(
 
 
 def _round_or_none(value: float | None) -> float | None:
-    return None if value is None or value != value else round(value, DECIMALS)
+    return None if value is None or value != value else round(value, DECIMALS) + 0.0

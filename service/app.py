@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import AsyncIterator
+from collections.abc import AsyncIterator, Mapping
 from contextlib import asynccontextmanager
 from importlib.metadata import PackageNotFoundError, version
 from typing import Any
@@ -15,8 +15,9 @@ from starlette.requests import Request
 from starlette.responses import Response
 from starlette.types import ASGIApp
 
-from service.front import Front
+from service.front import ROUTES, Front
 from service.logs import log_event
+from service.nearest import nearest_of
 from service.openapi import describe
 from service.page import page_router
 from service.problems import Problem
@@ -92,21 +93,36 @@ def _add_handlers(app: FastAPI) -> None:
     async def on_bad_query(_request: Request, error: Exception) -> Response:
         assert isinstance(error, RequestValidationError)
         first = error.errors()[0]
-        name = str(first["loc"][-1])
-        return _response(Problem("bad-query", f"{name}: {first['msg']}"))
+        name, words = str(first["loc"][-1]), str(first["msg"])
+        if first["type"] == "string_pattern_mismatch" and name in ("id", "alert"):
+            words = "an alert's id is 16 digits from 0 to f; GET /alerts lists them"
+        return _response(Problem("bad-query", f"{name}: {words}"))
 
     @app.exception_handler(HTTPException)
     async def on_http(request: Request, error: Exception) -> Response:
         assert isinstance(error, HTTPException)
-        kind = _KIND_OF_STATUS.get(error.status_code, "bad-header")
-        response = _response(Problem(kind, str(error.detail)))
-        response.headers.update(error.headers or {})
+        path = request.url.path
+        headers = {name.lower(): value for name, value in (error.headers or {}).items()}
         if error.status_code == 405:
             # A path may be served by several routes; the framework names the first one's.
-            quick = [method for path, method in QUICK if path == request.url.path]
+            quick = [method for quick_path, method in QUICK if quick_path == path]
             if quick:
-                response.headers["allow"] = ", ".join(["GET", *quick])
+                headers["allow"] = ", ".join(["GET", *quick])
+        kind = _KIND_OF_STATUS.get(error.status_code, "bad-header")
+        response = _response(Problem(kind, _words_of(error, request.method, path, headers)))
+        response.headers.update(headers)
         return response
+
+
+def _words_of(error: HTTPException, method: str, path: str, headers: Mapping[str, str]) -> str:
+    """Return what the framework's refusal means here."""
+    if error.status_code == 404:
+        near = nearest_of(path[:60], sorted(ROUTES))
+        return f"there is nothing at {path[:60]!r}" + (f"; is {near} meant?" if near else "")
+    if error.status_code == 405:
+        allowed = headers.get("allow", "").replace(", ", " or ")
+        return f"{method[:20]} is not answered at {path[:60]!r}; use {allowed}"
+    return str(error.detail)
 
 
 def _response(problem: Problem) -> Response:

@@ -22,6 +22,7 @@ from service.times import parse_time
 MAX_NAME_CHARS = 200
 MAX_WORD_CHARS = 200
 _MEMBERS = frozenset(("source", "time", "readings"))
+_TIME_WANTED = 'time is a text in RFC 3339 such as "2026-12-01T04:00:10Z"'
 _QUALITY_MEMBERS = frozenset(("value", "quality"))
 # The OPC UA words for the quality of a reading; an uncertain one is used, a bad one never.
 QUALITIES = ("good", "uncertain", "bad")
@@ -126,7 +127,10 @@ class ItemReader:
             if member not in item:
                 near = nearest_of(member, [name for name in item if name not in _MEMBERS])
                 hint = f"; is {_clip(near)} meant?" if near else ""
-                _refuse(f"/{member}", f"the record has no {member}{hint}")
+                _refuse(
+                    f"/{member}",
+                    f"the record has no {member}{hint}; it needs source, time and readings",
+                )
         extra = item.keys() - _MEMBERS
         if extra:
             name = min(extra)
@@ -149,7 +153,7 @@ class ItemReader:
     @staticmethod
     def _time(time: Any) -> int:
         if not isinstance(time, str):
-            _refuse("/time", f"time is a text in RFC 3339 with an offset, not {_a(time)}")
+            _refuse("/time", f"{_TIME_WANTED}, not {_a(time)}")
         try:
             return parse_time(time)
         except ValueError as error:

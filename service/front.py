@@ -127,7 +127,9 @@ class Front:
         text = (host or b"").decode("latin-1").lower()
         name = text[1 : text.find("]")] if text.startswith("[") else text.rpartition(":")[0] or text
         if name not in self.hosts:
-            raise Problem("bad-host", "the Host header names a host that is not served here")
+            raise Problem(
+                "bad-host", f"the Host header says {name[:60]!r}, no name of this service"
+            )
 
     def _count(self, scope: Scope, request: _Request) -> None:
         path, method = scope["path"], scope["method"]

@@ -1,8 +1,8 @@
 """Refusals as clients see them: one RFC 9457 body for every error.
 
-A `Problem` knows its kind; the kind knows status, title and the way out. Handlers find
-it by class, `/problems/{kind}` explains it. A body never holds the text of an
-unexpected exception.
+A `Problem` knows its kind; the kind knows status, title and the way out, and the body says
+all three. Handlers find it by class, `/problems/{kind}` explains it. A body never holds the
+text of an unexpected exception.
 """
 
 from __future__ import annotations
@@ -52,7 +52,11 @@ KINDS: Mapping[str, Kind] = {
         "A token is needed",
         "Send 'Authorization: Bearer TOKEN'; an operator makes one with `oddbranch token add`.",
     ),
-    "no-right": Kind(403, "Token may not do this", "Ask an operator for a token with the role."),
+    "no-right": Kind(
+        403,
+        "Token may not do this",
+        "Ask an operator for a token with that role: `oddbranch token add NAME --role ROLE`.",
+    ),
     "foreign-origin": Kind(
         403,
         "Request from a foreign page",
@@ -132,6 +136,7 @@ class Problem(OddbranchError):
             "title": kind.title,
             "status": kind.status,
             "detail": self.detail,
+            "way_out": kind.way_out,
             **self.members,
         }
 

@@ -149,6 +149,10 @@ class ProblemBody(BaseModel):
         description="what is wrong here and what to do, no unit",
         examples=["time '2026-12-01T04:00:10' has no offset from UTC; end it with Z or +hh:mm"],
     )
+    way_out: str = Field(
+        description="what to do about this sort of refusal, no unit",
+        examples=["Correct the member that the detail names."],
+    )
     pointer: str = Field(
         default="", description="place in the record (RFC 6901), no unit", examples=["/time"]
     )
@@ -162,7 +166,8 @@ class ProblemItem(_Answer):
     problem: ProblemBody = Field(
         description="why it was refused, no unit",
         examples=[{"type": "/problems/bad-record", "title": "Record cannot be used",
-                   "status": 422, "detail": "the record has no time", "index": 3}],
+                   "status": 422, "detail": "the record has no time",
+                   "way_out": "Correct the member that the detail names.", "index": 3}],
     )  # fmt: skip
 
 

@@ -104,6 +104,8 @@ class Sheet:
             np.stack([scored.surprise, scored.excess, scored.sustained, scored.suspect_surprise]),
             DECIMALS,
         )
+        # No answer says -0.0.
+        nats += 0.0
         suspects = np.maximum(scored.suspect, 0).astype(np.intp)
         readings = self.values[np.arange(len(self.sources)), suspects]
         expected = np.stack([scored.low, scored.high, scored.best, readings])

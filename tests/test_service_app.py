@@ -243,7 +243,7 @@ def test_a_packed_body_that_cannot_be_used_is_refused(local: Api, body: bytes, k
         ({"content-type": "application/x-www-form-urlencoded"}, 415, "with curl: -H"),
         ({"content-type": "application/json; charset=utf-16"}, 415, "only UTF-8 is taken"),
         ({"content-encoding": "br"}, 415, "send gzip or none"),
-        ({"host": "elsewhere.example"}, 400, "a host that is not served here"),
+        ({"host": "elsewhere.example"}, 400, "no name of this service"),
         ({"origin": "https://elsewhere.example"}, 403, "another origin"),
     ],
 )
@@ -387,14 +387,17 @@ def test_answers_are_as_they_are_described(api: Api) -> None:
 
 
 def test_what_is_not_there_is_a_problem_too(local: Api) -> None:
-    for method, path, status in (
-        ("GET", "/nothing", 404),
-        ("DELETE", "/records", 405),
-        ("PUT", "/sources", 405),
-        ("GET", "/problems/none", 404),
+    for method, path, status, detail in (
+        ("GET", "/nothing", 404, "there is nothing at '/nothing'"),
+        ("GET", "/record", 404, "there is nothing at '/record'; is /records meant?"),
+        ("DELETE", "/records", 405, "DELETE is not answered at '/records'; use GET or POST"),
+        ("PUT", "/sources", 405, "PUT is not answered at '/sources'; use GET"),
+        ("GET", "/problems/none", 404, "there is no such sort of refusal"),
+        ("GET", "/actions?alert=x", 422, "alert: an alert's id is 16 digits from 0 to f"),
     ):
         answer = local.request(method, path)
         assert answer.status_code == status
+        assert answer.json()["detail"].startswith(detail)
         assert answer.headers["content-type"] == "application/problem+json"
     assert "GET" in local.request("PUT", "/sources").headers["allow"]
 
