@@ -1,4 +1,7 @@
-"""Old records go by age and by size, a piece at a time, and what went is on record."""
+"""Old records go by age and by size, a piece at a time, and what went is on record.
+
+Alerts go by age alone: they are few, and what people said about them is dear.
+"""
 
 from __future__ import annotations
 
@@ -8,12 +11,21 @@ from collections.abc import Callable
 from service.logs import log_event
 from service.settings import StoreSettings
 from service.store.database import Database
-from service.store.prune import give_back, older_than, prune_piece, write_pruned
+from service.store.prune import (
+    give_back,
+    older_than,
+    prune_actions,
+    prune_alerts,
+    prune_piece,
+    write_pruned,
+)
 from service.times import format_time
 from service.writer import Writer
 
 # Between pieces waiting requests are stored; a piece of this size takes some ten ms.
 _N_PIECE = 2000
+# Some SQL has room for a thousand values in a list.
+_N_ALERTS = 500
 _DAY_NS = 86_400 * 1_000_000_000
 # How much of the store goes at once when it is over its size.
 _SIZE_SHARE = 0.05
@@ -36,6 +48,7 @@ class Retention:
         """Take out what is too old, then the oldest while the store is too large."""
         before_ns = self.clock_ns() - int(self.settings.keep_days * _DAY_NS)
         await self._prune_before(before_ns, "age")
+        await self._prune_alerts()
         if not self.settings.keep_mb:
             return
         limit = self.settings.keep_mb * 1e6
@@ -62,6 +75,27 @@ class Retention:
                 "pruned", reason=reason, before=format_time(max(before_ns, 0)), n_records=n_pruned
             )
             await self.writer.errand(give_back)
+
+    async def _prune_alerts(self) -> None:
+        # A night that still has a record must know whether an alert stood over it.
+        days = max(self.settings.keep_alerts_days, self.settings.keep_days)
+        before_ns = self.clock_ns() - int(days * _DAY_NS)
+        n_alerts = n_actions = 0
+        while True:
+            done = await self.writer.errand(lambda c: prune_alerts(c, before_ns, _N_ALERTS))
+            assert isinstance(done, tuple)
+            n_alerts, n_actions = n_alerts + done[0], n_actions + done[1]
+            if done[0] < _N_ALERTS:
+                break
+        done = await self.writer.errand(lambda c: prune_actions(c, before_ns))
+        assert isinstance(done, int)
+        n_actions += done
+        if n_alerts or n_actions:
+            now_ns, counts = self.clock_ns(), {"n_alerts": n_alerts, "n_actions": n_actions}
+            await self.writer.errand(
+                lambda c: write_pruned(c, now_ns, "age", before_ns, 0, **counts)
+            )
+            log_event("pruned", reason="age", before=format_time(max(before_ns, 0)), **counts)
 
     def _oldest_share(self, share: float) -> int | None:
         with self.database.read.connect() as connection:

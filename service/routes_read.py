@@ -172,14 +172,15 @@ def read_router(service: Service) -> APIRouter:
     async def pruned(
         limit: Annotated[int, limit_query] = 100, after: AfterQuery = None
     ) -> Response:
-        """Answer when, why and how many records went."""
+        """Answer when, why and how many records, alerts and actions went."""
         at = pair_of(after)
         rows, following = await in_thread(
             lambda c: pages.pruned_page(c, limit=limit, after=at[0] if at else None)
         )
         items = [
             {"at": format_time(row["at_ns"]), "reason": row["reason"],
-             "before": format_time(row["before_ns"]), "records": row["n_records"]}
+             "before": format_time(row["before_ns"]), "records": row["n_records"],
+             "alerts": row["n_alerts"], "actions": row["n_actions"]}
             for row in rows
         ]  # fmt: skip
         return answer(

@@ -296,10 +296,12 @@ class PrunedItem(_Answer):
     at: str = Field(description="when, RFC 3339 in UTC", examples=[TIME_EXAMPLE])
     reason: Literal["age", "size"] = Field(description="why, no unit", examples=["age"])
     before: str = Field(
-        description="records received before this went, RFC 3339 in UTC",
+        description="records received and alerts cleared before this went, RFC 3339 in UTC",
         examples=["2025-10-27T04:00:00Z"],
     )
-    records: int = Field(description="how many, count", examples=[8640], ge=0)
+    records: int = Field(description="how many records, count", examples=[8640], ge=0)
+    alerts: int = Field(description="how many alerts, count", examples=[0], ge=0)
+    actions: int = Field(description="how many actions, count", examples=[0], ge=0)
 
 
 class PrunedPage(_Answer):

@@ -65,6 +65,9 @@ class StoreSettings(_Section):
     data: Path = Field(Path("data"), description="data folder")
     url: SecretStr = Field(SecretStr(""), description="PostgreSQL URL; empty for SQLite")
     keep_days: float = Field(400.0, ge=0.01, le=100_000, description="age at which records go")
+    keep_alerts_days: float = Field(
+        1500.0, ge=0.01, le=100_000, description="age at which cleared alerts go"
+    )
     keep_mb: float = Field(0.0, ge=0, le=1e9, description="size at which the oldest go; 0: none")
     prune_s: float = Field(600.0, ge=0.1, le=86_400, description="how often old records go")
     max_pages: int = Field(

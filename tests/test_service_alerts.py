@@ -211,6 +211,43 @@ def test_a_source_out_of_service_raises_nothing_until_it_is_back(
         assert (label.json()["label"], label.json()["state"]) == ("nuisance", "cleared")
 
 
+def test_alerts_cleared_long_ago_go_with_their_actions_and_it_is_on_record(
+    tmp_path: Path, models: Path, clock: Clock, store: dict[str, Any]
+) -> None:
+    """What is open stays, however old, and so does a time out of service that lasts."""
+    kept = {**store, "keep_days": 2.0, "keep_alerts_days": 1.0}
+    day_ns = 86_400 * S
+    with serve(tmp_path, models, clock, store=kept) as api:
+        old = raise_one(api)
+        act(api, f"/alerts/{old['id']}/label", {"label": "real"})
+        act(api, "/sources/a/out-of-service", {"reason": "new pump"})
+        act(api, "/sources/a/in-service")
+        act(api, "/sources/a/out-of-service", {"reason": "new meter"})
+        still_open = raise_one(api, "b", start=30)
+        n_cleared = len(alerts(api, state="cleared"))
+        clock.now_ns += day_ns + 3600 * S
+        api.call(api.service.retention.prune())
+        assert api.get("/pruned").json()["items"] == [], "sooner than its records no alert goes"
+        clock.now_ns += day_ns
+        api.call(api.service.retention.prune())
+        assert alerts(api, state="cleared") == []
+        assert still_open["id"] in {one["id"] for one in alerts(api, state="open")}
+        actions = api.get("/actions").json()["items"]
+        assert [(item["what"], item["comment"]) for item in actions] == [
+            ("out_of_service", "new meter")
+        ]
+        assert act(api, f"/alerts/{old['id']}/label", {"label": "real"}).status_code == 404
+        went = {item["alerts"]: item for item in api.get("/pruned").json()["items"]}
+        # Of actions: the label, and the time out of service that had ended.
+        assert went[n_cleared]["actions"] == 3
+        assert went[n_cleared]["before"] == format_time(clock.now_ns - 2 * day_ns)
+        assert went[0]["records"] == 18
+        api.call(api.service.retention.prune())
+        assert len(api.get("/pruned").json()["items"]) == 2, "nothing more to take out"
+        # The source that lasted out of service is still known to be.
+        assert act(api, "/sources/a/in-service").status_code == 200
+
+
 @pytest.mark.parametrize(
     ("path", "body", "status", "message"),
     [

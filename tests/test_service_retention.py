@@ -21,7 +21,7 @@ def test_records_older_than_the_age_go_and_it_is_on_record(tmp_path: Path) -> No
         (pruned,) = api.get("/pruned").json()["items"]
         assert pruned == {
             "at": "2025-12-02T06:00:00Z", "reason": "age",
-            "before": "2025-12-01T06:00:00Z", "records": 3,
+            "before": "2025-12-01T06:00:00Z", "records": 3, "alerts": 0, "actions": 0,
         }  # fmt: skip
         # The standing is not made of stored records and stays.
         assert api.get("/sources").json()["items"][0]["records"] == 5

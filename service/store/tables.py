@@ -91,6 +91,8 @@ pruned = sa.Table(
     sa.Column("reason", sa.Text, nullable=False),
     sa.Column("before_ns", sa.BigInteger, nullable=False),
     sa.Column("n_records", sa.BigInteger, nullable=False),
+    sa.Column("n_alerts", sa.BigInteger, nullable=False, server_default=sa.text("0")),
+    sa.Column("n_actions", sa.BigInteger, nullable=False, server_default=sa.text("0")),
 )
 
 # One row an alert: its newest form as JSON, and what rows are chosen by.
