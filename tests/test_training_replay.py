@@ -30,7 +30,7 @@ from training.report.page import ADVICE
 N = 4000
 MINUTE = 60_000_000_000
 # Start and end in minutes, what is added to which column; the last is far too small to see.
-FAULTS = ((300, 420, 1, 20.0), (1200, 1330, 2, 6.0), (2500, 2620, 3, 0.002))
+FAULTS = ((300, 420, 1, 20.0), (1200, 1330, 2, 6.0), (3300, 3420, 3, 0.002))
 
 
 def stamp(minute: int) -> str:

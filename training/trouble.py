@@ -21,7 +21,7 @@ Ints = NDArray[np.int64]
 
 # Smoothed surprise is far beyond the usual from its median and this many times the way
 # from there to its 84 % point (one standard deviation, were it normal).
-FAR_SPREADS = 8.0
+FAR_SPREADS = 6.0
 # At most this share of a source's records is left out, the most surprising stretches first.
 MOST_LEFT_OUT = 0.05
 # Surprise is smoothed over this many usual intervals; a stretch begins and ends where it
