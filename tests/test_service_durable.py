@@ -5,10 +5,11 @@ from __future__ import annotations
 import json
 import random
 import sqlite3
+import subprocess
 import threading
 import time
-from collections.abc import Iterator
-from contextlib import closing
+from collections.abc import Callable, Iterator
+from contextlib import closing, contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -189,6 +190,90 @@ def test_a_full_store_refuses_new_records_and_keeps_the_old_ones(tmp_path: Path)
     with running(tmp_path / "unbroken") as api:
         items = [record(i / 6) for i in range(len(acknowledged) + 1)]
         assert scores(stored) == scores(api.post(items).json())
+
+
+@contextmanager
+def small_disk(folder: Path, size: str) -> Iterator[Callable[[str], None] | None]:
+    """Mount a small disk in memory there and yield what resizes it; None where none may be."""
+    words = ["mount", "-t", "tmpfs", "-o", f"size={size}", "tmpfs", str(folder)]
+    try:
+        subprocess.run(words, capture_output=True, check=True)
+    except (OSError, subprocess.CalledProcessError):
+        yield None
+        return
+
+    def resize(size: str) -> None:
+        subprocess.run(["mount", "-o", f"remount,size={size}", str(folder)], check=True)
+
+    try:
+        yield resize
+    finally:
+        subprocess.run(["umount", str(folder)], check=True)
+
+
+def _wait_until_full(server: Server, senders: list[Sender]) -> None:
+    """Return once records are refused for want of room and no sender gets on."""
+    end = time.monotonic() + 60
+    before = -1
+    while (now := sum(sender.next for sender in senders)) != before:
+        assert time.monotonic() < end, "the disk does not fill up"
+        before = now
+        time.sleep(0.5)
+    answer = httpx.post(f"{server.url}/records", json=record(0, "mill-lane-9"), timeout=20)
+    assert (answer.status_code, answer.json()["type"]) == (503, "/problems/store-full")
+    assert answer.headers["retry-after"] == "60"
+
+
+def test_kills_on_a_full_disk_lose_nothing_acknowledged(tmp_path: Path) -> None:
+    """A small disk of its own, or where none can be mounted the database's own limit."""
+    (tmp_path / "data").mkdir()
+    senders = [Sender("mill-lane-1", 1), Sender("mill-lane-2", 7), Sender("mill-lane-3", 60)]
+    with small_disk(tmp_path / "data", "2m") as resize:
+        words = () if resize else ("store.max_pages=100",)
+        server = Server(tmp_path, *words)
+        threads = [threading.Thread(target=sender.run) for sender in senders]
+        for sender, thread in zip(senders, threads, strict=True):
+            sender.url = server.url
+            thread.start()
+        try:
+            for _ in range(3):
+                _wait_until_full(server, senders)
+                server.kill()
+                server = Server(tmp_path, *words)
+                for sender in senders:
+                    sender.url = server.url
+            _wait_until_full(server, senders)
+            n_full = sum(sender.next for sender in senders)
+            assert n_full > 200
+            if resize:
+                resize("32m")
+            else:
+                server.stop()
+                server = Server(tmp_path)
+                for sender in senders:
+                    sender.url = server.url
+            end = time.monotonic() + 20
+            while sum(sender.next for sender in senders) < n_full + 200:
+                assert time.monotonic() < end, "with room again nothing is taken"
+                time.sleep(0.05)
+        finally:
+            for sender in senders:
+                sender.stopping = True
+            for thread in threads:
+                thread.join()
+            stored = {sender.source: fetch_all(server.url, sender.source) for sender in senders}
+            server.stop()
+        wanted = unbroken(tmp_path / "unbroken", senders)
+        for sender in senders:
+            n_known = len(sender.acknowledged)
+            assert scores(sender.acknowledged) == scores(wanted[sender.source])
+            assert scores(stored[sender.source][:n_known]) == scores(wanted[sender.source])
+        found, whole = (
+            standings(tmp_path / part / "records.sqlite3") for part in ("data", "unbroken/data")
+        )
+        for sender in senders:
+            if len(fetch_sqlite(tmp_path / "data", sender.source)) == sender.next:
+                assert found[sender.source] == whole[sender.source]
 
 
 def test_two_services_do_not_share_one_data_folder(tmp_path: Path) -> None:

@@ -180,13 +180,11 @@ def _sqlite_engine(path: Path, *, read_only: bool, max_pages: int) -> sa.Engine:
         if read_only:
             pragmas.append("query_only=ON")
         else:
-            pragmas += [
-                f"page_size={_PAGE_BYTES}",
-                "auto_vacuum=INCREMENTAL",
-                "journal_mode=WAL",
-                "synchronous=FULL",
-                "journal_size_limit=67108864",
-            ]
+            # Said of a store that is there, the second of these writes to its file, and then
+            # a service that was killed on a full disk could not even be read again.
+            if not connection.execute("PRAGMA page_count").fetchone()[0]:
+                pragmas += [f"page_size={_PAGE_BYTES}", "auto_vacuum=INCREMENTAL"]
+            pragmas += ["journal_mode=WAL", "synchronous=FULL", "journal_size_limit=67108864"]
             if max_pages:
                 pragmas.append(f"max_page_count={max_pages}")
         for pragma in pragmas:
