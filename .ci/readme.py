@@ -53,7 +53,8 @@ def put(text: str, name: str, lines: str) -> str:
 def tour(output: str) -> str:
     """Return some ten lines: each command with its last words, and the first alert."""
     lines = output.splitlines()
-    survey, learn, serve = (i for i, line in enumerate(lines) if line.startswith("$ oddbranch "))
+    begun = [i for i, line in enumerate(lines) if line.startswith("$ oddbranch ")]
+    survey, learn, serve = begun[:3]
     wrote = next(line for line in lines[survey:learn] if line.startswith("wrote "))
     levels = next(line for line in lines[learn:serve] if line.startswith("levels for "))
     model = next(line for line in lines[learn:serve] if line.startswith("model "))

@@ -71,6 +71,8 @@ def test_the_tables_are_the_demos_with_the_published_seed_and_every_incident() -
     assert heading.split()[0] == OURS
     for name in METHOD_ROWS:
         assert any(line.startswith(name) for line in tables), name
+    assert any(line.startswith("Budget: 2 alerts a day") for line in tables)
+    assert any(line.startswith("smallest fault caught in 90 %") for line in tables)
 
 
 def test_the_tour_and_the_tables_are_cut_from_the_output_alone(refresh: ModuleType) -> None:

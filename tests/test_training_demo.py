@@ -42,4 +42,6 @@ def test_the_demo_shows_the_whole_job_and_leaves_nothing_behind(tmp_path: Path) 
     assert re.search(r"^ +truth +\w", done.stdout, re.M)
     headings = re.findall(r"^(?:kind +spreads| +oddbranch) +", done.stdout, re.M)
     assert len(headings) == 2
+    assert "Budget: 2 alerts a day asked for" in done.stdout
+    assert "$ oddbranch drill quiet.csv" in done.stdout
     assert not list(tmp_path.iterdir())

@@ -15,6 +15,7 @@ from training.demo_plant import (
     STEP_S,
     Plant,
     joined,
+    quiet_station,
     simulate_plant,
 )
 from training.judging import Call
@@ -47,6 +48,19 @@ def test_requests_hold_every_live_record_in_the_order_of_time(plant: Plant) -> N
     assert len(times) == plant.n_live
     assert times == sorted(times)
     assert max(map(len, requests)) <= N_STATIONS * POST_HOURS * 3600 // STEP_S
+
+
+def test_the_station_of_the_drill_lives_the_same_days_without_incidents(plant: Plant) -> None:
+    (quiet,) = quiet_station(7, 1, 1)
+    live = next(chunk for chunk in plant.live if chunk.source == quiet.source)
+    own = [one for one in plant.incidents if one.source == quiet.source]
+    assert quiet.times_ns[0] >= BORDER_NS
+    there = np.isin(live.times_ns, quiet.times_ns)
+    same = np.isin(quiet.times_ns, live.times_ns)
+    before = live.times_ns[there] < min(one.start_ns for one in own)
+    assert before.any()
+    np.testing.assert_array_equal(live.values[there][before], quiet.values[same][before])
+    assert not np.array_equal(live.values[there], quiet.values[same], equal_nan=True)
 
 
 def test_joining_keeps_every_record_of_a_source_in_order() -> None:

@@ -6,6 +6,7 @@ import re
 
 import pytest
 
+from tests.learned import small_fleet
 from training.demo_alerts import Told
 from training.demo_text import (
     BANDS,
@@ -13,6 +14,7 @@ from training.demo_text import (
     OURS,
     alert_lines,
     band_of,
+    budget_words,
     duration,
     incident_table,
     method_table,
@@ -137,3 +139,15 @@ def test_what_others_caught_is_wrapped_and_counted() -> None:
 )
 def test_an_incident_is_in_the_band_of_its_size(size: float | None, band: int) -> None:
     assert band_of(size) == BANDS[band]
+
+
+def test_the_budget_is_told_with_what_was_used_of_it() -> None:
+    promise = small_fleet()[0].promise
+    assert promise is not None
+    words = budget_words(promise, 3, 2, judged(told(1.0), told(2.5), told(40.0)))
+    text = " ".join(words.split())
+    assert f"Budget: {promise.alerts_per_day:g} alerts a day asked for" in text
+    assert f"{promise.per_day():.2f} expected" in text
+    assert "3 in 8 days, 2 of them in incidents or their recovery, 1 false" in text
+    assert "raised 2 more, which are apart" in text
+    assert max(map(len, words.splitlines())) <= 100

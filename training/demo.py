@@ -22,28 +22,41 @@ from scoring.alerts import ADVICE
 from scoring.artefact import read_model
 from training.demo_alerts import Told, post_live, rival_calls
 from training.demo_plant import (
+    DRILL_DAYS,
     HISTORY_DAYS,
     LIVE_DAYS,
     N_STATIONS,
     STEP_S,
     Plant,
     plant_config,
+    quiet_station,
     simulate_plant,
 )
-from training.demo_text import OURS, alert_lines, incident_table, method_table, where_others_win
+from training.demo_text import (
+    OURS,
+    alert_lines,
+    budget_words,
+    incident_table,
+    method_table,
+    where_others_win,
+)
+from training.drill import drill_command
 from training.judging import Verdict
 from training.learn import learn_command
 from training.plant.channels import INSTRUMENTS
 from training.plant.simulate import incidents_of
 from training.plant.utility import UTILITY
 from training.plant.writers import write_incidents, write_wide_csv
+from training.promise import Promise
 from training.served import Served, serve
 from training.settings import LearnSettings
 from training.survey import survey_command
 
 # Figures are published with seeds from 9000 up, which nobody looks at while tuning.
 FIGURE_SEED: Final = 9001
-_HISTORY, _CHANNELS, _MODEL = "history.csv", "channels.toml", "model"
+_HISTORY, _CHANNELS, _MODEL, _QUIET = "history.csv", "channels.toml", "model", "quiet.csv"
+# Enough for a first look, in half the time of the command's own number.
+DRILL_TRIALS: Final = 20
 
 
 def add_data_sheets(path: Path) -> None:
@@ -79,7 +92,11 @@ def demo_command(once: bool, seed: int, folder: Path | None) -> None:
         click.echo(f"\n$ oddbranch serve --model {_MODEL} --data data --port 0")
         with serve(place, ("--model", _MODEL, "--data", "data")) as served:
             click.echo(f"serving on {served.url} in process {served.process.pid}\n")
-            _show_tables(_judge_all(plant, _show_live(served, plant)), seed)
+            alerts = _show_live(served, plant)
+            judged = _judge_all(plant, alerts)
+            _show_tables(judged, seed)
+            _show_budget(alerts, judged[OURS])
+            _drill(seed)
             click.echo(f"\n{ADVICE}\nThe demo took {time.perf_counter() - began_s:.0f} s.")
             if not once:
                 _keep_serving(served, place)
@@ -146,6 +163,22 @@ def _show_tables(judged: Mapping[str, Verdict], seed: int) -> None:
     click.echo(method_table(judged))
     click.echo()
     click.echo("\n".join(where_others_win(judged)))
+
+
+def _show_budget(alerts: list[Told], ours: Verdict) -> None:
+    promise = Promise.from_data(read_model(Path(_MODEL)).about["promise"])
+    n_used = sum(alert.in_budget for alert in alerts)
+    click.echo("\n" + budget_words(promise, n_used, len(alerts) - n_used, ours))
+
+
+def _drill(seed: int) -> None:
+    """Ask beforehand which faults of one station's instruments would be caught."""
+    n_records = write_wide_csv(quiet_station(seed), Path(_QUIET))
+    click.echo(
+        f"\n{DRILL_DAYS} quiet days of one station that nothing learned from: {n_records} records\n"
+    )
+    words = ("--model", _MODEL, "--out", "drill", "--trials", str(DRILL_TRIALS))
+    _run("drill", drill_command, _QUIET, *words)
 
 
 def _keep_serving(served: Served, place: Path) -> None:

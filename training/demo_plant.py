@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from typing import Any, Final
 
@@ -22,6 +22,8 @@ STEP_S: Final = 60
 N_STATIONS: Final = 6
 HISTORY_DAYS: Final = 28
 LIVE_DAYS: Final = 8
+# Days without incidents after the history, for the drill.
+DRILL_DAYS: Final = 4
 INCIDENTS_PER_STATION_DAY: Final = 2.0
 # Two hours after an incident's end its traces (temperatures, the reservoir's level) are
 # gone, and the next begins later still.
@@ -92,6 +94,15 @@ def simulate_plant(
     ]
     known.sort(key=lambda one: (one.source, one.start_ns))
     return Plant(chunks[:border], chunks[border:], tuple(known))
+
+
+def quiet_station(
+    seed: int, history_days: int = HISTORY_DAYS, drill_days: int = DRILL_DAYS
+) -> tuple[Chunk, ...]:
+    """Return the first station's days after the history as they were without incidents."""
+    config = plant_config(seed, history_days, drill_days)
+    config = replace(config, n_stations=1, quiet_days=config.days)
+    return tuple(simulate(config, chunk_hours=24.0))[history_days:]
 
 
 def joined(chunks: Sequence[Chunk]) -> dict[str, Records]:

@@ -13,10 +13,12 @@ from typing import Final
 
 from training.channel_toml import text_table
 from training.demo_alerts import Told
-from training.demo_plant import RECOVERY_NS
+from training.demo_plant import LIVE_DAYS, RECOVERY_NS
 from training.judging import Sum, Verdict
 from training.known import Known
 from training.plant.incidents import KINDS
+from training.promise import Promise
+from training.promise_words import interval_words
 
 _WIDTH: Final = 100
 _INDENT: Final = 18
@@ -151,6 +153,23 @@ def method_table(judged: Mapping[str, Verdict]) -> str:
         ["quiet time in alert", *(f"{100 * one.false_share:.2f} %" for one in every)],
     ]
     return text_table(["", *judged], rows)
+
+
+def budget_words(promise: Promise, n_used: int, n_apart: int, ours: Verdict) -> str:
+    """Return what was promised and what was used of it, incidents included.
+
+    n_used: alerts that count against the budget, n_apart: those that do not.
+    """
+    low, high = promise.interval(LIVE_DAYS)
+    n_false = len(ours.false)
+    words = (
+        f"Budget: {promise.alerts_per_day:g} alerts a day asked for, {promise.per_day():.2f} "
+        f"expected, {interval_words(low, high)} in {LIVE_DAYS} days without incidents. Used: "
+        f"{n_used} in {LIVE_DAYS} days, {n_used - n_false} of them in incidents or their "
+        f"recovery, {n_false} false. Stuck and silent channels raised {n_apart} more, which are "
+        "apart from the budget."
+    )
+    return textwrap.fill(words, _WIDTH)
 
 
 def where_others_win(judged: Mapping[str, Verdict]) -> list[str]:
