@@ -54,9 +54,14 @@ def test_the_planted_trouble_is_found_and_its_flow_suspected() -> None:
     assert all("speed" in row[6] for row in rows[:2])
 
 
+def without_trouble() -> dict[str, Learned]:
+    """Return what was learned as if nothing had been left out."""
+    return {s: replace(one, left_out=[]) for s, one in small_fleet()[0].learned.items()}
+
+
 def with_trouble() -> dict[str, Learned]:
     """Return what was learned as if the planted trouble of `east` had been left out."""
-    learned = dict(small_fleet()[0].learned)
+    learned = without_trouble()
     worst = next(w for w in learned["east"].held_out.worst if w.suspect == 1)
     stretches = [
         Stretch("east", worst.time_ns - 60 * NS_PER_S, worst.time_ns + 60 * NS_PER_S, 3, 31.4),
@@ -80,13 +85,12 @@ def test_stretches_left_out_are_listed_with_both_rates_the_most_surprising_first
 
 
 def test_nothing_left_out_is_said() -> None:
-    result = small_fleet()[0]
-    assert not any(one.left_out for one in result.learned.values())
-    assert "None: no stretch" in trouble_section(result.learned, result.curve, 60.0).pieces[0]
+    curve = small_fleet()[0].curve
+    assert "None: no stretch" in trouble_section(without_trouble(), curve, 60.0).pieces[0]
 
 
 def test_a_record_in_a_stretch_that_was_left_out_is_marked() -> None:
-    plain = "".join(worst_section(TABLE, small_fleet()[0].learned).pieces)
+    plain = "".join(worst_section(TABLE, without_trouble()).pieces)
     marked = "".join(worst_section(TABLE, with_trouble()).pieces)
     assert "* marks records" in marked
     assert "* marks records" not in plain
