@@ -53,7 +53,7 @@ class Scratch(NamedTuple):
 
 
 @njit(cache=True, nogil=True)
-def _scratch(t: TreeArrays) -> Scratch:
+def scratch(t: TreeArrays) -> Scratch:
     n = t.n_bins.shape[0]
     marks = np.zeros((2, n), np.bool_)
     ints = np.empty((2, n), np.int64)
@@ -123,11 +123,15 @@ def _plain(t: TreeArrays, row: BinRows, n: int, s: Scratch) -> float:
         u = s.order[k]
         if t.lowest[u] < LN_LOW:
             return np.nan
-        vec[u] = t.marginal[u]
+        own = np.uint64(u) * width
+        for j in range(width):
+            flat[own + j] = t.marginal[u, j]
         for slot in range(t.start[u], t.start[u + 1]):
             b = row[t.neighbour[slot]]
             if b != MISSING:
-                vec[u] *= t.ratio[slot, b]
+                at = (np.uint64(slot) * width + np.uint64(b)) * width
+                for j in range(width):
+                    flat[own + j] *= ratio[at + j]
     for k in range(n - 1, -1, -1):
         u = s.order[k]
         low, high = np.inf, 0.0
@@ -181,7 +185,7 @@ def _logs(t: TreeArrays, row: BinRows, n: int, s: Scratch) -> None:
 
 
 @njit(cache=True, nogil=True)
-def _belief(t: TreeArrays, node: int, row: BinRows, s: Scratch) -> float:
+def believe(t: TreeArrays, node: int, row: BinRows, s: Scratch) -> float:
     """Put p(bins of `node` | observed) into vec[node]; return the component's log sum.
 
     `node` must be hidden in `row`. The component's nodes stay marked in `seen`.
@@ -228,7 +232,7 @@ def _evidence(t: TreeArrays, row: BinRows, s: Scratch) -> float:
         s.seen[:] = False
         for i in range(row.shape[0]):
             if row[i] == MISSING and not s.seen[i]:
-                total += _belief(t, i, row, s)
+                total += believe(t, i, row, s)
     return total
 
 
@@ -274,7 +278,7 @@ def evidence_rows(t: TreeArrays, rows: BinRows) -> Floats:
     rows: (n, n_nodes) uint8.
     """
     n, n_nodes = rows.shape
-    strip, s = min(STRIP, n), _scratch(t)
+    strip, s = min(STRIP, n), scratch(t)
     bins, gaps = np.empty((n_nodes, strip), np.uint8), np.empty(strip, np.bool_)
     edge_nats, out = np.empty((t.left.shape[0], strip)), np.empty(n)
     for first in range(0, n, STRIP):
@@ -365,7 +369,7 @@ def _removed(t: TreeArrays, i: int, row: BinRows, evidence: float, s: Scratch) -
     b = row[i]
     row[i] = MISSING
     s.seen[:] = False
-    _belief(t, i, row, s)
+    believe(t, i, row, s)
     value = math.log(s.vec[i, b]) if s.vec[i, b] > 0.0 else -np.inf
     if value < -500.0:
         # The normalised belief has left the float range; the evidences have not.
@@ -388,7 +392,7 @@ def removal_rows(
     n, n_nodes = rows.shape
     n_instruments = group_start.shape[0] - 1
     work, row = np.empty(t.marginal.shape[1]), np.empty(n_nodes, np.uint8)
-    strip, s = min(STRIP, n), _scratch(t)
+    strip, s = min(STRIP, n), scratch(t)
     bins, gaps = np.empty((n_nodes, strip), np.uint8), np.empty(strip, np.bool_)
     edge_nats, alone = np.empty((t.left.shape[0], strip)), np.empty((n_nodes, strip))
     evidence, own = np.empty(n), np.full((n, n_instruments), np.nan)
@@ -425,7 +429,7 @@ def belief_row(t: TreeArrays, row: BinRows, node: int) -> Floats:
 
     `node` must be MISSING in `row`, with whatever else is to be left out.
     """
-    s = _scratch(t)
-    _belief(t, node, row, s)
+    s = scratch(t)
+    believe(t, node, row, s)
     belief: Floats = s.vec[node]
     return belief

@@ -19,7 +19,7 @@ from scoring.density import belief_of, removal_of, rows_by_part
 from scoring.derived import Carry, derive
 from scoring.excess import ExcessScale
 from scoring.expected import shortest_interval
-from scoring.kernels import belief_row
+from scoring.kernels import believe, scratch
 from scoring.model import Member, Model
 from scoring.standing import Standing
 from scoring.sustained import sustain
@@ -291,6 +291,8 @@ def _intervals(
     n = rows.shape[0]
     low, high, best = np.full(n, np.nan), np.full(n, np.nan), np.full(n, np.nan)
     hidden = np.empty(rows.shape[1], np.uint8)
+    # Made once: room for a row costs as much as the row.
+    s = scratch(t)
     for r in range(n):
         i = int(suspect[r])
         if i < 0 or borders[i, 0] != borders[i, 0]:
@@ -300,6 +302,8 @@ def _intervals(
         hidden[i] = MISSING
         for k in range(group_start[i], group_start[i + 1]):
             hidden[group_nodes[k]] = MISSING
-        p = belief_row(t, hidden, i)[: n_borders + 1]
+        s.seen[:] = False
+        believe(t, i, hidden, s)
+        p = s.vec[i, : n_borders + 1]
         low[r], high[r], best[r] = shortest_interval(p, borders[i, :n_borders], resolution[i])
     return low, high, best
