@@ -56,11 +56,20 @@ def test_the_promise_follows_the_number_of_sources() -> None:
 def test_the_interval_is_the_ratio_of_two_counts_widened_by_clusters() -> None:
     even = a_promise(by_day=[1, 2, 1, 1, 2, 1, 1, 2, 1, 1])
     assert even.dispersion == 1.0
-    assert even.interval(7) == count_to_come(even.n_seen, 30.0, 21.0)
+    steady = replace(even, slow=())
+    assert steady.interval(7) == count_to_come(even.n_seen, 30.0, 21.0)
     uneven = a_promise(by_day=[0, 0, 0, 6, 7, 0, 0, 0, 0, 0])
     assert uneven.dispersion > 5
     assert uneven.busiest_days == 1
     assert uneven.interval(7)[1] > 1.5 * even.interval(7)[1]
+
+
+def test_a_season_that_is_missing_widens_the_interval_the_further_it_looks() -> None:
+    promise = a_promise(by_day=[1, 2, 1, 1, 2, 1, 1, 2, 1, 1])
+    steady = replace(promise, slow=())
+    for n_days, factor in ((5, 1.5), (20, 3.0)):
+        assert promise.interval(n_days)[0] == steady.interval(n_days)[0]
+        assert promise.interval(n_days)[1] == pytest.approx(factor * steady.interval(n_days)[1])
 
 
 def test_a_promise_beyond_the_data_expects_what_the_tail_expects() -> None:

@@ -96,7 +96,8 @@ def season_words(promise: Promise) -> str:
         named += f" and {len(promise.slow) - _MOST_SLOW} more"
     return (
         f"the history shows only part of how far {named} can go: outside of what it has seen, in "
-        "another season or weather, expect more alerts than promised until the model is renewed"
+        "another season or weather, expect more alerts than promised until the model is renewed; "
+        "the intervals are widened for it, the more the further they look ahead"
     )
 
 
