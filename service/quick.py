@@ -28,8 +28,6 @@ _GIVE_UP = -1
 _MAX_SOURCES = 256
 _MAX_SOURCE_BYTES = 200
 _MAX_ABS_READING = 1e100
-# Rows for which memory is asked at once; a record is hardly shorter than this.
-_LEAST_RECORD_BYTES = 48
 
 _QUOTE, _BACKSLASH, _COLON, _COMMA = ord('"'), ord("\\"), ord(":"), ord(",")
 _OPEN, _CLOSE, _LEFT, _RIGHT = ord("{"), ord("}"), ord("["), ord("]")
@@ -71,7 +69,8 @@ class QuickParser:
         if not self.layout.names:
             return None
         cells = np.frombuffer(body, dtype=np.uint8)
-        n_max = 1 if form == ONE else len(body) // _LEAST_RECORD_BYTES + 1
+        # A plain record has the member once, so memory is asked for no more rows than come.
+        n_max = 1 if form == ONE else max(1, body.count(b'"readings"'))
         times = np.empty(n_max, dtype=np.int64)
         codes = np.empty(n_max, dtype=np.int64)
         values = np.full((n_max, len(self.layout.names)), np.nan)

@@ -3,7 +3,8 @@
 One record: requests a second against an endpoint that checks the same body and answers a
 constant. A thousand records of 24 channels: records a second against an endpoint that
 parses the body with orjson and answers a constant list. Ours are stored on disk before
-they are answered. Runs of both alternate, because a busy machine is busy for both.
+they are answered. Runs of both alternate, because a busy machine is busy for both; beside
+the rates stand those of each server's own processor time, in which a neighbour counts less.
 """
 
 from __future__ import annotations
@@ -18,7 +19,7 @@ import tempfile
 import time
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -43,6 +44,10 @@ N_BATCH_SOURCES = 6
 NAMES = [f"channel_{i:02d}" for i in range(N_CHANNELS)]
 START_S = 1_764_561_600
 ONE_BUDGET, MANY_BUDGET, MANY_AIM = 0.60, 0.20, 0.30
+# Processor seconds until it listens, with kernels in the cache; on a calm machine time too.
+START_BUDGET_S = 3.0
+# Of an answer at half load, in times the middle one of full load: waiting, not working.
+P99_LIMIT = 10.0
 
 
 def make_model(folder: Path) -> tuple[Model, np.ndarray]:
@@ -117,16 +122,33 @@ def server(words: Sequence[str | Path], cwd: Path) -> Iterator[tuple[int, int, f
         process.stdout.close()
 
 
+def cpu_s(pid: int) -> float:
+    """Return the processor seconds of a process so far."""
+    fields = Path(f"/proc/{pid}/stat").read_text(encoding="ascii").rpartition(")")[2].split()
+    return (int(fields[11]) + int(fields[12])) / os.sysconf("SC_CLK_TCK")
+
+
+@dataclass(frozen=True)
+class Side:
+    """One of the two servers. start_s, start_cpu_s: until it said where it listens."""
+
+    port: int
+    pid: int
+    start_s: float
+    start_cpu_s: float
+
+
 @contextmanager
-def both(folder: Path) -> Iterator[tuple[int, int, int, Maker]]:
-    """Run ours and the bare one; yield their ports, our process id and a maker."""
+def both(folder: Path) -> Iterator[tuple[Side, Side, Maker]]:
+    """Run ours and the bare one; yield both and a maker of records."""
     _, rows = make_model(folder / "model")
     ours: list[str | Path] = [sys.executable, ROOT / "oddbranch.py", "serve", "--port", "0"]
     ours += ["--model", folder / "model", "--data", folder / "data"]
     bare = [sys.executable, "-m", "tests.bench.bare_app"]
-    with server(ours, ROOT) as (port, pid, start_s), server(bare, ROOT) as (bare_port, _, _):
-        sys.stdout.write(f"start-up with a warm cache: {start_s:.2f} s\n")
-        yield port, bare_port, pid, Maker(rows)
+    with server(ours, ROOT) as (port, pid, start_s):
+        us = Side(port, pid, start_s, cpu_s(pid))
+        with server(bare, ROOT) as (port, pid, start_s):
+            yield us, Side(port, pid, start_s, cpu_s(pid)), Maker(rows)
 
 
 def rate(result: Result, n_records: int = 1) -> float:
@@ -135,27 +157,41 @@ def rate(result: Result, n_records: int = 1) -> float:
     return result.n_answers * n_records / result.seconds
 
 
-def measure(n_rounds: int = 5, n_ones: int = 3000, n_many: int = 25) -> tuple[float, float]:
+@dataclass(frozen=True)
+class Figures:
+    """What one run found. half_p99: in times the middle answer of full load."""
+
+    one: float
+    many: float
+    start_cpu_s: float
+    half_p99: float
+
+
+def measure(n_rounds: int = 5, n_ones: int = 3000, n_many: int = 25) -> Figures:
     """Print both ratios with their parts and return them."""
     folder = Path(tempfile.mkdtemp(prefix="oddbranch-bench-"))
     try:
-        with both(folder) as (port, bare_port, _, maker):
+        with both(folder) as (us, bare, maker):
+            sys.stdout.write(
+                f"start-up with a warm cache: {us.start_s:.2f} s, "
+                f"processor {us.start_cpu_s:.2f} s\n"
+            )
             one = _ratio(
                 "one record", n_rounds, 64, 1,
-                lambda: [post(bare_port, "/one", body) for body in maker.ones(n_ones)],
-                lambda: [post(port, "/records", body) for body in maker.ones(n_ones)],
-                (bare_port, port),
+                lambda: [post(bare.port, "/one", body) for body in maker.ones(n_ones)],
+                lambda: [post(us.port, "/records", body) for body in maker.ones(n_ones)],
+                (bare, us),
             )  # fmt: skip
             many = _ratio(
                 "1,000 x 24", n_rounds, 4, N_BATCH,
-                lambda: [post(bare_port, "/many", body) for body in maker.many(n_many)] * 2,
-                lambda: [post(port, "/records", body) for body in maker.many(n_many)],
-                (bare_port, port),
+                lambda: [post(bare.port, "/many", body) for body in maker.many(n_many)] * 2,
+                lambda: [post(us.port, "/records", body) for body in maker.many(n_many)],
+                (bare, us),
             )  # fmt: skip
-            _half_load(port, maker, n_ones)
+            half_p99 = _half_load(us.port, maker, n_ones)
     finally:
         shutil.rmtree(folder, ignore_errors=True)
-    return one, many
+    return Figures(one, many, us.start_cpu_s, half_p99)
 
 
 def _ratio(
@@ -165,26 +201,31 @@ def _ratio(
     n_records: int,
     make_bare: Callable[[], list[bytes]],
     make_ours: Callable[[], list[bytes]],
-    ports: tuple[int, int],
+    sides: tuple[Side, Side],
 ) -> float:
-    bare_rates: list[float] = []
-    our_rates: list[float] = []
+    rates: tuple[list[float], list[float]] = ([], [])
+    per_core: tuple[list[float], list[float]] = ([], [])
     for _ in range(n_rounds):
-        bare_rates.append(rate(run(ports[0], make_bare(), n_connections), n_records))
-        our_rates.append(rate(run(ports[1], make_ours(), n_connections), n_records))
-    ratios = [ours / bare for ours, bare in zip(our_rates, bare_rates, strict=True)]
+        for k, (side, make) in enumerate(zip(sides, (make_bare, make_ours), strict=True)):
+            requests = make()
+            before = cpu_s(side.pid)
+            rates[k].append(rate(run(side.port, requests, n_connections), n_records))
+            per_core[k].append(len(requests) * n_records / (cpu_s(side.pid) - before))
+    ratios = [ours / bare for bare, ours in zip(*rates, strict=True)]
     ratio = statistics.median(ratios)
+    bare, ours = (statistics.median(found) for found in rates)
+    bare_core, our_core = (statistics.median(found) for found in per_core)
     sys.stdout.write(
-        f"{name}: {statistics.median(our_rates):,.0f} records/s stored, "
-        f"{statistics.median(bare_rates):,.0f} bare, ratio {ratio:.2f} "
-        f"({', '.join(f'{r:.2f}' for r in ratios)})\n"
+        f"{name}: {ours:,.0f} records/s stored, {bare:,.0f} bare, ratio {ratio:.2f} "
+        f"({', '.join(f'{r:.2f}' for r in ratios)}); a second of one core {our_core:,.0f}, "
+        f"{bare_core:,.0f} bare, ratio {our_core / bare_core:.2f}\n"
     )
     sys.stdout.flush()
     return ratio
 
 
-def _half_load(port: int, maker: Maker, n_ones: int) -> None:
-    """Print p50 and p99 at about half of what a full load got through."""
+def _half_load(port: int, maker: Maker, n_ones: int) -> float:
+    """Print p50 and p99 at about half of a full load; return p99 over the full load's p50."""
     n_connections = 16
     full = run(port, [post(port, "/records", body) for body in maker.ones(n_ones)], n_connections)
     gap_s = full.seconds / full.n_answers * n_connections
@@ -194,6 +235,7 @@ def _half_load(port: int, maker: Maker, n_ones: int) -> None:
         f"at {share:.0%} of full load: p50 {half.percentile(0.5) * 1e3:.1f} ms, "
         f"p99 {half.percentile(0.99) * 1e3:.1f} ms\n"
     )
+    return half.percentile(0.99) / full.percentile(0.5)
 
 
 def resident_mb(pid: int) -> float:
@@ -209,20 +251,22 @@ def main() -> None:
 
 @pytest.mark.bench
 def test_the_service_keeps_up_with_its_budgets() -> None:
-    one, many = measure()
-    assert one >= ONE_BUDGET
-    assert many >= MANY_BUDGET, f"the aim is {MANY_AIM}"
+    found = measure()
+    assert found.one >= ONE_BUDGET
+    assert found.many >= MANY_BUDGET, f"the aim is {MANY_AIM}"
+    assert found.start_cpu_s < START_BUDGET_S
+    assert found.half_p99 < P99_LIMIT
 
 
 @pytest.mark.soak
 def test_memory_stays_flat_over_five_million_records(tmp_path: Path) -> None:
     n_bodies = int(os.environ.get("ODDBRANCH_TEST_SOAK_BATCHES", "5000"))
-    with both(tmp_path) as (port, _, pid, maker):
+    with both(tmp_path) as (us, _, maker):
         sizes = []
         for start in range(0, n_bodies, 50):
             bodies = maker.many(min(50, n_bodies - start))
-            rate(run(port, [post(port, "/records", body) for body in bodies], 4), N_BATCH)
-            sizes.append(resident_mb(pid))
+            rate(run(us.port, [post(us.port, "/records", body) for body in bodies], 4), N_BATCH)
+            sizes.append(resident_mb(us.pid))
         sys.stdout.write(f"memory in MB after each 50,000 records: {[round(s) for s in sizes]}\n")
     tenth = max(2, len(sizes) // 10)
     # Caches fill in the first tenth; from there on nothing may grow with records.

@@ -22,7 +22,7 @@ import pytest
 
 from scoring.artefact import read_model, write_model
 from tests.bench.http_client import post, run
-from tests.bench.test_bench_http import N_BATCH, Maker, make_model, resident_mb, server
+from tests.bench.test_bench_http import N_BATCH, Maker, cpu_s, make_model, resident_mb, server
 from tests.conftest import ROOT
 from tests.service_postgres import cluster
 
@@ -50,12 +50,6 @@ class Sizes:
             + (f", {self.kb_per_member:.0f} KB a member of its own" if self.kb_per_member else "")
             + "\n"
         )
-
-
-def cpu_s(pid: int) -> float:
-    """Return the processor seconds of a process so far."""
-    fields = Path(f"/proc/{pid}/stat").read_text(encoding="ascii").rpartition(")")[2].split()
-    return (int(fields[11]) + int(fields[12])) / os.sysconf("SC_CLK_TCK")
 
 
 def per_core(port: int, pid: int, bodies: list[bytes], n_records: int) -> float:
