@@ -437,6 +437,7 @@ def test_a_store_of_the_first_tables_goes_on(tmp_path: Path, models: Path, clock
         for statement in (
             "DROP TABLE alert", "DROP TABLE action", "DROP TABLE flood",
             "ALTER TABLE source DROP COLUMN alert_standing",
+            "ALTER TABLE pruned DROP COLUMN n_alerts", "ALTER TABLE pruned DROP COLUMN n_actions",
             "UPDATE alembic_version SET version_num = '001'",
         ):  # fmt: skip
             connection.cursor().execute(statement)

@@ -121,9 +121,8 @@ def test_the_data_hold_the_same_and_survive_json(night: Night) -> None:
     assert data["verdict"] == "refused"
     assert [one["passed"] for one in data["answers"]] == [True, False]
     assert data["history"]["left_out"] == {"cleaning": 60}
-    assert [one["why"] for one in data["history"]["left_out_of_tables"]] == [
-        "31 nats above the usual", "in alert, not labelled",
-    ]  # fmt: skip
+    why = [one["why"] for one in data["history"]["left_out_of_tables"]]
+    assert {"31 nats above the usual", "in alert, not labelled"} <= set(why)
     assert data["tree"][0]["gained"] is True
     assert data["drill"][0]["new"] is None
     assert data["neighbours"][0]["channel"] == SPITEFUL
