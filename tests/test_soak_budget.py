@@ -39,7 +39,7 @@ from training.settings import LearnSettings
 
 pytestmark = pytest.mark.soak
 
-SEEDS = range(9100, 9110)
+SEEDS = range(9110, 9120)
 N_STATIONS, STEP_S = 6, 60
 HISTORY_DAYS, QUIET_DAYS, INCIDENT_DAYS = 30, 60, 15
 # Incidents a station and day; half of their sizes lie below three spreads.
