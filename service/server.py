@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import socket
+import ssl
 
 import click
 import uvicorn
@@ -21,8 +22,36 @@ class CannotListen(OddbranchError):
     """The address is taken or is not this machine's."""
 
 
+def check_tls(settings: Settings) -> None:
+    """Refuse files that no TLS can be made of, before anyone is told an address."""
+    certificate, key = settings.server.tls_certificate, settings.server.tls_key
+    if certificate is None and key is None:
+        return
+    if certificate is None or key is None:
+        raise CannotListen(
+            "TLS needs both server.tls_certificate and server.tls_key; give the other file too, or "
+            "neither"
+        )
+    for path in (certificate, key):
+        try:
+            path.open("rb").close()
+        except OSError as error:
+            raise CannotListen(f"{path}: cannot be read for TLS: {error.strerror}") from None
+    try:
+        context = ssl.SSLContext(ssl.PROTOCOL_TLS_SERVER)
+        # A service has nobody to ask for a password, and must not stand still on it.
+        context.load_cert_chain(certificate, key, password=lambda: "")
+    except ssl.SSLError as error:
+        why = (error.reason or "no PEM").lower().replace("_", " ")
+        raise CannotListen(
+            f"{certificate} and {key}: TLS cannot use them: {why}; a certificate chain and the "
+            "private key that belongs to it are wanted, both PEM and the key without a password"
+        ) from None
+
+
 def listen(settings: Settings) -> socket.socket:
     """Return a bound socket; raises CannotListen."""
+    check_tls(settings)
     host, port = settings.server.host, settings.server.port
     try:
         found = socket.getaddrinfo(host, port, type=socket.SOCK_STREAM, flags=socket.AI_PASSIVE)

@@ -45,6 +45,21 @@ def test_the_curl_recipe_posts_a_record(tmp_path: Path) -> None:
         assert n_stored(server) == 1
 
 
+def test_the_recipe_for_lines_posts_a_file(tmp_path: Path) -> None:
+    need_program("curl")
+    lines = [json.dumps(record(i / 6)) for i in range(2500)]
+    lines[1200] = "nonsense"
+    (tmp_path / "records.ndjson").write_text("\n".join(lines) + "\n", encoding="utf-8")
+    with serving(tmp_path) as server:
+        text = recipe("lines").replace("http://127.0.0.1:8321", server.url)
+        subprocess.run(["sh", "-c", text], cwd=tmp_path, check=True)
+        assert n_stored(server) == 2499
+    answers = (tmp_path / "answers.ndjson").read_text(encoding="utf-8").splitlines()
+    refused = [json.loads(line) for line in answers if "problem" in line]
+    assert len(answers) == 2500
+    assert [item["index"] for item in refused] == [1200]
+
+
 def test_the_httpx_recipe_posts_an_array(tmp_path: Path) -> None:
     with serving(tmp_path) as server:
         text = recipe("httpx").replace("http://127.0.0.1:8321", server.url)
