@@ -60,7 +60,7 @@ def test_files_that_no_tls_can_be_made_of_are_refused_with_a_sentence(
         with pytest.raises(CannotListen, match=sentence):
             listen(settings_for(tmp_path, server={"port": 0, **files}))
     locked = tmp_path / "locked.pem"
-    words = [need_program("openssl"), "ec", "-in", key, "-aes256", "-passout", "pass:x"]
+    words = [need_program("openssl"), "ec", "-in", str(key), "-aes256", "-passout", "pass:x"]
     subprocess.run([*words, "-out", locked], capture_output=True, check=True)
     with pytest.raises(CannotListen, match="the key without a password"):
         check_tls(
