@@ -58,6 +58,9 @@ def test_an_open_interval_is_said_in_words(low: float, high: float, text: str) -
 def test_a_state_is_expected_in_its_likeliest_word() -> None:
     words = {"running": 0.126, "stopped": 0.874}
     assert expected_text(Expected(math.nan, math.nan, math.nan, words), PUMP) == "stopped (87 %)"
+    words = {"running": 1e-120, "stopped": 1e-9}
+    text = expected_text(Expected(math.nan, math.nan, math.nan, words), PUMP)
+    assert text == "no known word fits"
 
 
 def test_counts_and_shares() -> None:

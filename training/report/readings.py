@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from typing import Final
 
 import numpy as np
 
@@ -28,6 +29,10 @@ def percent_text(share: float, decimals: int = 1) -> str:
     return f"{100.0 * share:.{decimals}f} %"
 
 
+# The likeliest word of a state is told from this probability on.
+LEAST_LIKELY: Final = 0.05
+
+
 def count_text(n: float) -> str:
     """Return a count with its thousands apart."""
     return f"{n:,.0f}"
@@ -48,6 +53,10 @@ def expected_text(expected: Expected, channel: Channel) -> str:
     """Return what a channel should have read: an interval, or a state's likeliest word."""
     if expected.words:
         word = max(expected.words, key=lambda w: expected.words[w])  # type: ignore[index]
+        # What is left over is the share of a word never seen: beside these readings all known
+        # ones are next to impossible.
+        if expected.words[word] < LEAST_LIKELY:
+            return "no known word fits"
         return f"{word} ({percent_text(expected.words[word], 0)})"
     low, high = expected.low, expected.high
     unit = f" {channel.unit}" if channel.unit else ""
