@@ -11,9 +11,10 @@ import signal
 import subprocess
 import sys
 from collections.abc import Iterator
+from contextlib import contextmanager
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import Any
+from typing import Any, NoReturn
 
 import numpy as np
 import pytest
@@ -27,6 +28,8 @@ from tests.models import a_model
 from tests.service_http import NOW_NS, START_S, Api, record, running
 from tests.stored_alerts import put_alert
 from training import nightly
+from training.hands import Hands, Here
+from training.history.options import BadHistory
 from training.kept import KeptModels
 from training.night_files import NightFiles
 from training.nightly import Failed, Refused, nightly_command
@@ -119,6 +122,41 @@ def changed(before: str, after: str) -> None:
     """Change the site's settings."""
     assert before in SETTINGS
     Path("nightly.toml").write_text(SETTINGS.replace(before, after), encoding="utf-8")
+
+
+@pytest.mark.usefixtures("site")
+def test_a_cluster_that_cannot_be_had_fails_the_night(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setitem(sys.modules, "distributed", None)
+    words = ["--config", "nightly.toml", "--cluster", "tcp://127.0.0.1:1"]
+    result = CliRunner().invoke(nightly_command, words, standalone_mode=False)
+    assert isinstance(result.exception, Failed)
+    assert "--cluster tcp://127.0.0.1:1: needs Dask" in str(result.exception)
+    assert metrics()['oddbranch_nightly_verdict{verdict="failed"}'] == 1
+
+
+@pytest.mark.usefixtures("api")
+def test_those_at_a_clusters_address_are_given_the_learning(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    given: list[object] = []
+    workers = Here()
+
+    def learn(*words: object) -> NoReturn:
+        given.append(words[-1])
+        raise BadHistory("here", "that was all")
+
+    @contextmanager
+    def at(address: str | None) -> Iterator[Hands]:
+        given.append(address)
+        yield workers
+
+    monkeypatch.setattr("training.nightly.learn_model", learn)
+    monkeypatch.setattr("training.nightly.cluster_at", at)
+    words = ["--config", "nightly.toml", "--cluster", "tcp://there:8786"]
+    result = CliRunner().invoke(nightly_command, words, standalone_mode=False)
+    assert "that was all" in str(result.exception)
+    assert given[0] == "tcp://there:8786"
+    assert given[1] is workers
 
 
 @pytest.mark.usefixtures("api")

@@ -15,12 +15,16 @@ from numpy.typing import NDArray
 from scoring.artefact import write_model
 from scoring.channels import ChannelTable, load_channels
 from scoring.model import Levels, Model
+from training.cluster import cluster_at, cluster_option
+from training.hands import HERE, Hands
 from training.history.files import history_n_bytes
 from training.history.flags import history_flags, history_options
+from training.history.reading import Advances
 from training.history.spool import Spool, spool_history
+from training.history.spool_parts import parts_read_by
 from training.learn_report import learn_page
 from training.levels import Curve, set_levels
-from training.members import Learned, has_enough, learn_fleet, learn_member, share_tables
+from training.members import Learned, has_enough, learn_fleet, learn_members, share_tables
 from training.progress import Progress
 from training.promise import Promise, promise_of
 from training.promise_words import promise_lines
@@ -54,23 +58,26 @@ def learn_model(
     spool: Spool,
     table: ChannelTable,
     settings: LearnSettings,
-    progress: Progress | None = None,
+    progress: Advances | None = None,
     in_alert: dict[str, Ints] | None = None,
+    hands: Hands = HERE,
 ) -> LearnResult:
     """Learn a model from spooled history.
 
     Sources with too few records of their own are left to the fleet's member.
     in_alert: per source (n, 2) first and last times in ns of stretches that tables must not
-    use; levels count them.
+    use; levels count them. hands: who works on the records; whoever it is, the model is the
+    same. Raises NoCluster where they cannot.
     """
     began = time.perf_counter()
     step_s = table.step_s or DEFAULT_STEP_S
-    rows = Rows(spool, table, spool.sources, step_s, in_alert or {})
+    rows = Rows(spool, table, spool.sources, step_s, in_alert or {}, hands)
     enough = [s for s in spool.sources if has_enough(rows, s)]
     with tempfile.TemporaryDirectory(prefix="oddbranch-held-out-") as folder:
+        hands.must_see(Path(folder))
         learned = {}
-        for source in enough:
-            learned[source] = learn_member(rows, source, Path(folder))
+        for one in learn_members(rows, enough, Path(folder)):
+            learned[one.member.source] = one
             if progress is not None:
                 progress.advance(1)
         learned = share_tables(rows, learned, Path(folder))
@@ -172,6 +179,7 @@ def _about(rows: Rows, one: Learned) -> dict[str, Any]:
     metavar="FILE",
     help="Where to list rows that were not used.",
 )
+@cluster_option
 @history_flags
 def learn_command(
     history: tuple[str, ...],
@@ -181,6 +189,7 @@ def learn_command(
     exclude: Path | None,
     report: Path | None,
     rejected: Path | None,
+    cluster: str | None,
     **flags: Any,
 ) -> None:
     """Learn a model from HISTORY: files, folders or patterns, CSV or Parquet."""
@@ -188,20 +197,28 @@ def learn_command(
     table = load_channels(channels)
     settings = load_learn_settings(config)
     options = history_options(**flags)
-    with Progress("reading history", history_n_bytes(history)) as progress:
-        spool = spool_history(history, table, options, progress, exclude=exclude, rejected=rejected)
-    with spool:
-        for line in history_lines(spool):
-            click.echo(line)
-        with Progress("learning", len(spool.sources) + 1) as progress:
-            result = learn_model(spool, table, settings, progress)
-    model = write_model(result.model, out)
-    for line in result_lines(result):
-        click.echo(line)
-    if report is not None:
-        write_report(replace(result, model=model), spool, report)
-        click.echo(f"report written to {report}")
-    click.echo(f"model {model.name} written to {out} in {time.perf_counter() - began:.1f} s")
+    with cluster_at(cluster) as hands:
+        with Progress("reading history", history_n_bytes(history)) as progress:
+            fill = None
+            # A list of rejected rows is in the order of the history: one process writes it.
+            if cluster is not None and rejected is None:
+                fill = parts_read_by(hands, table, options, progress)
+            spool = spool_history(
+                history, table, options, progress, exclude=exclude, rejected=rejected, fill=fill
+            )
+        with spool:
+            for line in history_lines(spool):
+                click.echo(line)
+            with Progress("learning", len(spool.sources) + 1) as progress:
+                result = learn_model(spool, table, settings, progress, hands=hands)
+            result = replace(result, model=write_model(result.model, out))
+            for line in result_lines(result):
+                click.echo(line)
+            if report is not None:
+                write_report(result, spool, report)
+                click.echo(f"report written to {report}")
+    name = result.model.name
+    click.echo(f"model {name} written to {out} in {time.perf_counter() - began:.1f} s")
 
 
 def write_report(result: LearnResult, spool: Spool, path: Path) -> None:

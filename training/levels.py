@@ -11,6 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
+from functools import partial
 from typing import Final
 
 import numpy as np
@@ -101,7 +102,8 @@ def set_levels(
     written beside the held-out scores. Without any held-out record the levels stay as they
     start, and there is no curve.
     """
-    kept = [_keep(rows, members[source], held_out[source], start) for source in members]
+    items = [(rows.part(source), members[source], held_out[source]) for source in members]
+    kept = list(rows.hands.each(partial(_keep, start=start), items))
     curve = curve_of(kept, start, alerts_per_day, settings or AlertSettings(), left_out or {})
     rest = {one.source: one.usual for one in kept}
     members = {s: replace(m, usual=replace(m.usual, sustained=rest[s])) for s, m in members.items()}
@@ -145,7 +147,8 @@ def curve_of(
     return _curve(sources, scales, start, settings, alerts_per_day, left_out or {})
 
 
-def _keep(rows: Rows, member: Member, held_out: HeldOut, start: Levels) -> HeldExcess:
+def _keep(item: tuple[Rows, Member, HeldOut], start: Levels) -> HeldExcess:
+    rows, member, held_out = item
     parts = ((part.times_ns, part.excess) for part in follow(rows, member, held_out, start))
     path = held_out.path.with_suffix(".excess")
     return keep_excess(member.source, held_out.n_records, parts, path)

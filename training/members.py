@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, field, replace
+from functools import partial
 from pathlib import Path
 
 import numpy as np
@@ -65,6 +66,15 @@ def has_enough(rows: Rows, source: str) -> bool:
     return bool(n.sum() - n.max() >= LEAST_OWN_RECORDS)
 
 
+def learn_members(rows: Rows, sources: list[str], folder: Path) -> Iterator[Learned]:
+    """Yield the sources' own members in order, each from its own records and nothing else."""
+    return rows.hands.each(partial(_learn_part, folder=folder), [rows.part(s) for s in sources])
+
+
+def _learn_part(rows: Rows, folder: Path) -> Learned:
+    return learn_member(rows, rows.sources[0], folder)
+
+
 def learn_member(rows: Rows, source: str, folder: Path) -> Learned:
     """Learn one source's own member and score it on blocks of time it did not see.
 
@@ -113,19 +123,20 @@ def share_tables(rows: Rows, learned: dict[str, Learned], folder: Path) -> dict[
     if len(learned) < 2:
         return learned
     shared = _agreed(rows.table, learned)
-    found = {}
-    for source, one in learned.items():
-        found[source] = one
-        if rows.spool.n_records(source) >= SETTLED_RECORDS:
-            continue
-        own = replace(rows.of(source), left_out={source: one.unused})
-        other = _best(own, source, folder, shared)
-        if _pays(one.held_out, other.held_out):
-            member = replace(other.member, tables="shared")
-            found[source] = replace(
-                other, member=member, left_out=one.left_out, in_alert=one.in_alert
-            )
-    return found
+    short = [s for s in learned if rows.spool.n_records(s) < SETTLED_RECORDS]
+    items = [(rows.part(source), learned[source]) for source in short]
+    work = partial(_shared_or_own, folder=folder, shared=shared)
+    return learned | dict(zip(short, rows.hands.each(work, items), strict=True))
+
+
+def _shared_or_own(item: tuple[Rows, Learned], folder: Path, shared: Shared) -> Learned:
+    rows, one = item
+    source = one.member.source
+    other = _best(replace(rows, left_out={source: one.unused}), source, folder, shared)
+    if not _pays(one.held_out, other.held_out):
+        return one
+    member = replace(other.member, tables="shared")
+    return replace(other, member=member, left_out=one.left_out, in_alert=one.in_alert)
 
 
 def _agreed(table: ChannelTable, learned: dict[str, Learned]) -> Shared:

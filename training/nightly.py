@@ -24,6 +24,8 @@ from scoring.errors import BadArtefact, OddbranchError
 from scoring.model import Model
 from training.changes import load_changes
 from training.chosen import HOUR_NS, Chosen, Wanted, choose
+from training.cluster import cluster_at, cluster_option
+from training.hands import HERE, Hands
 from training.history.exclusions import Exclusion, load_exclusions
 from training.judge import (
     Case,
@@ -95,10 +97,10 @@ def read_job(config: Path | None) -> Job:
     )
 
 
-def run_night(job: Job, now: Callable[[], datetime], tell: Tell) -> Outcome:
+def run_night(job: Job, now: Callable[[], datetime], tell: Tell, hands: Hands = HERE) -> Outcome:
     """Run one night and return its outcome; a refusal is one. Raises what makes it fail.
 
-    now: the clock. tell: takes one line per stage.
+    now: the clock. tell: takes one line per stage. hands: who learns.
     """
     settings, stages = job.settings, Stages(tell)
     models, files = KeptModels(settings.models.folder), NightFiles(settings.report.folder)
@@ -114,7 +116,7 @@ def run_night(job: Job, now: Callable[[], datetime], tell: Tell) -> Outcome:
         if all(one.passed for one in first):
             with stages.stage("learning") as said, _bar(chosen) as bar:
                 learned = learn_model(
-                    chosen.learning, job.table, job.learning, bar, chosen.in_alert
+                    chosen.learning, job.table, job.learning, bar, chosen.in_alert, hands
                 )
                 said.append(f"{len(learned.model.members)} members")
             with stages.stage("judging") as said:
@@ -302,7 +304,8 @@ def _note_failure(job: Job | None) -> None:
     metavar="FILE",
     help="Settings, as in config/nightly.toml.",
 )
-def nightly_command(config: Path) -> None:
+@cluster_option
+def nightly_command(config: Path, cluster: str | None) -> None:
     """Learn from the stored records of the last weeks, judge the model, and put it into use.
 
     Ends with 0 if it was published, 1 if the judge refused it, 3 if the job failed.
@@ -310,7 +313,8 @@ def nightly_command(config: Path) -> None:
     job = None
     try:
         job = read_job(config)
-        outcome = run_night(job, lambda: datetime.now(UTC), click.echo)
+        with cluster_at(cluster) as hands:
+            outcome = run_night(job, lambda: datetime.now(UTC), click.echo, hands)
     except BusyModels as error:
         # The other job writes the night's numbers.
         raise Failed(str(error)) from None

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import partial
 
 import numpy as np
 from numba import njit
@@ -10,6 +11,7 @@ from numpy.typing import NDArray
 
 from scoring.bins import MISSING, BinTable
 from training.counts import count_pairs
+from training.hands import Counted
 from training.rows import Rows
 
 Ints = NDArray[np.int64]
@@ -51,14 +53,17 @@ class PairReader:
     bin_table: BinTable
     regime: tuple[int, ...] = ()
 
-    def count(
-        self, wanted: list[Wanted], by_fold: bool = True
-    ) -> list[tuple[NDArray[np.int64], int]]:
+    def count(self, wanted: list[Wanted], by_fold: bool = True) -> Counted:
         """Read the records once; return for each wanted its counts and number of records.
 
         counts: (n_folds, n_pairs, width + 1, width + 1), one for all folds together unless
-        by_fold.
+        by_fold. Where others have a hand in it, they count parts, and the parts are added.
         """
+        readers = [replace(self, rows=part) for part in self.rows.parts()]
+        return self.rows.hands.total(partial(_count, wanted=wanted, by_fold=by_fold), readers)
+
+    def count_here(self, wanted: list[Wanted], by_fold: bool) -> Counted:
+        """Count as `count` does, in this process."""
         groups = [(fold,) for fold in self.folds] if by_fold else [self.folds]
         lookups = [one.lookup() for one in wanted]
         shapes = [(len(groups), len(o.left), o.width + 1, o.width + 1) for o in wanted]
@@ -78,6 +83,10 @@ class PairReader:
                         n_records[k] += len(use)
         waiting.count()
         return list(zip(counts, n_records, strict=True))
+
+
+def _count(reader: PairReader, wanted: list[Wanted], by_fold: bool) -> Counted:
+    return reader.count_here(wanted, by_fold)
 
 
 class _Waiting:

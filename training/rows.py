@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, field
-from functools import cached_property
+from functools import cached_property, partial
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from scoring.channels import ChannelTable
 from scoring.derived import Carry, derive
 from training.blocks import Blocks
+from training.hands import HERE, Hands
 from training.history.spool import N_CHUNK_ROWS, Spool
 
 Ints = NDArray[np.int64]
@@ -49,6 +50,7 @@ class Rows:
     """The records of one source or of several, read as often as asked.
 
     left_out: per source (n, 2) stretches of time in ns that tables must not use.
+    hands: who works on these records where that can be shared out.
     """
 
     spool: Spool
@@ -56,10 +58,21 @@ class Rows:
     sources: tuple[str, ...]
     step_s: float
     left_out: dict[str, Ints] = field(default_factory=dict)
+    hands: Hands = HERE
 
     def of(self, *sources: str) -> Rows:
         """Return the rows of some of the sources."""
-        return Rows(self.spool, self.table, sources, self.step_s, self.left_out)
+        return Rows(self.spool, self.table, sources, self.step_s, self.left_out, self.hands)
+
+    def part(self, *sources: str) -> Rows:
+        """Return the rows of some of the sources alone, to be worked on anywhere."""
+        left_out = {s: self.left_out[s] for s in sources if s in self.left_out}
+        return Rows(self.spool.only(sources), self.table, sources, self.step_s, left_out)
+
+    def parts(self) -> list[Rows]:
+        """Return these rows as parts that are counted one by one."""
+        sizes = [self.spool.n_records(source) for source in self.sources]
+        return [self.part(*(self.sources[k] for k in g)) for g in self.hands.groups(sizes)]
 
     @property
     def n_records(self) -> int:
@@ -100,17 +113,26 @@ class Rows:
     def _sampled(self) -> tuple[Floats, Ints, Ints]:
         """The sample of all folds: values, blocks and folds. Read once, asked for once a fit."""
         share = MAX_SAMPLE / max(self.n_records, 1)
+        parts = [self.part(source) for source in self.sources]
         found, blocks, folds = [], [], []
-        number = {source: k for k, source in enumerate(self.sources)}
-        for chunk in self.chunks():
-            use = chunk.kept
-            if share < 1:
-                use = use & (hashed(chunk.times_ns) < share)
-            found.append(chunk.values[use])
-            block = self.blocks(chunk.source).number(chunk.times_ns[use])
-            blocks.append(number[chunk.source] * MAX_BLOCKS + block)
-            folds.append(chunk.fold[use])
+        for k, one in enumerate(self.hands.each(partial(_sampled_of, share=share), parts)):
+            found.append(one[0])
+            blocks.append(k * MAX_BLOCKS + one[1])
+            folds.append(one[2])
         return np.concatenate(found), np.concatenate(blocks), np.concatenate(folds)
+
+
+def _sampled_of(rows: Rows, share: float) -> tuple[Floats, Ints, Ints]:
+    """Return a share of one source's records: values, blocks and folds."""
+    found, blocks, folds = [], [], []
+    for chunk in rows.chunks():
+        use = chunk.kept
+        if share < 1:
+            use = use & (hashed(chunk.times_ns) < share)
+        found.append(chunk.values[use])
+        blocks.append(rows.blocks(chunk.source).number(chunk.times_ns[use]))
+        folds.append(chunk.fold[use])
+    return np.concatenate(found), np.concatenate(blocks), np.concatenate(folds)
 
 
 def hashed(times_ns: Ints) -> Floats:

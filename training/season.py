@@ -49,7 +49,7 @@ class SlowChannel:
 def slow_channels(rows: Rows) -> tuple[SlowChannel, ...]:
     """Return the channels that are slow at the middle one of the sources, slowest first."""
     channels = rows.table.instruments
-    found = [_Parts.of(rows, source) for source in rows.sources]
+    found = list(rows.hands.each(_parts_of, [rows.part(source) for source in rows.sources]))
     if not found:
         return ()
     middle = np.median([parts.slow_share() for parts in found], axis=0)
@@ -114,6 +114,10 @@ class _Parts:
         between = (n * apart**2).sum(axis=0) / all_n
         told = (enough.sum(axis=0) >= _LEAST_PARTS) & (whole > 0)
         return np.asarray(np.where(told, between / np.where(told, whole, 1.0), 0.0))
+
+
+def _parts_of(rows: Rows) -> _Parts:
+    return _Parts.of(rows, rows.sources[0])
 
 
 def unseen_nats(members: Mapping[str, Member], held_out: Mapping[str, HeldOut]) -> float:

@@ -188,13 +188,16 @@ def with_stillness(
     The fleet's limits hold for every source: what is still for hours at one of them may
     be so at a source never seen.
     """
-    found = {}
-    for source, member in members.items():
-        chunks = _parted(rows.of(source))
-        found[source] = learn_stillness(chunks, rows.table, _edges(member), rows.step_s)
+    items = [(rows.part(source), _edges(member)) for source, member in members.items()]
+    found = dict(zip(members, rows.hands.each(_still_of, items), strict=True))
     members = {s: replace(member, stillness=found[s]) for s, member in members.items()}
     limits = widest(list(found.values()), neighbour_lists(rows.table, _edges(fleet)))
     return members, replace(fleet, stillness=limits)
+
+
+def _still_of(item: tuple[Rows, list[tuple[int, int]]]) -> StillnessLimits:
+    rows, edges = item
+    return learn_stillness(_parted(rows), rows.table, edges, rows.step_s)
 
 
 def _parted(rows: Rows) -> Iterator[tuple[Ints, Floats]]:

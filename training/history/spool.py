@@ -7,9 +7,10 @@ rows were out of order is held as times (16 bytes a row) while its order is foun
 
 from __future__ import annotations
 
+import copy
 import tempfile
 from collections import Counter
-from collections.abc import Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, field
 from io import BufferedReader
 from pathlib import Path
@@ -83,13 +84,16 @@ class Spool:
     """Good rows of a history per source, in time order, no time twice; a context manager.
 
     n_values: how many values a record has. folder: where to make the temporary folder,
-    None for the system's place. Fill with `add`, then `finish` once, then read.
+    None for the system's place. Fill with `add` or `adopt`, then `finish` once, then read.
     """
 
     def __init__(self, n_values: int, folder: Path | None = None) -> None:
         self.n_values = n_values
         self.report = HistoryReport()
-        self._folder = tempfile.TemporaryDirectory(prefix="oddbranch-history-", dir=folder)
+        self._folder: tempfile.TemporaryDirectory[str] | None = tempfile.TemporaryDirectory(
+            prefix="oddbranch-history-", dir=folder
+        )
+        self.place = Path(self._folder.name)
         self._rows: dict[str, _SourceRows] = {}
         self._files: list[Path] = []
         self._n_waiting_bytes = 0
@@ -106,6 +110,16 @@ class Spool:
     def first_last_ns(self, source: str) -> tuple[int, int]:
         """Return the times of a source's first and last record."""
         return self._rows[source].first_ns, self._rows[source].last_ns
+
+    def only(self, sources: tuple[str, ...]) -> Spool:
+        """Return a view of some sources, to be read only; files stay this one's to remove.
+
+        A view is small, and another process that sees the folder can read by it.
+        """
+        view = copy.copy(self)
+        view._folder, view._files, view.report = None, [], HistoryReport()
+        view._rows = {source: self._rows[source] for source in sources}
+        return view
 
     def chunks(self, source: str, n_rows: int = N_CHUNK_ROWS) -> Iterator[tuple[Int64, Floats]]:
         """Yield a source's records in time order, n_rows at a time, the last chunk shorter.
@@ -155,7 +169,7 @@ class Spool:
                 return
         rows = self._rows.get(source)
         if rows is None:
-            path = Path(self._folder.name) / f"{len(self._rows)}.rows"
+            path = self.place / f"{len(self._rows)}.rows"
             rows = self._rows[source] = _SourceRows(path)
         times = batch.times_ns[part]
         before = np.concatenate([[rows.last_ns], times[:-1]])
@@ -187,6 +201,14 @@ class Spool:
                     file.writelines(block.data for block in rows.waiting)
                 rows.waiting = []
         self._n_waiting_bytes = 0
+
+    def adopt(self, source: str, path: Path, n: int, first_ns: int, last_ns: int) -> None:
+        """Take a source's file of rows as it is, which must be in order and below `place`."""
+        self._rows[source] = _SourceRows(path, n, last_ns, first_ns)
+
+    def file_of(self, source: str) -> tuple[Path, bool]:
+        """Return the file that holds a source's rows, and whether they are in order there."""
+        return self._rows[source].path, self._rows[source].order is None
 
     def finish(self, tally: Tally) -> None:
         """Write what waits, bring sources out of order into order, and close the report."""
@@ -242,8 +264,9 @@ class Spool:
         return block
 
     def close(self) -> None:
-        """Remove the files; may be called twice."""
-        self._folder.cleanup()
+        """Remove the files, unless they are another's; may be called twice."""
+        if self._folder is not None:
+            self._folder.cleanup()
 
     def __enter__(self) -> Self:
         return self
@@ -257,6 +280,10 @@ class Spool:
         self.close()
 
 
+# Fills a spool from files by itself, or returns False and leaves it empty.
+Fill = Callable[[list[Path], Spool, tuple[Exclusion, ...], Tally], bool]
+
+
 def spool_history(
     paths: Iterable[Path | str],
     table: ChannelTable,
@@ -266,12 +293,14 @@ def spool_history(
     exclude: Path | None = None,
     rejected: Path | None = None,
     folder: Path | None = None,
+    fill: Fill | None = None,
 ) -> Spool:
     """Read a whole history and return it as a spool, which the caller closes.
 
     exclude: a file of periods to leave out. rejected: where to list bad rows.
     folder: where the temporary folder goes; it needs (n_instruments + 2) * 8 bytes a row.
     progress: advanced by bytes read; history_n_bytes(paths) gives the total.
+    fill: who reads the files if they can; this process does if not.
     Raises BadHistory, also when most rows are bad and when none is left.
     """
     files = find_files(paths)
@@ -280,8 +309,9 @@ def spool_history(
     try:
         exclusions = load_exclusions(exclude, options) if exclude is not None else ()
         with Tally(rejected) as tally:
-            for batch in read_history(files, table, options, tally, progress):
-                spool.add(batch, exclusions, tally)
+            if fill is None or not fill(files, spool, exclusions, tally):
+                for batch in read_history(files, table, options, tally, progress):
+                    spool.add(batch, exclusions, tally)
             spool.finish(tally)
             tally.refuse_if_mostly_bad(place)
         if not spool.sources:

@@ -75,6 +75,14 @@ class Tally:
         if self._file is not None:
             self._list.writerow([str(file), line, reason, detail])
 
+    def take(self, other: Tally) -> None:
+        """Add what another tally counted, in files that come after those of this one."""
+        self.n_rows += other.n_rows
+        for name in ("rejected", "outside_span", "unknown_words", "bad_quality"):
+            getattr(self, name).update(getattr(other, name))
+        for reason, where in other.first.items():
+            self.first.setdefault(reason, where)
+
     def refuse_if_mostly_bad(self, place: str) -> None:
         """Raise BadHistory when more rows were bad than good."""
         if 2 * self.n_rejected <= self.n_rows:
