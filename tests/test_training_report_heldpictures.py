@@ -95,7 +95,9 @@ def test_curves_are_sums_over_the_edges_with_the_chosen_bins() -> None:
 
 def test_what_was_tried_and_chosen_is_drawn() -> None:
     piece = draw_choice(a_choice(), "choice")
-    assert {"12", "24", "48", "chosen", "each edge its own", f"{SHARES[-1]:g}"} <= set(labels(piece))
+    assert {"12", "24", "48", "chosen", "each edge its own", f"{SHARES[-1]:g}"} <= set(
+        labels(piece)
+    )
 
 
 def test_every_channel_has_a_row_of_coverage() -> None:
