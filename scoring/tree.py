@@ -79,6 +79,13 @@ class Tree:
         """Return the nodes that share an edge with `node`, in rising order."""
         return sorted(int(b if a == node else a) for a, b in self.edges.tolist() if node in (a, b))
 
+    def __getstate__(self) -> dict[str, object]:
+        """Return what goes to another process: the kernels' layout, seven times as large, does not.
+
+        It is made again there on first use, by the same steps.
+        """
+        return {name: value for name, value in self.__dict__.items() if name != "arrays"}
+
     @cached_property
     def arrays(self) -> TreeArrays:
         """The same forest laid out for the kernels (made on first use, then kept)."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import pickle
 
 import numpy as np
 import pytest
@@ -93,3 +94,14 @@ def test_a_forest_without_edges_is_a_product() -> None:
     rows = joint_states([2, 3])
     wanted = [slow_log_p(tree, row) for row in rows.tolist()]
     np.testing.assert_allclose(evidence_rows(tree.arrays, rows), wanted, atol=1e-14)
+
+
+def test_a_tree_goes_to_another_process_without_its_layout_and_scores_there_alike() -> None:
+    rng = np.random.default_rng(5)
+    tree = random_tree(5, [30] * 6)
+    rows = random_rows(rng, sizes_of(tree), 50)
+    before = evidence_rows(tree.arrays, rows)
+    sent = pickle.dumps(tree)
+    there = pickle.loads(sent)
+    assert len(sent) < (tree.arrays.ratio.nbytes + tree.arrays.log_ratio.nbytes) / 2
+    assert np.array_equal(evidence_rows(there.arrays, rows), before)

@@ -132,7 +132,7 @@ class KillHalfWay:
 
 def learn(out: Path, history: History, *words: str | Path) -> Result:
     """Run the command on a history; what it refuses is raised."""
-    line = [history.folder, "--channels", history.channels, "--out", out, *words]
+    line = [history.folder.name, "--channels", history.channels, "--out", out, *words]
     result = CliRunner().invoke(learn_command, [str(word) for word in line], standalone_mode=False)
     if isinstance(result.exception, NoCluster):
         raise result.exception
@@ -174,6 +174,8 @@ def test_two_workers_learn_the_same_model_though_one_is_killed_half_way_and_so_d
             assert len(hands.client.nthreads()) == 1
         assert write_model(result.model, tmp_path / "model").name == alone
         # Now the command, which has the files read as well, by the one that is left.
+        # A history is named from the folder one works in, and workers work in another.
+        monkeypatch.chdir(history.folder.parent)
         handed_out = noting(monkeypatch)
         said = learn(tmp_path / "again", history, "--cluster", address).output
     n = sum(SOURCES.values())

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
@@ -12,7 +13,7 @@ import pyarrow.parquet as pq
 import pytest
 
 from scoring.channels import ChannelTable, parse_channels
-from training.hands import HERE
+from training.hands import HERE, Here, Item, Result
 from training.history.options import BadHistory, HistoryOptions
 from training.history.spool import Spool, spool_history
 from training.history.spool_parts import parts_read_by
@@ -106,6 +107,20 @@ def test_what_must_be_looked_at_together_is_read_by_one(
     write(tmp_path / "b.parquet", [(s, "mill", -1.0 + s / 2) for s in second])
     with assert_same(tmp_path) as parts:
         assert pieces(parts) == ["0.rows"]
+
+
+def test_a_file_that_a_worker_does_not_see_is_refused(tmp_path: Path) -> None:
+    @dataclass(frozen=True)
+    class Elsewhere(Here):
+        def each(self, work: Callable[[Item], Result], items: Sequence[Item]) -> Iterator[Result]:
+            away = tmp_path / "a.parquet"
+            away.rename(tmp_path / "away")
+            yield from super().each(work, items)
+
+    path = write(tmp_path / "a.parquet", [(1, "mill", 1.0)])
+    fill = parts_read_by(Elsewhere(), TABLE, HistoryOptions())
+    with pytest.raises(BadHistory, match=r"a.parquet: a worker does not see it; history must"):
+        spool_history([path], TABLE, HistoryOptions(), fill=fill)
 
 
 def test_text_files_are_read_by_one(tmp_path: Path) -> None:

@@ -93,6 +93,8 @@ def _read_parts(
     """Fill an empty spool, which the caller finishes; False if rows must be looked at together."""
     hands.must_see(reading.folder)
     parts = []
+    # Others work in other folders.
+    files = [file.absolute() for file in files]
     for file, part in zip(files, hands.each(partial(_read, reading), files), strict=True):
         if part.bad is not None:
             raise BadHistory(*part.bad)
@@ -123,6 +125,10 @@ def _read_parts(
 
 def _read(reading: Reading, file: Path) -> Part:
     part = Part(Tally())
+    if not file.exists():
+        what = "a worker does not see it; history must have the same name on all machines"
+        part.bad = (str(file), what)
+        return part
     with Spool(len(reading.table.instruments), reading.folder) as spool:
         try:
             for batch in read_history([file], reading.table, reading.options, part.tally):
