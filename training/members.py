@@ -118,7 +118,10 @@ def share_tables(rows: Rows, learned: dict[str, Learned], folder: Path) -> dict[
     """Let sources with little history take the fleet's structure and correlations.
 
     Bins, marginals and counts stay their own. Kept where the source's held-out records are
-    less surprising so, by more than the doubt of that.
+    less surprising so, whatever the doubt: hours or days of history hold few blocks of time to
+    tell by, and what the fleet agrees on is the better guess. With half a day and a day at 120 s
+    of one station of the invented plant, its later days were 18 and 14 nats a record less
+    surprising for it.
     """
     if len(learned) < 2:
         return learned
@@ -133,7 +136,7 @@ def _shared_or_own(item: tuple[Rows, Learned], folder: Path, shared: Shared) -> 
     rows, one = item
     source = one.member.source
     other = _best(replace(rows, left_out={source: one.unused}), source, folder, shared)
-    if not _pays(one.held_out, other.held_out):
+    if not _pays(one.held_out, other.held_out, n_errors=0.0):
         return one
     member = replace(other.member, tables="shared")
     return replace(other, member=member, left_out=one.left_out, in_alert=one.in_alert)
@@ -184,14 +187,15 @@ def _but(fold: int) -> tuple[int, ...]:
     return tuple(f for f in range(N_FOLDS) if f != fold)
 
 
-def _pays(plain: HeldOut, other: HeldOut) -> bool:
-    """Return whether the other's held-out surprise is lower by more than its doubt."""
+def _pays(plain: HeldOut, other: HeldOut, n_errors: float = 1.0) -> bool:
+    """Return whether the other's held-out surprise is lower by so many standard errors."""
     there = (plain.by_block[:, 1] > 0) & (other.by_block[:, 1] > 0)
     if there.sum() < 2:
         return False
     gain = plain.by_block[there] - other.by_block[there]
     per_block = gain[:, 0] / plain.by_block[there, 1]
-    return bool(per_block.mean() > per_block.std(ddof=1) / np.sqrt(there.sum()))
+    error = per_block.std(ddof=1) / np.sqrt(there.sum())
+    return bool(per_block.mean() > n_errors * error)
 
 
 def learn_fleet(rows: Rows, only: Learned | None) -> Member:
