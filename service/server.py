@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import socket
 import ssl
+import sys
+from typing import Final
 
 import click
 import uvicorn
@@ -69,6 +71,11 @@ def listen(settings: Settings) -> socket.socket:
     return listener
 
 
+# How long the writer's thread may keep the loop's waiting, and the other way round. Python's own
+# 5 ms answered 5 to 11 % fewer single requests; less than 1 ms costs more turns than it gains.
+SWITCH_S: Final = 0.001
+
+
 def say_where(settings: Settings, listener: socket.socket) -> None:
     """Print where the service listens, and how to take what it says."""
     scheme = "https" if settings.server.tls_certificate else "http"
@@ -81,6 +88,7 @@ def say_where(settings: Settings, listener: socket.socket) -> None:
 def run(service: Service, listener: socket.socket) -> None:
     """Serve until the process is told to stop; what waits is stored first."""
     server = service.settings.server
+    sys.setswitchinterval(SWITCH_S)
     uvicorn.Server(
         uvicorn.Config(
             create_app(service),
