@@ -11,6 +11,7 @@ import pytest
 
 from config import shipped_names
 from oddbranch import COMMANDS
+from scoring.channels import N_INPUTS, parse_channels
 from tests.conftest import ROOT
 from training.demo import FIGURE_SEED
 from training.demo_plant import plant_config
@@ -144,3 +145,14 @@ def test_the_cautions_say_what_it_is_not() -> None:
         "independent, specific, dependable and auditable",
     ):
         assert words in cautions
+
+
+def test_the_readmes_channel_table_is_one_and_shows_every_operation() -> None:
+    met = re.search(r"<!-- channel table -->\n```toml\n(.*?)```", README, re.S)
+    assert met is not None
+    table = parse_channels(tomllib.loads(met[1]), "README.md")
+    assert table.regime == ("pump",)
+    assert table.names == ("flow", "suction", "discharge", "pump", "head")
+    assert table.edges.require == (("flow", "head"),)
+    for operation in N_INPUTS:
+        assert operation in met[1]

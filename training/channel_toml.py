@@ -19,6 +19,10 @@ HEADING = """\
 # resolution  the smallest step the instrument reports
 # accuracy    half-width of the instrument's accuracy band, in its unit
 # leave_out   true: the column is not watched
+# bins        inner borders of the bins, fixed by hand, rising; otherwise they are learned
+#
+# Beside the channels, with examples in the README: [[derived]] channels computed from others,
+# [edges] that are required or forbidden, and `regime`, the states that may choose a tree.
 """
 
 
