@@ -21,7 +21,7 @@ from scoring.artefact import read_model
 from scoring.channels import ChannelTable
 from scoring.model import Model
 from service.scoring_engine import load_engine
-from tests.service_http import Api, running
+from tests.service_http import Api, Clock, running
 from tests.spools import Floats
 from training.chosen import DAY_NS
 from training.history.batch import HistoryBatch
@@ -48,16 +48,6 @@ HISTORY_DAYS = 28
 def day_ns(day: float) -> int:
     """Return when a day of the simulation begins."""
     return round(START.timestamp()) * 10**9 + round(day * DAY_NS)
-
-
-@dataclass
-class Clock:
-    """The service's clock, set by hand."""
-
-    now_ns: int
-
-    def __call__(self) -> int:
-        return self.now_ns
 
 
 @dataclass

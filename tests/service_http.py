@@ -15,6 +15,7 @@ import threading
 import time
 from collections.abc import Callable, Coroutine, Iterator, Mapping, Sequence
 from contextlib import contextmanager
+from dataclasses import dataclass
 from functools import cache
 from pathlib import Path
 from typing import Any, TypeVar
@@ -37,6 +38,16 @@ NDJSON = {"content-type": "application/x-ndjson"}
 # wherever the tests run, so that a real server's clock takes no record for one ahead.
 NOW_NS = 1_764_565_200 * 10**9
 START_S = 1_764_561_600
+
+
+@dataclass
+class Clock:
+    """The service's clock, set by hand; an hour after the first record unless said."""
+
+    now_ns: int = NOW_NS
+
+    def __call__(self) -> int:
+        return self.now_ns
 
 
 def record(minute: Any = 0.0, source: Any = "mill-lane-2", **readings: Any) -> dict[str, Any]:

@@ -24,21 +24,11 @@ from service.scoring_engine import load_engine
 from service.store.database import Database
 from service.times import format_time
 from tests.models import a_model
-from tests.service_http import START_S, Api, Server, running
+from tests.service_http import START_S, Api, Clock, Server, running
 from tests.service_postgres import Cluster, cluster
 
 S = 1_000_000_000
 ALERTS, ACTIONS = TypeAdapter(AlertsPage), TypeAdapter(ActionsPage)
-
-
-class Clock:
-    """The server's clock, set by hand."""
-
-    def __init__(self) -> None:
-        self.now_ns = (START_S + 3600) * S
-
-    def __call__(self) -> int:
-        return self.now_ns
 
 
 @pytest.fixture(scope="module")

@@ -15,7 +15,7 @@ from scoring.artefact import write_model
 from service.scoring_engine import load_engine
 from service.times import format_time
 from tests.models import a_model
-from tests.service_http import START_S, Api, running
+from tests.service_http import START_S, Api, Clock, running
 from tests.service_postgres import Cluster, cluster
 from training.stored import BadStore, Store, Window, spool_stored
 from training.stored_alerts import (
@@ -30,15 +30,6 @@ from training.stored_alerts import (
 S = 1_000_000_000
 START_NS = START_S * S
 EVER = Window(0, 2**62)
-
-
-class Clock:
-    """The service's clock, set by hand."""
-
-    now_ns = START_NS + 3600 * S
-
-    def __call__(self) -> int:
-        return self.now_ns
 
 
 @pytest.fixture(scope="module")

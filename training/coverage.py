@@ -6,6 +6,7 @@ sample of records small enough to cost little beside learning.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -95,12 +96,25 @@ def held_out_intervals(
 ) -> tuple[Floats, Floats]:
     """Return low and high of each measurement's expected interval, (n, n_nodes) each.
 
-    values: (n, n_nodes) of records. NaN for states, for what is derived, for missing
-    readings, and for records whose regime is not read.
+    values and what is NaN: see `intervals_of`; rounded outward to the channels' resolutions.
+    """
+    resolutions = [channel.resolution or 0.0 for channel in table.instruments]
+    low, high, _ = intervals_of(member, table, values, resolutions)
+    return low, high
+
+
+def intervals_of(
+    member: Member, table: ChannelTable, values: Floats, resolutions: Sequence[float]
+) -> tuple[Floats, Floats, Floats]:
+    """Return low, high and middle of what the rest of each record lets expect, (n, n_nodes) each.
+
+    values: (n, n_nodes) of records. resolutions: of the instruments, 0 for no rounding. NaN
+    for states, for what is derived, for missing readings, and for records whose regime is
+    not read.
     """
     rows = member.bin_table.rows(values)
-    start, nodes = groups(table)
-    low, high = np.full(values.shape, np.nan), np.full(values.shape, np.nan)
+    start, derived = groups(table)
+    low, high, middle = (np.full(values.shape, np.nan) for _ in range(3))
     for tree, where in trees_that_hold(member, rows):
         for i, channel in enumerate(table.instruments):
             of = where[rows[where, i] != MISSING]
@@ -108,10 +122,11 @@ def held_out_intervals(
                 continue
             hidden = rows[of]
             hidden[:, i] = MISSING
-            hidden[:, nodes[start[i] : start[i + 1]]] = MISSING
-            borders, resolution = member.bins[i].borders, channel.resolution or 0.0
-            low[of, i], high[of, i] = _intervals(tree.arrays, hidden, i, borders, resolution)
-    return low, high
+            hidden[:, derived[start[i] : start[i + 1]]] = MISSING
+            low[of, i], high[of, i], middle[of, i] = _intervals(
+                tree.arrays, hidden, i, member.bins[i].borders, resolutions[i]
+            )
+    return low, high, middle
 
 
 def usual_widths(member: Member, table: ChannelTable) -> Floats:
@@ -152,10 +167,10 @@ def trees_that_hold(member: Member, rows: BinRows) -> list[tuple[Tree, Ints]]:
 @njit(cache=True, nogil=True)
 def _intervals(
     t: TreeArrays, hidden: BinRows, node: int, borders: Floats, resolution: float
-) -> tuple[Floats, Floats]:
+) -> tuple[Floats, Floats, Floats]:
     n = hidden.shape[0]
-    low, high = np.empty(n), np.empty(n)
+    low, high, middle = np.empty(n), np.empty(n), np.empty(n)
     for r in range(n):
         belief = belief_row(t, hidden[r], node)[: borders.shape[0] + 1]
-        low[r], high[r], _ = shortest_interval(belief, borders, resolution)
-    return low, high
+        low[r], high[r], middle[r] = shortest_interval(belief, borders, resolution)
+    return low, high, middle

@@ -20,6 +20,7 @@ import click
 
 from scoring.alerts import ADVICE
 from scoring.artefact import read_model
+from scoring.model import Levels
 from training.demo_alerts import Told, post_live, rival_calls
 from training.demo_plant import (
     DRILL_DAYS,
@@ -93,9 +94,10 @@ def demo_command(once: bool, seed: int, folder: Path | None) -> None:
         with serve(place, ("--model", _MODEL, "--data", "data")) as served:
             click.echo(f"serving on {served.url} in process {served.process.pid}\n")
             alerts = _show_live(served, plant)
-            judged = _judge_all(plant, alerts)
+            model = read_model(Path(_MODEL))
+            judged = _judge_all(plant, alerts, model.levels)
             _show_tables(judged, seed)
-            _show_budget(alerts, judged[OURS])
+            _show_budget(alerts, judged[OURS], Promise.from_data(model.about["promise"]))
             _drill(seed)
             click.echo(f"\n{ADVICE}\nThe demo took {time.perf_counter() - began_s:.0f} s.")
             if not once:
@@ -138,11 +140,11 @@ def _show_live(served: Served, plant: Plant) -> list[Told]:
     return found
 
 
-def _judge_all(plant: Plant, alerts: list[Told]) -> dict[str, Verdict]:
+def _judge_all(plant: Plant, alerts: list[Told], levels: Levels) -> dict[str, Verdict]:
     """Return the verdict on our alerts in the budget, and on each rival's."""
     judge = plant.judge()
     end_ns = max(last_ns for _, last_ns in judge.spans.values())
-    levels, budget = read_model(Path(_MODEL)).levels, LearnSettings().budget.alerts_per_day
+    budget = LearnSettings().budget.alerts_per_day
     found = {OURS: [alert.call(end_ns) for alert in alerts if alert.in_budget]}
     with tempfile.TemporaryDirectory(prefix="oddbranch-rivals-") as folder:
         history, channels = Path(_HISTORY), Path(_CHANNELS)
@@ -165,8 +167,7 @@ def _show_tables(judged: Mapping[str, Verdict], seed: int) -> None:
     click.echo("\n".join(where_others_win(judged)))
 
 
-def _show_budget(alerts: list[Told], ours: Verdict) -> None:
-    promise = Promise.from_data(read_model(Path(_MODEL)).about["promise"])
+def _show_budget(alerts: list[Told], ours: Verdict, promise: Promise) -> None:
     n_used = sum(alert.in_budget for alert in alerts)
     click.echo("\n" + budget_words(promise, n_used, len(alerts) - n_used, ours))
 

@@ -12,17 +12,12 @@ from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
-from scoring.bins import MISSING, BinRows
 from scoring.channels import ChannelTable
-from scoring.derived import derive, groups
-from scoring.expected import shortest_interval
-from scoring.kernels import belief_row
+from scoring.derived import derive
 from scoring.model import Member, Model
-from scoring.tree import TreeArrays
-from training.coverage import trees_that_hold, usual_widths
+from training.coverage import intervals_of, usual_widths
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -115,30 +110,8 @@ def expected_middles(member: Member, table: ChannelTable, nodes: Floats) -> tupl
     NaN for states, for what is derived, for missing readings and unread regimes; an open
     interval has no finite width.
     """
-    rows = member.bin_table.rows(nodes)
-    start, derived = groups(table)
-    middle, width = np.full(nodes.shape, np.nan), np.full(nodes.shape, np.nan)
-    for tree, where in trees_that_hold(member, rows):
-        for i, channel in enumerate(table.instruments):
-            of = where[rows[where, i] != MISSING]
-            if channel.is_state or not len(of):
-                continue
-            hidden = rows[of]
-            hidden[:, i] = MISSING
-            hidden[:, derived[start[i] : start[i + 1]]] = MISSING
-            middle[of, i], width[of, i] = _middles(tree.arrays, hidden, i, member.bins[i].borders)
-    return middle, width
-
-
-@njit(cache=True, nogil=True)
-def _middles(t: TreeArrays, hidden: BinRows, node: int, borders: Floats) -> tuple[Floats, Floats]:
-    n = hidden.shape[0]
-    middle, width = np.empty(n), np.empty(n)
-    for r in range(n):
-        belief = belief_row(t, hidden[r], node)[: borders.shape[0] + 1]
-        low, high, middle[r] = shortest_interval(belief, borders, 0.0)
-        width[r] = high - low
-    return middle, width
+    low, high, middle = intervals_of(member, table, nodes, [0.0] * len(table.instruments))
+    return middle, high - low
 
 
 def own_middles(member: Member) -> Floats:

@@ -56,18 +56,9 @@ class Kept:
 
     def about(self) -> dict[str, Any]:
         """Return the figures that the model carries for people; {} if it is damaged."""
-        return self._about("model")
-
-    def first_ns(self, source: str) -> int | None:
-        """Return from when on a source's member was learned, None where that is not known."""
-        figures = self._about("members").get(source)
-        first = figures.get("first_ns") if isinstance(figures, dict) else None
-        return first if isinstance(first, int) else None
-
-    def _about(self, what: str) -> dict[str, Any]:
         try:
             data = json.loads((self.path / "model.json").read_text(encoding="utf-8"))
-            return dict(data["about"][what])
+            return dict(data["about"]["model"])
         except (OSError, ValueError, KeyError, TypeError):
             return {}
 

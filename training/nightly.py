@@ -181,12 +181,6 @@ def _chosen(job: Job, folder: Path, stages: Stages) -> Iterator[Chosen]:
         yield chosen
 
 
-def _learned_from(models: KeptModels) -> Callable[[str, str], int | None]:
-    """Return from when on a kept model's member for a source was learned, by their names."""
-    kept = {one.name: one for one in models.kept()}
-    return lambda model, source: kept[model].first_ns(source) if model in kept else None
-
-
 @contextmanager
 def _bar(chosen: Chosen) -> Iterator[Progress]:
     with Progress("learning", len(chosen.learning.sources) + 1) as progress:
