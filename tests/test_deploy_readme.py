@@ -117,7 +117,7 @@ COUNT = f"{TLS}/sources {READ}"
 UNTIL_UP = "--retry 40 --retry-delay 1 --retry-all-errors http://127.0.0.1"
 SEND_TOKEN = (
     "oddbranch token add tests --role send --config /etc/oddbranch/service.toml"
-    " | tail -n 1 > /root/sender"
+    " | tail -n 1 > /run/sender"
 )
 
 
@@ -156,14 +156,14 @@ def steps(folder: Path) -> list[dict[str, Any]]:
         look("a token is taken up", f"{CURL} {UNTIL_UP}:8321/sources {READ}"),
         page("night"),
         page("proxy"),
-        look("records through the proxy", send("/root/sender", records("east", 0, 30))),
+        look("records through the proxy", send("/run/sender", records("east", 0, 30))),
         look("a night that is run", "systemctl start oddbranch-nightly"),
         look("who has no token", COUNT.replace(READ, "").replace("--fail", "-w '%{http_code}'")),
         page("monitoring"),
         look("what is seen", f"{CURL} --get http://127.0.0.1:9090/api/v1/rules"),
         look("the night's numbers", f"{CURL} {UNTIL_UP}:9100/metrics | grep oddbranch_nightly"),
         page("backup"),
-        look("after the backup", send("/root/sender", records("west", 0, 7))),
+        look("after the backup", send("/run/sender", records("west", 0, 7))),
         page("restore"),
         look("up again", f"{CURL} {UNTIL_UP}:8321/health/ready"),
         look("restored", COUNT),
@@ -179,9 +179,9 @@ def steps(folder: Path) -> list[dict[str, Any]]:
         look("kept over the upgrade", COUNT),
         # Until both jobs were scraped and answered, which by now they mostly were.
         look("what is up", f"for i in $(seq 90); do {CURL} --get "
-             "http://127.0.0.1:9090/api/v1/query --data-urlencode 'query=up == 1' > /root/up; "
-             "grep -q node /root/up && grep -q oddbranch /root/up && break; sleep 1; done; "
-             "cat /root/up"),
+             "http://127.0.0.1:9090/api/v1/query --data-urlencode 'query=up == 1' > /run/up; "
+             "grep -q node /run/up && grep -q oddbranch /run/up && break; sleep 1; done; "
+             "cat /run/up"),
         look("a database", f"install -d -o postgres /run/db; runuser -u postgres -- sh -eu -c '"
              f"{postgres}/initdb -D /run/db/main -A trust -N > /dev/null; "
              f"{postgres}/pg_ctl -D /run/db/main -w -l /run/db/log -o \"-k /run/db\" start; "
@@ -190,13 +190,13 @@ def steps(folder: Path) -> list[dict[str, Any]]:
         look("tokens of the database", SEND_TOKEN, **variable),
         look("one up", f"{CURL} {UNTIL_UP}:8321/health/ready"),
         look("both up", f"{CURL} {UNTIL_UP}:8322/health/ready"),
-        look("records to replicas", send("/root/sender", records("east", 0, 12))),
+        look("records to replicas", send("/run/sender", records("east", 0, 12))),
         look("one is gone", "kill -9 $(cat " + f"{folder}/units/oddbranch.pid)"),
-        look("records to the other", send("/root/sender", records("east", 12, 12))),
+        look("records to the other", send("/run/sender", records("east", 12, 12))),
         look("a night with the database", "systemctl start oddbranch-nightly\n"
              f"grep 'to judge by' {folder}/units/oddbranch-nightly.log | tail -n 1"),
         page("backup-postgresql", **database),
-        look("after that backup", send("/root/sender", records("west", 0, 5))),
+        look("after that backup", send("/run/sender", records("west", 0, 5))),
         look("stopped", "systemctl stop oddbranch-2"),
         page("restore-postgresql", **database),
         look("as before", f"psql -At {database['DATABASE']} -c "
