@@ -181,9 +181,10 @@ def test_two_workers_learn_the_same_model_though_one_is_killed_half_way_and_so_d
     n = sum(SOURCES.values())
     assert said.startswith(f"{n} rows read, {n} records kept of {len(SOURCES)} sources")
     assert read_model(tmp_path / "again").name == alone
-    reading, learning = {"_read", "_join"}, {"_learn_part", "_shared_or_own", "_keep"}
+    reading, learning = {"_read", "_join"}, {"_learn_part", "_shared_or_own"}
+    levels = {"_keep", "_rest_of", "_episodes_of", "_peaks_of", "_raised_of"}
     whole = {"_sampled_of", "_count", "_parts_of", "_still_of"}
-    assert handed_out == reading | learning | whole
+    assert handed_out == reading | learning | levels | whole
 
 
 def test_a_night_does_not_wait_for_workers_that_are_all_gone(

@@ -2,18 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 from scoring.bins import BinTable
+from tests.each_alone import EachAlone
 from tests.learned import fleet_table, pump_records
 from tests.spools import spool_of
 from training.fit import fit
-from training.hands import HERE, Counted, Here, Item, Result, added
+from training.hands import HERE, Counted, added
 from training.reader import PairReader, Wanted
 from training.rows import Rows
 
@@ -49,20 +48,6 @@ def test_this_process_works_item_by_item_and_in_order() -> None:
     assert HERE.groups([5, 5, 5]) == [[0, 1, 2]]
     ((total, _), _) = HERE.total(counted, [1, 2, 3])
     assert total.tolist() == [6]
-
-
-@dataclass(frozen=True)
-class EachAlone(Here):
-    """Hands that take every source by itself, the last one first."""
-
-    def each(self, work: Callable[[Item], Result], items: Sequence[Item]) -> Iterator[Result]:
-        """Yield work(item) of all items, in their order though done in another."""
-        found = {k: work(items[k]) for k in reversed(range(len(items)))}
-        yield from (found[k] for k in range(len(items)))
-
-    def groups(self, sizes: Sequence[int]) -> list[list[int]]:
-        """Return every source by itself."""
-        return [[k] for k in reversed(range(len(sizes)))]
 
 
 @pytest.mark.parametrize("by_fold", [True, False])

@@ -9,7 +9,6 @@ further than ten times the held-out span.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from dataclasses import dataclass, replace
 from functools import partial
 from typing import Final
@@ -19,17 +18,17 @@ from numpy.typing import NDArray
 
 from scoring.alert_settings import AlertSettings
 from scoring.model import Levels, Member
-from scoring.sustained import sustain
 from training.crossfit import HeldOut, follow
+from training.hands import HERE, Hands
 from training.heldexcess import HeldExcess, keep_excess
+from training.passes import DAY_NS, Passes
 from training.rows import Rows
 from training.scale import ENOUGH_COUNTED, LEAST_COUNT, Scale, scale_of, threshold_of
-from training.sweep import Marks, Pairs, Sweep, cap_of
+from training.sweep import Pairs, cap_of
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-DAY_NS: Final = 86_400_000_000_000
 # Together the sources may spend no more than this share of their time in alert.
 MAX_TIME_SHARE: Final = 0.01
 # How much more often sustained is passed than excess. Measured on the plant: equal shares
@@ -42,8 +41,6 @@ N_PAIRS: Final = 100
 LOOSEST: Final = 20.0
 # No level is put below this share of the records of quiet time.
 _LOWEST_QUANTILE: Final = 0.9
-# What a single record may add to where sustained rests is cut off here.
-_CAP_QUANTILE: Final = 0.999
 
 
 @dataclass(frozen=True)
@@ -104,7 +101,7 @@ def set_levels(
     """
     items = [(rows.part(source), members[source], held_out[source]) for source in members]
     kept = list(rows.hands.each(partial(_keep, start=start), items))
-    curve = curve_of(kept, start, alerts_per_day, settings or AlertSettings(), left_out or {})
+    curve = curve_of(kept, start, alerts_per_day, settings or AlertSettings(), left_out, rows.hands)
     rest = {one.source: one.usual for one in kept}
     members = {s: replace(m, usual=replace(m.usual, sustained=rest[s])) for s, m in members.items()}
     return levels_at(curve, start, max(rest.values(), default=0.0)), members, curve
@@ -129,22 +126,25 @@ def curve_of(
     alerts_per_day: float,
     settings: AlertSettings,
     left_out: dict[str, Ints] | None = None,
+    hands: Hands = HERE,
 ) -> Curve | None:
     """Return how often pairs of levels are passed in held-out time, the budget's one chosen.
 
-    kept: one a source; where sustained rests is set on them. None without any record.
+    kept: one a source; where sustained rests is set on them. hands: who follows them. None
+    without any record.
     """
     sources = [one for one in kept if one.n_judged]
     if not sources:
         return None
-    sustained, highest = _rest(sources, start)
-    excess = np.concatenate([one.sample for one in sources])
+    passes = Passes(sources, start, settings, hands)
+    sustained, highest, days = passes.rest()
     tried = (
-        _tried(excess, max(one.highest for one in sources)),
+        _tried(passes.sample(), max(one.highest for one in sources)),
         _tried(sustained, highest),
     )
-    scales = _scales(sources, tried, start, settings)
-    return _curve(sources, scales, start, settings, alerts_per_day, left_out or {})
+    usual = max(one.usual for one in sources)
+    scales = _scales(passes, tried, usual)
+    return _curve(passes, scales, usual, days, alerts_per_day, left_out or {})
 
 
 def _keep(item: tuple[Rows, Member, HeldOut], start: Levels) -> HeldExcess:
@@ -152,24 +152,6 @@ def _keep(item: tuple[Rows, Member, HeldOut], start: Levels) -> HeldExcess:
     parts = ((part.times_ns, part.excess) for part in follow(rows, member, held_out, start))
     path = held_out.path.with_suffix(".excess")
     return keep_excess(member.source, held_out.n_records, parts, path)
-
-
-def _rest(sources: list[HeldExcess], start: Levels) -> tuple[Floats, float]:
-    """Set where each source's sustained rests; return a sample of sustained and its highest."""
-    cap = float(np.quantile(np.concatenate([one.sample for one in sources]), _CAP_QUANTILE))
-    sample, highest = [np.zeros(0)], -np.inf
-    for one in sources:
-        one.usual = float(np.minimum(one.sample, cap).mean()) if len(one.sample) else 0.0
-        last_ns, value = -1, one.usual
-        every = max(1, one.n_records // len(one.sample)) if len(one.sample) else 1
-        for times_ns, excess in one.chunks():
-            found, _, last_ns, value = sustain(
-                times_ns, excess, last_ns, value, one.usual, start.tau_s, start.step_s, np.inf
-            )
-            judged = found[~np.isnan(excess)]
-            sample.append(judged[::every])
-            highest = max(highest, float(judged.max(initial=-np.inf)))
-    return np.concatenate(sample), highest
 
 
 def _tried(sample: Floats, highest: float) -> Floats:
@@ -184,12 +166,9 @@ def _tried(sample: Floats, highest: float) -> Floats:
     return np.asarray(low + span * steps)
 
 
-def _scales(
-    sources: list[HeldExcess], tried: tuple[Floats, Floats], start: Levels, settings: AlertSettings
-) -> tuple[Scale, Scale]:
+def _scales(passes: Passes, tried: tuple[Floats, Floats], usual: float) -> tuple[Scale, Scale]:
     """Return how often each kind of level is passed by itself: record, sustained."""
-    usual = max(one.usual for one in sources)
-    n = N_TRIED
+    n, start = N_TRIED, passes.start
     never = np.full(n, np.inf)
     caps = cap_of(tried[1], usual, start.tau_s, start.step_s)
     pairs = Pairs(
@@ -197,12 +176,10 @@ def _scales(
         np.concatenate([never, tried[1]]),
         np.concatenate([never, caps]),
     )
-    sweep = Sweep(pairs, start, settings)
-    episodes = np.zeros(len(pairs), dtype=np.int64)
-    for marks in _marks(sweep, sources):
-        episodes += np.bincount(marks.pair[marks.raised], minlength=len(pairs))
+    episodes = passes.episodes(pairs)
     at = [threshold_of(episodes[k * n : (k + 1) * n]) for k in range(2)]
-    peaks = _peaks(sources, pairs, [at[0], n + at[1]], start, settings)
+    over = [at[0], n + at[1]]
+    peaks = passes.peaks(Pairs(pairs.record[over], pairs.sustained[over], pairs.cap[over]))
     record, sustained = (
         scale_of(tried[k], episodes[k * n : (k + 1) * n], peaks[k], float(tried[k][at[k]]))
         for k in range(2)
@@ -210,35 +187,17 @@ def _scales(
     return record, sustained
 
 
-def _peaks(
-    sources: list[HeldExcess], pairs: Pairs, at: list[int], start: Levels, settings: AlertSettings
-) -> list[Floats]:
-    """Return the peak of every episode of some of the pairs."""
-    sweep = Sweep(Pairs(pairs.record[at], pairs.sustained[at], pairs.cap[at]), start, settings)
-    found: list[list[Floats]] = [[] for _ in at]
-    for marks in _marks(sweep, sources):
-        for k in range(len(at)):
-            found[k].append(marks.peak[~marks.raised & (marks.pair == k)])
-    pair, peak = sweep.still_open()
-    return [np.concatenate([*found[k], peak[pair == k]]) for k in range(len(at))]
-
-
-def _marks(sweep: Sweep, sources: list[HeldExcess]) -> Iterator[Marks]:
-    for one in sources:
-        for times_ns, excess in one.chunks():
-            yield sweep.add(one.source, one.usual, times_ns, excess)
-
-
 def _curve(
-    sources: list[HeldExcess],
+    passes: Passes,
     scales: tuple[Scale, Scale],
-    start: Levels,
-    settings: AlertSettings,
+    usual: float,
+    days: Ints,
     alerts_per_day: float,
     left_out: dict[str, Ints],
 ) -> Curve:
-    usual = max(one.usual for one in sources)
-    source_days = sum(one.n_judged for one in sources) * start.step_s * 1e9 / DAY_NS
+    sources, start = passes.sources, passes.start
+    n_judged = sum(one.n_judged for one in sources)
+    source_days = n_judged * start.step_s * 1e9 / DAY_NS
     allowed = alerts_per_day * source_days / len(sources)
     loosest = max(LOOSEST * allowed, 10.0 * LEAST_COUNT)
     alone = np.geomspace(LEAST_COUNT, loosest, N_PAIRS)
@@ -251,15 +210,17 @@ def _curve(
     # level on sustained says nothing.
     sustained = np.minimum(sustained, record)
     pairs = Pairs(record, sustained, cap_of(sustained, usual, start.tau_s, start.step_s))
-    sweep = Sweep(pairs, start, settings)
-    by_day = _by_day(sweep, sources)
-    seen = by_day.sum(axis=1)
-    time_share = sweep.n_over / max(sweep.n_judged, 1)
-    quiet_share, without = time_share, seen
-    if left_out:
-        rest = Sweep(pairs, start, settings)
-        without = _by_day(rest, sources, left_out).sum(axis=1)
-        quiet_share = rest.n_over / max(rest.n_judged, 1)
+    # Only sources with stretches left out are followed once more without them.
+    some = {one.source for one in sources if one.source in left_out}
+    others = passes.raised(pairs, days, {one.source for one in sources} - some)
+    every = others + passes.raised(pairs, days, some)
+    seen = every.by_day.sum(axis=1)
+    time_share = every.n_over / max(every.n_judged, 1)
+    quiet_share, without, n_hidden = time_share, seen, 0
+    if some:
+        quiet = others + passes.raised(pairs, days, some, left_out)
+        without, n_hidden = quiet.by_day.sum(axis=1), quiet.n_hidden
+        quiet_share = quiet.n_over / max(quiet.n_judged, 1)
     curve = Curve(
         record=record,
         sustained=sustained,
@@ -268,56 +229,16 @@ def _curve(
         expected=_expected(alone, seen),
         time_share=time_share,
         quiet_share=quiet_share,
-        by_day=by_day,
+        by_day=every.by_day,
         source_days=source_days,
         n_sources=len(sources),
         scales=scales,
         allowed=allowed,
         chosen=0,
-        left_share=_left_share(sources, left_out),
+        left_share=n_hidden / max(n_judged, 1),
     )
     curve = replace(curve, chosen=curve.place(allowed))
     return replace(curve, seen_without=int(without[curve.chosen]))
-
-
-def _left_share(sources: list[HeldExcess], left_out: dict[str, Ints]) -> float:
-    """Return the share of judged records that lie in stretches left out of the tables."""
-    n = 0
-    for one in sources:
-        for times_ns, excess in one.chunks():
-            n += int((_inside(times_ns, left_out.get(one.source)) & ~np.isnan(excess)).sum())
-    return n / max(sum(one.n_judged for one in sources), 1)
-
-
-def _inside(times_ns: Ints, stretches: Ints | None) -> NDArray[np.bool_]:
-    inside = np.zeros(len(times_ns), dtype=bool)
-    for start, end in stretches if stretches is not None else ():
-        inside |= (times_ns >= start) & (times_ns <= end)
-    return inside
-
-
-def _by_day(
-    sweep: Sweep, sources: list[HeldExcess], left_out: dict[str, Ints] | None = None
-) -> Ints:
-    """Return episodes of each pair by day of the fleet, (n_pairs, n_days).
-
-    left_out: stretches of each source that are passed over.
-    """
-    found: dict[int, Ints] = {}
-    for one in sources:
-        for times_ns, excess in one.chunks():
-            inside = _inside(times_ns, (left_out or {}).get(one.source))
-            excess = np.where(inside, np.nan, excess)
-            marks = sweep.add(one.source, one.usual, times_ns, excess)
-            for day in np.unique(times_ns[~np.isnan(excess)] // DAY_NS).tolist():
-                found.setdefault(day, np.zeros(len(sweep.pairs), dtype=np.int64))
-            days = times_ns[marks.row[marks.raised]] // DAY_NS
-            for day in np.unique(days).tolist():
-                pairs = marks.pair[marks.raised][days == day]
-                found[day] += np.bincount(pairs, minlength=len(sweep.pairs))
-    if not found:
-        return np.zeros((len(sweep.pairs), 0), dtype=np.int64)
-    return np.stack([found[day] for day in sorted(found)], axis=1)
 
 
 def _expected(alone: Floats, seen: Ints) -> Floats:
