@@ -103,7 +103,9 @@ class BinTable:
 
     def rows(self, values: Floats) -> BinRows:
         """Return (n, n_nodes) uint8 bin numbers of (n, n_nodes) readings, NaN = missing."""
-        return bin_rows(values, *self._laid_out)
+        rows = np.empty(values.shape, dtype=np.uint8)
+        fill_rows(values, *self._laid_out, rows)
+        return rows
 
     def columns(self, values: Floats) -> BinRows:
         """Return the same as `rows`, as (n_nodes, n) columns, on all cores; offline."""
@@ -180,29 +182,27 @@ def _bin_node(
 
 
 @njit(cache=True, nogil=True)
-def bin_rows(
+def fill_rows(
     values: Floats,
     borders: Floats,
     lasts: Floats,
     grid: Floats,
     cells: BinRows,
     n_words: NDArray[np.int64],
-) -> BinRows:
-    """Return the bin numbers of rows of readings.
+    rows: BinRows,
+) -> None:
+    """Fill rows (n, n_nodes) with the bin numbers of rows of readings.
 
     values: (n, n_nodes), NaN = missing; a state holds the number of its word.
     borders, lasts, grid, cells, n_words: see BinTable.
-    Returns (n, n_nodes) uint8.
     """
     n, n_nodes = values.shape
-    rows = np.empty((n, n_nodes), dtype=np.uint8)
     for first in range(0, n, STRIP):
         use = slice(first, min(first + STRIP, n))
         for i in range(n_nodes):
             _bin_node(
                 values[use, i], n_words[i], borders[i], lasts[i], grid[i], cells[i], rows[use, i]
             )
-    return rows
 
 
 @njit(cache=True, parallel=True)

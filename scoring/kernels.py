@@ -400,13 +400,27 @@ def removal_rows(
     Returns (n,) ln p(observed) and (n, n_instruments) -ln p(instrument's nodes | all other
         readings), NaN where the instrument is missing.
     """
+    evidence, own = np.empty(len(rows)), np.empty((len(rows), group_start.shape[0] - 1))
+    fill_removal(t, rows, group_start, group_nodes, evidence, own)
+    return evidence, own
+
+
+@njit(cache=True, nogil=True)
+def fill_removal(
+    t: TreeArrays,
+    rows: BinRows,
+    group_start: Ints,
+    group_nodes: Ints,
+    evidence: Floats,
+    own: Floats,
+) -> None:
+    """Fill evidence (n,) and own (n, n_instruments) with what `removal_rows` returns."""
     n, n_nodes = rows.shape
     n_instruments = group_start.shape[0] - 1
     work, row = np.empty(t.marginal.shape[1]), np.empty(n_nodes, np.uint8)
     strip, s = min(STRIP, n), scratch(t)
     bins, gaps = np.empty((n_nodes, strip), np.uint8), np.empty(strip, np.bool_)
     edge_nats, alone = np.empty((t.left.shape[0], strip)), np.empty((n_nodes, strip))
-    evidence, own = np.empty(n), np.full((n, n_instruments), np.nan)
     for first in range(0, n, STRIP):
         last = min(first + STRIP, n)
         _read_strip(rows[first:last], bins, gaps)
@@ -419,6 +433,7 @@ def removal_rows(
                 _forget_open(t, row, alone[:, r - first])
             for i in range(n_instruments):
                 if row[i] == MISSING:
+                    own[r, i] = np.nan
                     continue
                 value = alone[i, r - first]
                 if group_start[i + 1] > group_start[i]:
@@ -431,7 +446,6 @@ def removal_rows(
                     own[r, i] = -value
                 else:
                     own[r, i] = -_removed(t, i, row, evidence[r], s)
-    return evidence, own
 
 
 @njit(cache=True, nogil=True)

@@ -6,8 +6,10 @@ readings -> derived -> bins -> surprise and removal -> excess -> sustained -> al
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from threading import Lock
+from typing import NamedTuple
 
 import numpy as np
 from numba import njit
@@ -19,11 +21,17 @@ from scoring.density import belief_of, removal_of, rows_by_part
 from scoring.derived import Carry, derive
 from scoring.excess import ExcessScale
 from scoring.expected import shortest_interval
-from scoring.kernels import believe, scratch
 from scoring.model import Member, Model
+from scoring.runs import (
+    Bench,
+    Outcome,
+    fill_intervals,
+    fill_suspects,
+    score_runs,
+    usable_readings,
+)
 from scoring.standing import Standing
-from scoring.sustained import sustain
-from scoring.tree import TreeArrays
+from scoring.sustained import sustain_runs
 
 Floats = NDArray[np.float64]
 
@@ -47,8 +55,7 @@ class Expected:
     words: dict[str, float] | None = None
 
 
-@dataclass(frozen=True, slots=True)
-class Scores:
+class Scores(NamedTuple):
     """Scores of n records, arrays of shape (n,).
 
     surprise, excess, sustained: nats; excess is NaN where the record is not judged.
@@ -78,6 +85,10 @@ class Scores:
     channel_surprise: Floats
     rows: BinRows
 
+    def part(self, rows: slice) -> Scores:
+        """Return the scores of some of the records."""
+        return Scores(*(array[rows] for array in self))
+
 
 class Scorer:
     """Scores records under one model."""
@@ -87,6 +98,7 @@ class Scorer:
         self.instruments: tuple[Channel, ...] = model.table.instruments
         self._scales: dict[str, ExcessScale] = {}
         self._lock = Lock()
+        self._bench = Bench()
         self._low = np.array([c.span[0] if c.span else -np.inf for c in self.instruments])
         self._high = np.array([c.span[1] if c.span else np.inf for c in self.instruments])
         self._resolution = np.array([c.resolution or 0.0 for c in self.instruments])
@@ -103,55 +115,104 @@ class Scorer:
     def score(
         self, source: str, times_ns: NDArray[np.int64], values: Floats, standing: Standing | None
     ) -> tuple[Scores, Standing]:
-        """Return the scores of one source's records and its new standing.
+        """Return the scores of one source's records and its new standing; see `score_runs`."""
+        start = np.array([0, len(times_ns)])
+        scores, standings = self.score_runs([source], start, times_ns, values, [standing])
+        return scores, standings[0]
 
-        times_ns: (n,) n >= 1, as they came; a record not after the last one is late and
+    def score_runs(
+        self,
+        sources: Sequence[str],
+        start: NDArray[np.int64],
+        times_ns: NDArray[np.int64],
+        values: Floats,
+        standings: Sequence[Standing | None],
+    ) -> tuple[Scores, list[Standing]]:
+        """Return the scores of several sources' records and each one's new standing.
+
+        sources: (n_runs,) no source twice. start: (n_runs + 1,) where each source's rows
+            begin; none is empty.
+        times_ns: (n,) as they came; a record not after its source's last one is late and
             leaves the standing alone.
         values: (n, n_instruments), NaN = missing or of bad quality; a reading outside its
             span counts as missing.
-        A standing of another model is started anew.
+        standings: (n_runs,) before; one of another model is started anew.
         """
-        member, levels = self.model.member(source), self.model.levels
-        if standing is not None and standing.model != self.model.name:
-            standing = None
-        usable, values, n_usable = _usable(values, self._low, self._high)
-        nodes, carry = self._derive(times_ns, values, standing)
-        rows = member.bin_table.rows(nodes)
-        surprise, own = removal_of(member, rows, *self.model.derived_groups)
+        levels, name, n = self.model.levels, self.model.name, len(times_ns)
+        members = [self.model.member(source) for source in sources]
+        before = [one if one is not None and one.model == name else None for one in standings]
+        usable, kept = np.empty(values.shape, np.bool_), np.empty(values.shape)
+        n_usable = np.empty(n, np.int64)
+        usable_readings(values, self._low, self._high, usable, kept, n_usable)
         judged = n_usable >= levels.least_readings
-        excess = self._scale(member).excess(rows, surprise)
-        excess[~judged] = np.nan
-        sustained, late, last_ns, value = sustain(
-            times_ns,
-            excess,
-            standing.time_ns if standing else -1,
-            standing.sustained if standing else 0.0,
-            member.usual.sustained,
-            levels.tau_s,
-            levels.step_s,
-            levels.cap,
-        )
-        alert = _alerts(excess, sustained, late, levels.record, levels.sustained)
-        suspect, own_surprise = _suspects(own, member.usual.channel_median)
-        low, high, best = self._expected_rows(member, rows, suspect)
+        nodes, carries = self._derive_runs(start, times_ns, kept, before)
+        out = self._score_each(members, start, nodes, judged)
+        last_ns = np.array([one.time_ns if one else -1 for one in before])
+        value = np.array([one.sustained if one else 0.0 for one in before])
+        usual = np.array([member.usual.sustained for member in members])
+        sustained, late = np.empty(n), np.empty(n, np.bool_)
+        sustain_runs(
+            times_ns, out.excess, start, last_ns, value, usual, levels.tau_s, levels.step_s,
+            levels.cap, sustained, late,
+        )  # fmt: skip
         scores = Scores(
-            surprise=surprise,
-            excess=excess,
+            surprise=out.surprise,
+            excess=out.excess,
             sustained=sustained,
-            suspect=suspect,
-            suspect_surprise=own_surprise,
-            expected_low=low,
-            expected_high=high,
-            expected_best=best,
-            alert=alert,
-            missing=(len(self.instruments) - n_usable).astype(np.int16),
+            suspect=out.suspect,
+            suspect_surprise=out.suspect_surprise,
+            expected_low=out.low,
+            expected_high=out.high,
+            expected_best=out.best,
+            alert=_alerts(out.excess, sustained, late, levels.record, levels.sustained),
+            missing=(values.shape[1] - n_usable).astype(np.int16),
             judged=judged,
             late=late,
             usable=usable,
-            channel_surprise=own,
-            rows=rows,
+            channel_surprise=out.own,
+            rows=out.rows,
         )
-        return scores, Standing(self.model.name, int(last_ns), float(value), carry)
+        after = zip(last_ns.tolist(), value.tolist(), carries, strict=True)
+        return scores, [Standing(name, *one) for one in after]
+
+    def _score_each(
+        self,
+        members: Sequence[Member],
+        start: NDArray[np.int64],
+        nodes: Floats,
+        judged: NDArray[np.bool_],
+    ) -> Outcome:
+        """Return what can be said of every record by itself; judged: (n,)."""
+        n = len(nodes)
+        surprise, excess, own_surprise, low, high, best = np.empty((6, n))
+        own = np.empty((n, len(self.instruments)))
+        out = Outcome(
+            np.empty(nodes.shape, np.uint8), surprise, excess, own, np.empty(n, np.int16),
+            own_surprise, low, high, best, np.empty(len(members), np.int64),
+        )  # fmt: skip
+        at = np.array([self._bench.place(member) for member in members])
+        groups = self.model.derived_groups
+        if at.max() >= 0:
+            score_runs(
+                self._bench.members, at, start, nodes, judged, self._resolution, *groups, out
+            )
+        for k in np.flatnonzero((at < 0) | (out.gaps > 0)).tolist():
+            use = slice(start[k], start[k + 1])
+            if at[k] < 0:
+                self._score_parts(
+                    members[k], nodes[use], Outcome(*(a[use] for a in out[:-1]), out.gaps)
+                )
+            excess[use] = self._scale(members[k]).excess(out.rows[use], surprise[use])
+            excess[use][~judged[use]] = np.nan
+        return out
+
+    def _score_parts(self, member: Member, nodes: Floats, out: Outcome) -> None:
+        """Fill in, but for excess, what can be said of records under a member of several parts."""
+        out.rows[:] = member.bin_table.rows(nodes)
+        out.surprise[:], out.own[:] = removal_of(member, out.rows, *self.model.derived_groups)
+        usual = member.usual.channel_median
+        fill_suspects(out.own, usual, out.suspect, out.suspect_surprise)
+        out.low[:], out.high[:], out.best[:] = self._expected_rows(member, out.rows, out.suspect)
 
     def expected(self, source: str, row: BinRows, instrument: int) -> Expected:
         """Return what one instrument should have read beside the rest of `row`.
@@ -168,13 +229,29 @@ class Scorer:
         borders = member.bins[instrument].borders
         return Expected(*shortest_interval(belief, borders, self._resolution[instrument]))
 
+    def _derive_runs(
+        self,
+        start: NDArray[np.int64],
+        times_ns: NDArray[np.int64],
+        values: Floats,
+        before: Sequence[Standing | None],
+    ) -> tuple[Floats, list[Carry | None]]:
+        """Return all nodes' values and each source's carry."""
+        if not self.model.table.derived:
+            return values, [one.carry if one else None for one in before]
+        nodes = np.empty((len(values), len(self.model.table.nodes)))
+        carries: list[Carry | None] = []
+        for k, standing in enumerate(before):
+            use = slice(start[k], start[k + 1])
+            nodes[use], carry = self._derive(times_ns[use], values[use], standing)
+            carries.append(carry)
+        return nodes, carries
+
     def _derive(
         self, times_ns: NDArray[np.int64], values: Floats, standing: Standing | None
     ) -> tuple[Floats, Carry | None]:
         """Return all nodes' values; late records neither see nor become the last record."""
         carry = standing.carry if standing else None
-        if not self.model.table.derived:
-            return values, carry
         newest = np.maximum.accumulate(times_ns)
         last_ns = standing.time_ns if standing else -1
         on_time = times_ns > np.maximum(np.concatenate([[last_ns], newest[:-1]]), last_ns)
@@ -206,12 +283,12 @@ class Scorer:
     ) -> tuple[Floats, Floats, Floats]:
         """Return what each record's suspect should have read; NaN for a state or none."""
         borders, groups = member.bin_table.borders, self.model.derived_groups
-        low, high, best = (np.full(len(rows), np.nan) for _ in range(3))
+        low, high, best = found = np.full((3, len(rows)), np.nan)
         left = np.ones(len(rows), dtype=np.bool_)
         for k, at in rows_by_part(member, rows):
-            arrays = member.parts[k].tree.arrays
-            found = _intervals(arrays, rows[at], suspect[at], borders, self._resolution, *groups)
-            low[at], high[at], best[at] = found
+            arrays, some = member.parts[k].tree.arrays, np.empty((3, len(at)))
+            fill_intervals(arrays, rows[at], suspect[at], borders, self._resolution, *groups, *some)
+            found[:, at] = some
             left[at] = False
         for r in np.flatnonzero(left).tolist():
             i = int(suspect[r])
@@ -220,27 +297,6 @@ class Scorer:
                 own = member.bins[i].borders
                 low[r], high[r], best[r] = shortest_interval(belief, own, self._resolution[i])
         return low, high, best
-
-
-@njit(cache=True, nogil=True)
-def _usable(
-    values: Floats, low: Floats, high: Floats
-) -> tuple[NDArray[np.bool_], Floats, NDArray[np.int64]]:
-    """Return which readings are inside their span, the readings without the others, and how
-    many each record has. Loops, because a record alone pays for every array operation."""
-    n, n_instruments = values.shape
-    usable = np.empty((n, n_instruments), np.bool_)
-    kept = np.empty((n, n_instruments))
-    n_usable = np.zeros(n, np.int64)
-    for r in range(n):
-        for i in range(n_instruments):
-            x = values[r, i]
-            # False for NaN too.
-            inside = low[i] <= x <= high[i]
-            usable[r, i] = inside
-            kept[r, i] = x if inside else np.nan
-            n_usable[r] += inside
-    return usable, kept, n_usable
 
 
 @njit(cache=True, nogil=True)
@@ -255,55 +311,3 @@ def _alerts(
         elif excess[r] == excess[r] and not late[r] and sustained[r] > level:
             alert[r] = SUSTAINED_ALERT
     return alert
-
-
-@njit(cache=True, nogil=True)
-def _suspects(own: Floats, usual: Floats) -> tuple[NDArray[np.int16], Floats]:
-    """Return the instrument furthest over its usual surprise, -1 if all are missing, and its
-    surprise. The first of equals is taken."""
-    n = own.shape[0]
-    suspect, surprise = np.full(n, -1, np.int16), np.full(n, np.nan)
-    for r in range(n):
-        most = -np.inf
-        for i in range(own.shape[1]):
-            beyond = own[r, i] - usual[i]
-            # A NaN is over nothing.
-            if beyond > most or (suspect[r] < 0 and beyond == beyond):
-                most = beyond
-                suspect[r], surprise[r] = i, own[r, i]
-    return suspect, surprise
-
-
-@njit(cache=True, nogil=True)
-def _intervals(
-    t: TreeArrays,
-    rows: BinRows,
-    suspect: NDArray[np.int16],
-    borders: Floats,
-    resolution: Floats,
-    group_start: NDArray[np.int64],
-    group_nodes: NDArray[np.int64],
-) -> tuple[Floats, Floats, Floats]:
-    """Return the expected interval of each record's suspect under one tree.
-
-    borders: (n_nodes, width), see BinTable. A state has no borders and gets NaN.
-    """
-    n = rows.shape[0]
-    low, high, best = np.full(n, np.nan), np.full(n, np.nan), np.full(n, np.nan)
-    hidden = np.empty(rows.shape[1], np.uint8)
-    # Made once: room for a row costs as much as the row.
-    s = scratch(t)
-    for r in range(n):
-        i = int(suspect[r])
-        if i < 0 or borders[i, 0] != borders[i, 0]:
-            continue
-        n_borders = t.n_bins[i] - 1
-        hidden[:] = rows[r]
-        hidden[i] = MISSING
-        for k in range(group_start[i], group_start[i + 1]):
-            hidden[group_nodes[k]] = MISSING
-        s.seen[:] = False
-        believe(t, i, hidden, s)
-        p = s.vec[i, : n_borders + 1]
-        low[r], high[r], best[r] = shortest_interval(p, borders[i, :n_borders], resolution[i])
-    return low, high, best

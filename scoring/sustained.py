@@ -32,13 +32,30 @@ def sustain(
     last_ns: time of the source's last record, or -1 for none; before: sustained then.
     A late record is shown the standing value and does not change it.
     """
-    n = excess.shape[0]
-    out, late = np.empty(n), np.zeros(n, np.bool_)
+    out, late = np.empty(len(excess)), np.empty(len(excess), np.bool_)
+    last_ns, value = _fill(times_ns, excess, last_ns, before, usual, tau_s, step_s, cap, out, late)
+    return out, late, last_ns, value
+
+
+@njit(cache=True, nogil=True)
+def _fill(
+    times_ns: NDArray[np.int64],
+    excess: Floats,
+    last_ns: int,
+    before: float,
+    usual: float,
+    tau_s: float,
+    step_s: float,
+    cap: float,
+    out: Floats,
+    late: NDArray[np.bool_],
+) -> tuple[int, float]:
+    """Fill `out` and `late` with what `sustain` returns, and return the rest of it."""
     value = usual if last_ns < 0 else before
     usual_weight = 1.0 - math.exp(-step_s / tau_s)
-    for r in range(n):
-        if last_ns >= 0 and times_ns[r] <= last_ns:
-            late[r] = True
+    for r in range(excess.shape[0]):
+        late[r] = last_ns >= 0 and times_ns[r] <= last_ns
+        if late[r]:
             out[r] = value
             continue
         passed_s = step_s if last_ns < 0 else (times_ns[r] - last_ns) * 1e-9
@@ -51,4 +68,32 @@ def sustain(
             weight = min(usual_weight, 1.0 - math.exp(-passed_s / tau_s))
             value += weight * (min(x, cap) - value)
         out[r] = value
-    return out, late, last_ns, value
+    return last_ns, value
+
+
+@njit(cache=True, nogil=True)
+def sustain_runs(
+    times_ns: NDArray[np.int64],
+    excess: Floats,
+    start: NDArray[np.int64],
+    last_ns: NDArray[np.int64],
+    value: Floats,
+    usual: Floats,
+    tau_s: float,
+    step_s: float,
+    cap: float,
+    out: Floats,
+    late: NDArray[np.bool_],
+) -> None:
+    """Do what `sustain` does for the records of several sources, one after the other.
+
+    times_ns, excess, out, late: (n,). start: (n_runs + 1,) where each source's records begin.
+    last_ns, value: (n_runs,) last time and value before, and then after, the records. usual:
+    (n_runs,).
+    """
+    for k in range(last_ns.shape[0]):
+        use = slice(start[k], start[k + 1])
+        last_ns[k], value[k] = _fill(
+            times_ns[use], excess[use], last_ns[k], value[k], usual[k], tau_s, step_s, cap,
+            out[use], late[use],
+        )  # fmt: skip

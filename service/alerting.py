@@ -54,7 +54,7 @@ class Keeper:
             if episodes is None or (standing is None and run.still):
                 continue
             state.alert_live, events = episodes.step(
-                state.name, run.times_ns, run.values, run.scored.scores, standing,
+                state.name, run.times_ns, run.values, run.scored.scores.part(run.rows), standing,
                 heard_ns=run.heard_ns, ahead=run.ahead,
             )  # fmt: skip
             touched[state.name] = state

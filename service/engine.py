@@ -109,14 +109,18 @@ class Engine(Protocol):
 
     def score(
         self,
-        source: str,
+        sources: Sequence[str],
+        start: NDArray[np.int64],
         times_ns: NDArray[np.int64],
         values: Floats,
-        live: Any,
-        bad: NDArray[np.bool_] | None,
+        lives: Sequence[Any],
         channels: bool,
-    ) -> tuple[Scored, Any]:
-        """Score records of one source in order; return the scores and the new standing."""
+    ) -> tuple[Scored, list[Any]]:
+        """Score records of some sources; return the scores and each source's new standing.
+
+        start: (n_sources + 1,) where each one's rows begin, in the order of arrival. lives:
+        the standings before, None for none. channels: whether `every` is asked for.
+        """
 
     def standing_from(self, stored: bytes | None) -> Any:
         """Return a stored standing as an object; None where it does not carry over."""

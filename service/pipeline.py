@@ -52,9 +52,9 @@ class Outcome:
 class Run:
     """Records of one source in the order of arrival, for an alert sink.
 
-    values: (n, n_channels) as scored, bad readings NaN. heard_ns: when they came, by the
-    server's clock. still: they are late or ahead, and moved no standing; ahead: (n,) which
-    are ahead, None where none is.
+    values: (n, n_channels) as scored, bad readings NaN. scored: of these and of others' records;
+    these are its `rows`. heard_ns: when they came, by the server's clock. still: they are late
+    or ahead, and moved no standing; ahead: (n,) which are ahead, None where none is.
     """
 
     source: SourceState
@@ -62,9 +62,20 @@ class Run:
     times_ns: NDArray[np.int64]
     values: NDArray[np.float64]
     scored: Scored
+    rows: slice
     heard_ns: int
     still: bool = False
     ahead: NDArray[np.bool_] | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class _Stretch:
+    """Rows of one source that are scored together. still: all of them are late or ahead, and
+    move no standing."""
+
+    state: SourceState
+    rows: list[int]
+    still: bool = False
 
 
 class AlertSink(Protocol):
@@ -98,6 +109,7 @@ class GroupScorer:
         for row, name in enumerate(self.sheet.sources):
             rows_of.setdefault(name, []).append(row)
         states = self.group.sources(list(rows_of))
+        turns: list[list[_Stretch]] = []
         for name, rows in rows_of.items():
             state = states.get(name)
             if state is None:
@@ -105,8 +117,13 @@ class GroupScorer:
                 continue
             fresh = self._fresh(state, rows)
             if fresh:
-                self._score(state, fresh)
                 self.kept.append((state, fresh))
+                for turn, stretch in enumerate(self._stretches(state, fresh)):
+                    if turn == len(turns):
+                        turns.append([])
+                    turns[turn].append(stretch)
+        for stretches in turns:
+            self._score(stretches)
         self._copy_repeats()
         if self.kept:
             self.sheet.scored.close_open_sides()
@@ -183,74 +200,73 @@ class GroupScorer:
             if first in scored.every:
                 scored.every[row] = scored.every[first]
 
-    def _score(self, state: SourceState, rows: list[int]) -> None:
-        """Score a source's fresh rows and advance its state."""
-        if state.live is None or state.model != self.engine.name:
-            state.live = self.engine.standing_from(state.standing)
+    def _stretches(self, state: SourceState, rows: list[int]) -> list[_Stretch]:
+        """Return a source's fresh rows in stretches that move its standing, or do not."""
         times = self.sheet.times_ns[rows]
         newest_ns = int(times.max())
-        if len(rows) == 1:
-            self._score_one(state, rows, newest_ns)
-        else:
-            self._score_many(state, rows, times)
+        ahead_from_ns = self.now_ns + AHEAD_NS
+        first_ns, last_ns = int(times[0]), state.last_ns
         state.newest_ns = max(state.newest_ns, newest_ns)
         state.n_records += len(rows)
-        state.n_over_level += int(np.count_nonzero(self.sheet.scored.alert[rows]))
-
-    def _score_one(self, state: SourceState, rows: list[int], time_ns: int) -> None:
-        """Score one row without arrays of flags: most requests bring one record."""
-        mark = 0
-        if time_ns > self.now_ns + AHEAD_NS:
-            mark = FLAG_AHEAD
-        elif time_ns <= state.last_ns:
-            mark = FLAG_LATE
-        self._score_run(state, rows, moves=not mark)
-        if mark:
-            self.sheet.flags[rows[0]] += mark
-
-    def _score_many(self, state: SourceState, rows: list[int], times: NDArray[np.int64]) -> None:
-        ahead = times > self.now_ns + AHEAD_NS
-        moving = np.where(ahead, state.last_ns, times)
-        newest_before = np.maximum.accumulate(np.concatenate([[state.last_ns], moving[:-1]]))
-        late = ~ahead & (times <= newest_before)
-        still = ahead | late
-        if not still.any():
-            self._score_run(state, rows, moves=True)
-            return
+        # Most requests bring one record, and most batches only rising times.
+        is_rising = len(rows) == 1 or bool((times[1:] > times[:-1]).all())
+        if is_rising and first_ns > last_ns and newest_ns <= ahead_from_ns:
+            return [_Stretch(state, rows)]
+        ahead = times > ahead_from_ns
+        moving = np.where(ahead, last_ns, times)
+        newest_before = np.maximum.accumulate(np.concatenate([[last_ns], moving[:-1]]))
+        still = ahead | (times <= newest_before)
         borders = np.flatnonzero(np.diff(still)) + 1
-        for part in np.split(np.arange(len(rows)), borders):
-            run = [rows[i] for i in part.tolist()]
-            self._score_run(state, run, moves=not bool(still[part[0]]))
-        self.sheet.flags[rows] += (late * FLAG_LATE + ahead * FLAG_AHEAD).astype(np.int16)
+        return [
+            _Stretch(state, [rows[i] for i in part.tolist()], bool(still[part[0]]))
+            for part in np.split(np.arange(len(rows)), borders)
+        ]
 
-    def _score_run(self, state: SourceState, rows: list[int], *, moves: bool) -> None:
-        # One source alone in its group, or one that came in one piece, needs no copy.
-        whole = rows[-1] - rows[0] + 1 == len(rows)
-        at: Any = slice(rows[0], rows[-1] + 1) if whole else np.array(rows)
-        times = self.sheet.times_ns[at]
-        bad = None if self.sheet.bad is None else self.sheet.bad[at]
-        scored, live = self.engine.score(
-            state.name, times, self.sheet.values[at], state.live, bad, self.channels
-        )
-        out = self.sheet
+    def _score(self, stretches: Sequence[_Stretch]) -> None:
+        """Score one stretch each of some sources and advance their states."""
+        out, engine = self.sheet, self.engine
+        rows = [row for one in stretches for row in one.rows]
+        start = np.cumsum([0, *(len(one.rows) for one in stretches)])
+        # Rows that came in one piece need no copy.
+        whole = rows == list(range(rows[0], rows[0] + len(rows)))
+        at: Any = slice(rows[0], rows[0] + len(rows)) if whole else np.array(rows)
+        times, used = out.times_ns[at], out.values[at]
+        if out.bad is not None:
+            used = np.where(out.bad[at], np.nan, used)
+        for one in stretches:
+            if one.state.live is None or one.state.model != engine.name:
+                one.state.live = engine.standing_from(one.state.standing)
+        scored, lives = engine.score(
+            [one.state.name for one in stretches],
+            start, times, used, [one.state.live for one in stretches], self.channels,
+        )  # fmt: skip
         out.scored.put(at, scored, rows)
         if not scored.judged.all():
             out.flags[at] += (~scored.judged * FLAG_NOT_JUDGED).astype(np.int16)
-        used = self.sheet.values[at]
-        if bad is not None:
-            used = np.where(bad, np.nan, used)
-        ahead = None if moves else times > self.now_ns + AHEAD_NS
-        self.runs.append(
-            Run(state, self.engine, times, used, scored, self.now_ns, not moves, ahead)
-        )
-        if not moves:
-            return
-        state.live, state.model = live, self.engine.name
-        state.standing = self.engine.standing_bytes(live)
-        state.last_ns = int(times[-1])
-        state.excess = _or_none(scored.excess[-1])
-        state.sustained = _or_none(scored.sustained[-1])
-        state.alert = int(scored.alert[-1])
+        alerts = scored.alert.tolist()
+        for one, live, first, stop in zip(
+            stretches, lives, start[:-1].tolist(), start[1:].tolist(), strict=True
+        ):
+            part, state = slice(first, stop), one.state
+            ahead = None
+            if one.still:
+                ahead = times[part] > self.now_ns + AHEAD_NS
+                out.flags[one.rows] += np.where(ahead, FLAG_AHEAD, FLAG_LATE).astype(np.int16)
+            self.runs.append(
+                Run(
+                    state, engine, times[part], used[part], scored, part, self.now_ns, one.still,
+                    ahead,
+                )
+            )  # fmt: skip
+            state.n_over_level += sum(map(bool, alerts[part]))
+            if one.still:
+                continue
+            state.live, state.model = live, engine.name
+            state.standing = engine.standing_bytes(live)
+            state.last_ns = int(times[stop - 1])
+            state.excess = _or_none(float(scored.excess[stop - 1]))
+            state.sustained = _or_none(float(scored.sustained[stop - 1]))
+            state.alert = alerts[stop - 1]
 
     def _rows(self) -> list[tuple[Any, ...]]:
         """Return the rows for the store, source by source."""

@@ -90,6 +90,12 @@ KINDS: Mapping[str, Kind] = {
         "Nothing was stored; records stored before are safe. An operator must free disk space; "
         "send it again later.",
     ),
+    "answers-full": Kind(
+        503,
+        "No room for answers",
+        "Read answers while you send, or send fewer lines at once; send the lines from `index` on "
+        "again. An operator must free disk space where temporary files go (TMPDIR).",
+    ),
     "store-away": Kind(
         503,
         "Store cannot be reached",
@@ -107,6 +113,7 @@ KINDS: Mapping[str, Kind] = {
 RETRY_AFTER_S: Mapping[str, int] = {
     "overload": 1,
     "store-full": 60,
+    "answers-full": 60,
     "store-away": 5,
     "not-ready": 2,
 }

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from functools import cached_property, lru_cache
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -43,16 +43,15 @@ class ScoringEngine:
 
     def score(
         self,
-        source: str,
+        sources: Sequence[str],
+        start: NDArray[np.int64],
         times_ns: NDArray[np.int64],
         values: Floats,
-        live: Standing | None,
-        bad: NDArray[np.bool_] | None,
+        lives: Sequence[Standing | None],
         channels: bool,
-    ) -> tuple[Scored, Standing]:
-        """Score records of one source in order; see `Engine`."""
-        used = values if bad is None else np.where(bad, np.nan, values)
-        scores, standing = self._scorer.score(source, times_ns, used, live)
+    ) -> tuple[Scored, list[Standing]]:
+        """Score records of some sources; see `Engine`."""
+        scores, standings = self._scorer.score_runs(sources, start, times_ns, values, lives)
         scored = Scored(
             surprise=scores.surprise,
             excess=scores.excess,
@@ -66,21 +65,20 @@ class ScoringEngine:
             judged=scores.judged,
             scores=scores,
         )
-        if self.layout.states:
-            self._add_words(source, scores, scored)
-        if channels:
-            for row in range(len(times_ns)):
-                scored.every[row] = self._every_channel(source, scores, row)
-        return scored, standing
+        if self.layout.states or channels:
+            for source, first, stop in zip(sources, start[:-1], start[1:], strict=True):
+                rows = range(int(first), int(stop))
+                if self.layout.states:
+                    self._add_words(source, scores, rows, scored)
+                if channels:
+                    scored.every |= {r: self._every_channel(source, scores, r) for r in rows}
+        return scored, standings
 
-    def _add_words(self, source: str, scores: Scores, scored: Scored) -> None:
-        for row in np.flatnonzero(np.isin(scores.suspect, self._state_columns)).tolist():
-            expected = self._scorer.expected(source, scores.rows[row], int(scores.suspect[row]))
-            scored.words[row] = _rounded(expected.words or {})
-
-    @cached_property
-    def _state_columns(self) -> list[int]:
-        return list(self.layout.states)
+    def _add_words(self, source: str, scores: Scores, rows: range, scored: Scored) -> None:
+        for row, suspect in zip(rows, scores.suspect[rows.start : rows.stop].tolist(), strict=True):
+            if suspect in self.layout.states:
+                expected = self._scorer.expected(source, scores.rows[row], suspect)
+                scored.words[row] = _rounded(expected.words or {})
 
     def _every_channel(self, source: str, scores: Scores, row: int) -> list[dict[str, Any]]:
         found = []

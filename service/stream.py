@@ -2,15 +2,18 @@
 
 A client may send everything before it reads anything. Answers that it does not read yet
 wait in memory, then in a file of their own, so that reading its lines never stands still
-on writing answers; neither side can wait for the other for ever.
+on writing answers; neither side can wait for the other for ever. Where that file finds no
+room, what is stored is still answered, no further line is taken, and a last line says so.
 """
 
 from __future__ import annotations
 
 import asyncio
+import contextlib
+import os
 import tempfile
 from collections import deque
-from collections.abc import AsyncIterator
+from collections.abc import AsyncGenerator
 from typing import IO, Any
 
 import orjson
@@ -18,6 +21,7 @@ from starlette.types import Receive, Scope, Send
 
 from service.answers import batch_answers
 from service.bodies import BodyReader, ClientGone
+from service.logs import log_event
 from service.pipeline import Job, Outcome
 from service.problems import Problem
 from service.running import Service
@@ -38,16 +42,23 @@ async def answer_lines(
     spool = AnswerSpool()
     sender = asyncio.create_task(_send_all(spool, send))
     try:
-        async for position, lines in _pieces(service, reader):
-            spool.put(await _answer_piece(service, position, lines, request, channels))
+        async with contextlib.aclosing(_pieces(service, reader)) as pieces:
+            async for position, lines in pieces:
+                answers = await _answer_piece(service, position, lines, request, channels)
+                try:
+                    spool.put(answers)
+                except OSError as error:
+                    log_event("answers_full", request=request, detail=str(error))
+                    raise _no_room(position + len(lines)) from None
     except ClientGone:
         sender.cancel()
     except Problem as problem:
         # Status 200 may be out already; the refusal stands where the next answer would.
-        if not spool.started and not spool.n_put:
+        if not spool.n_put:
             sender.cancel()
             raise
-        spool.put(orjson.dumps({"problem": problem.as_dict()}) + b"\n")
+        spool.put_last(orjson.dumps({"problem": problem.as_dict()}) + b"\n")
+        await _drop_rest(receive, sender)
     except BaseException:
         sender.cancel()
         raise
@@ -57,9 +68,37 @@ async def answer_lines(
         spool.close()
 
 
+def _no_room(index: int) -> Problem:
+    return Problem(
+        "answers-full",
+        f"there is no room for more answers that are not read yet; the {index} lines before this "
+        "place are answered, none from here on was stored",
+        index=index,
+    )
+
+
+async def _drop_rest(receive: Receive, sender: asyncio.Task[None]) -> None:
+    """Read on without use until the answer is out: some clients read only when all is sent."""
+
+    async def drop() -> bool:
+        while True:
+            message = await receive()
+            if message["type"] == "http.disconnect":
+                return True
+            if not message.get("more_body"):
+                return False
+
+    rest = asyncio.create_task(drop())
+    await asyncio.wait((rest, sender), return_when=asyncio.FIRST_COMPLETED)
+    if not rest.done():
+        rest.cancel()
+    elif rest.result():
+        sender.cancel()
+
+
 async def _pieces(
     service: Service, reader: BodyReader
-) -> AsyncIterator[tuple[int, list[bytes | Problem]]]:
+) -> AsyncGenerator[tuple[int, list[bytes | Problem]], None]:
     """Yield the position of the first line, and lines; blank lines are no items."""
     limit = int(service.settings.limits.line_kb * 1000)
     splitter = LineSplitter(limit)
@@ -192,26 +231,39 @@ class AnswerSpool:
     def __init__(self) -> None:
         self._pieces: deque[bytes] = deque()
         self._n_bytes = 0
+        # Without a buffer: one that could not be written would fail once more at every later call.
         self._file: IO[bytes] | None = None
         self._read_at = self._written = 0
+        # What comes after the file, where it has no room.
+        self._last: deque[bytes] = deque()
         self._news = asyncio.Event()
         self._ended = False
-        self.started = False
         self.n_put = 0
 
     def put(self, piece: bytes) -> None:
-        """Add answers."""
+        """Add answers; raises OSError where the file has no room.
+
+        They will be sent all the same, from memory; then only `put_last` may follow.
+        """
         self.n_put += 1
+        self._news.set()
         behind = self._written > self._read_at
-        if behind or (self._pieces and self._n_bytes + len(piece) > _SPOOL_BYTES):
-            if self._file is None:
-                self._file = tempfile.TemporaryFile()  # noqa: SIM115 - closed in close()
-            self._file.seek(self._written)
-            self._file.write(piece)
-            self._written += len(piece)
-        else:
+        if not behind and (not self._pieces or self._n_bytes + len(piece) <= _SPOOL_BYTES):
             self._pieces.append(piece)
             self._n_bytes += len(piece)
+            return
+        try:
+            if self._file is None:
+                self._file = tempfile.TemporaryFile(buffering=0)  # noqa: SIM115 - see close()
+            _write_whole(self._file, piece, self._written)
+        except OSError:
+            self._last.append(piece)
+            raise
+        self._written += len(piece)
+
+    def put_last(self, piece: bytes) -> None:
+        """Add what ends the answer; it waits in memory."""
+        self._last.append(piece)
         self._news.set()
 
     def end(self) -> None:
@@ -227,14 +279,15 @@ class AnswerSpool:
                 self._n_bytes -= len(piece)
                 return piece
             if self._file is not None and self._read_at < self._written:
-                self._file.seek(self._read_at)
-                piece = self._file.read(min(_PIECE_BYTES, self._written - self._read_at))
+                n_bytes = min(_PIECE_BYTES, self._written - self._read_at)
+                piece = os.pread(self._file.fileno(), n_bytes, self._read_at)
                 self._read_at += len(piece)
                 if self._read_at == self._written:
-                    self._file.seek(0)
-                    self._file.truncate()
+                    self._file.truncate(0)
                     self._read_at = self._written = 0
                 return piece
+            if self._last:
+                return self._last.popleft()
             if self._ended:
                 return None
             self._news.clear()
@@ -246,9 +299,16 @@ class AnswerSpool:
             self._file.close()
 
 
+def _write_whole(file: IO[bytes], piece: bytes, at: int) -> None:
+    """Write there; the kernel may take less at once, and says only at the next that all is full."""
+    rest = memoryview(piece)
+    while rest:
+        n_bytes = os.pwrite(file.fileno(), rest, at)
+        rest, at = rest[n_bytes:], at + n_bytes
+
+
 async def _send_all(spool: AnswerSpool, send: Send) -> None:
     piece = await spool.take()
-    spool.started = True
     await send(
         {
             "type": "http.response.start",

@@ -104,8 +104,7 @@ def scores_of(
 
 def part(scores: Scores, rows: slice) -> Scores:
     """Return some rows of scores."""
-    fields = Scores.__dataclass_fields__
-    return Scores(**{name: getattr(scores, name)[rows] for name in fields})
+    return scores.part(rows)
 
 
 def sustained_of(machine: Episodes, times_ns: Ints, excess: Floats) -> Floats:

@@ -67,11 +67,27 @@ class FakeEngine:
 
     def score(
         self,
-        source: str,
+        sources: Sequence[str],
+        start: NDArray[np.int64],
         times_ns: NDArray[np.int64],
         values: Floats,
+        lives: Sequence[FakeStanding | None],
+        channels: bool,
+    ) -> tuple[Scored, list[FakeStanding]]:
+        scored, standings = Scored.empty(len(times_ns)), []
+        for source, live, first, stop in zip(sources, lives, start[:-1], start[1:], strict=True):
+            at = slice(int(first), int(stop))
+            some, after = self._score_one(source, times_ns[at], values[at], live, channels)
+            scored.put(at, some, range(at.start, at.stop))
+            standings.append(after)
+        return scored, standings
+
+    def _score_one(
+        self,
+        source: str,
+        times_ns: NDArray[np.int64],
+        used: Floats,
         live: FakeStanding | None,
-        bad: NDArray[np.bool_] | None,
         channels: bool,
     ) -> tuple[Scored, FakeStanding]:
         if source == self.fail_on:
@@ -79,7 +95,6 @@ class FakeEngine:
         standing = live or FakeStanding(self.name)
         n = len(times_ns)
         scored = Scored.empty(n)
-        used = values if bad is None else np.where(bad, np.nan, values)
         surprise = np.nan_to_num(used[:, 0], nan=0.0) / 10
         scored.surprise = surprise
         scored.judged = np.array(np.isfinite(used).any(axis=1), dtype=np.bool_)

@@ -1,8 +1,8 @@
 """Servers over the stand-in model or a real one: `python -m tests.service_server --spawn`.
 
-Reads lines with a JSON list, a folder and settings as section.key=value, and forks a
-server for each; its process id is answered. Importing the service once and not for every
-start makes it cheap to kill a server many times.
+Reads lines with a JSON list, a folder and settings as section.key=value or variables of the
+environment as NAME=value, and forks a server for each; its process id is answered. Importing
+the service once and not for every start makes it cheap to kill a server many times.
 """
 
 from __future__ import annotations
@@ -31,6 +31,9 @@ def main(folder: Path, words: list[str]) -> None:
     }
     for word in words:
         name, _, value = word.partition("=")
+        if name.isupper():
+            os.environ[name] = value
+            continue
         section, _, key = name.partition(".")
         options.setdefault(section, {})[key] = json.loads(value)
     settings = load_settings(None, options)

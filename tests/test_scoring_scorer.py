@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import fields, replace
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -32,7 +32,7 @@ def scorer() -> Scorer:
 
 def joined(parts: list[Scores]) -> dict[str, np.ndarray]:
     """Return the arrays of several scores put together."""
-    return {f.name: np.concatenate([getattr(p, f.name) for p in parts]) for f in fields(Scores)}
+    return {name: np.concatenate([getattr(p, name) for p in parts]) for name in Scores._fields}
 
 
 def run(scorer: Scorer, excess_like: list[float], start: Standing | None = None) -> Scores:

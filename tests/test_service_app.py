@@ -477,7 +477,7 @@ class Gatherer:
             minutes = ((run.times_ns // 10**9 - START_S) // 60).tolist()
             if not run.still:
                 assert run.ahead is None
-                self.seen.append((run.source.name, minutes, run.scored.alert.tolist()))
+                self.seen.append((run.source.name, minutes, run.scored.alert[run.rows].tolist()))
             else:
                 assert run.ahead is not None
                 self.still += minutes
@@ -491,8 +491,8 @@ def test_an_alert_sink_is_told_what_moved_a_standing_in_order(tmp_path: Path) ->
         api.post([*items, record(1, "b")])
         assert sink.seen == [
             ("mill-lane-2", [5, 6], [0, 1]),
-            ("mill-lane-2", [7], [0]),
             ("b", [1], [0]),
+            ("mill-lane-2", [7], [0]),
         ]
         assert (sink.still, sink.ahead) == ([2, 900], [False, True])
         sink.fail = True

@@ -5,11 +5,10 @@ from __future__ import annotations
 import json
 import random
 import sqlite3
-import subprocess
 import threading
 import time
-from collections.abc import Callable, Iterator
-from contextlib import closing, contextmanager
+from collections.abc import Iterator
+from contextlib import closing
 from pathlib import Path
 from typing import Any
 
@@ -21,6 +20,7 @@ from service.store.database import Database, StoreRefused
 from service.store.tables import source as source_table
 from tests.service_http import JSON, Server, record, running, serving
 from tests.service_postgres import Cluster, cluster
+from tests.small_disk import small_disk
 
 
 @pytest.fixture(scope="module")
@@ -190,25 +190,6 @@ def test_a_full_store_refuses_new_records_and_keeps_the_old_ones(tmp_path: Path)
     with running(tmp_path / "unbroken") as api:
         items = [record(i / 6) for i in range(len(acknowledged) + 1)]
         assert scores(stored) == scores(api.post(items).json())
-
-
-@contextmanager
-def small_disk(folder: Path, size: str) -> Iterator[Callable[[str], None] | None]:
-    """Mount a small disk in memory there and yield what resizes it; None where none may be."""
-    words = ["mount", "-t", "tmpfs", "-o", f"size={size}", "tmpfs", str(folder)]
-    try:
-        subprocess.run(words, capture_output=True, check=True)
-    except (OSError, subprocess.CalledProcessError):
-        yield None
-        return
-
-    def resize(size: str) -> None:
-        subprocess.run(["mount", "-o", f"remount,size={size}", str(folder)], check=True)
-
-    try:
-        yield resize
-    finally:
-        subprocess.run(["umount", str(folder)], check=True)
 
 
 def _wait_until_full(server: Server, senders: list[Sender]) -> None:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -13,6 +14,7 @@ from scoring.artefact import write_model
 from scoring.errors import BadArtefact
 from scoring.scorer import Scorer
 from scoring.standing import Standing
+from service.engine import Scored
 from service.metrics import FIGURE_HELP
 from service.scoring_engine import ScoringEngine, load_engine
 from service.times import format_time
@@ -34,6 +36,13 @@ def engine(path: Path) -> ScoringEngine:
     return load_engine(path)
 
 
+def score(engine: ScoringEngine, times_ns: np.ndarray, values: np.ndarray) -> tuple[Scored, Any]:
+    """Return the scores of records of source a and its new standing."""
+    start = np.array([0, len(times_ns)])
+    scored, lives = engine.score(["a"], start, times_ns, values, [None], channels=False)
+    return scored, lives[0]
+
+
 def test_a_missing_model_gets_a_sentence(tmp_path: Path) -> None:
     with pytest.raises(BadArtefact, match=str(tmp_path)):
         load_engine(tmp_path / "nowhere")
@@ -44,7 +53,7 @@ def test_scores_are_the_scorers_and_open_sides_are_none(engine: ScoringEngine) -
     order = np.argsort(times_ns, kind="stable")
     times_ns, values = times_ns[order], values[order]
     wanted, standing = Scorer(engine.model).score("a", times_ns, values, None)
-    found, live = engine.score("a", times_ns, values, None, None, channels=False)
+    found, live = score(engine, times_ns, values)
     for ours, theirs in (
         (found.surprise, wanted.surprise),
         (found.excess, wanted.excess),
@@ -59,17 +68,6 @@ def test_scores_are_the_scorers_and_open_sides_are_none(engine: ScoringEngine) -
     assert engine.standing_bytes(live) == standing.to_bytes()
 
 
-def test_a_bad_reading_counts_as_missing(engine: ScoringEngine) -> None:
-    times_ns, values = some_records(4, 5, gaps=0.0)
-    bad = np.zeros(values.shape, dtype=np.bool_)
-    bad[:, 1] = True
-    without = np.where(bad, np.nan, values)
-    marked, _ = engine.score("a", times_ns, values, None, bad, channels=False)
-    absent, _ = engine.score("a", times_ns, without, None, None, channels=False)
-    np.testing.assert_array_equal(marked.surprise, absent.surprise)
-    assert not np.isnan(values).any(), "what came is kept as it came"
-
-
 def test_a_standing_of_another_model_or_format_does_not_carry_over(engine: ScoringEngine) -> None:
     own = Standing(engine.name, 5, 1.5).to_bytes()
     assert engine.standing_from(own) == Standing(engine.name, 5, 1.5)
@@ -80,7 +78,7 @@ def test_a_standing_of_another_model_or_format_does_not_carry_over(engine: Scori
 
 def test_a_suspect_state_comes_with_its_words(engine: ScoringEngine) -> None:
     times_ns, values = some_records(6, 400, gaps=0.0)
-    found, _ = engine.score("a", times_ns, values, None, None, channels=False)
+    found, _ = score(engine, times_ns, values)
     rows = np.flatnonzero(found.suspect == 3).tolist()
     assert rows
     assert set(found.words) == set(rows)
