@@ -7,9 +7,10 @@ import os
 import subprocess
 import sys
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -69,3 +70,9 @@ def worker(folder: Path, address: str, name: str) -> Iterator[subprocess.Popen[b
     more = ("--no-nanny", "--nthreads", "1", "--name", name, "--local-directory", str(folder))
     with dask_process(folder, "worker", address, *more) as process:
         yield process
+
+
+def slowly(item: Any, work: Callable[[Any], Any]) -> Any:
+    """Return work(item), but not at once: time enough to end who does it."""
+    time.sleep(1.0)
+    return work(item)

@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-import os
 import subprocess
 import sys
 import time
 from collections.abc import Iterator
 from contextlib import ExitStack, contextmanager
 from dataclasses import dataclass
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -20,15 +20,19 @@ from click.testing import CliRunner, Result
 
 from scoring.artefact import read_model, write_model
 from scoring.channels import ChannelTable, load_channels
-from tests.clusters import need_dask, scheduler, worker
+from tests.clusters import need_dask, scheduler, slowly, worker
+from tests.night_site import N_RECORDS, last_night, some_records, write_site
+from tests.night_site import SOURCES as NIGHT_SOURCES
 from tests.plant_files import CHANNELS, records
+from tests.service_http import running
 from tests.spools import times
 from training import cluster as cluster_module
 from training.cluster import Cluster, NoCluster, cluster_at
-from training.hands import HERE
+from training.hands import HERE, Hands
 from training.history.options import HistoryOptions
 from training.history.spool import spool_history
 from training.learn import learn_command, learn_model
+from training.nightly import nightly_command
 from training.settings import LearnSettings
 
 # The last has too few records for a member of its own.
@@ -119,15 +123,21 @@ class KillHalfWay:
     def advance(self, n: int) -> None:
         """Count, and end a worker that has work in hand."""
         self.n_done += n
-        if self.n_done != 2:
-            return
-        busy = [at for at, tasks in self._client.processing().items() if tasks]
-        assert busy, "nobody has work in hand half way"
-        pid = self._client.run(os.getpid, workers=busy[:1])[busy[0]]
-        (name,) = (name for name, process in self._workers.items() if process.pid == pid)
-        self._workers[name].kill()
-        self._workers[name].wait()
-        self.lost.append(name)
+        if self.n_done == 2:
+            self.lost.append(end_a_busy_one(self._client, self._workers))
+
+
+def end_a_busy_one(client: Any, workers: dict[str, subprocess.Popen[bytes]]) -> str:
+    """End a worker that has work in hand, hard, and return its name."""
+    until = time.monotonic() + 30
+    while not (busy := [at for at, tasks in client.processing().items() if tasks]):
+        assert time.monotonic() < until, "nobody has work in hand"
+        time.sleep(0.01)
+    names = {worker["id"]: at for at, worker in client.scheduler_info()["workers"].items()}
+    (name,) = (name for name in workers if names.get(name) == busy[0])
+    workers[name].kill()
+    workers[name].wait()
+    return name
 
 
 def learn(out: Path, history: History, *words: str | Path) -> Result:
@@ -185,6 +195,58 @@ def test_two_workers_learn_the_same_model_though_one_is_killed_half_way_and_so_d
     levels = {"_keep", "_rest_of", "_episodes_of", "_peaks_of", "_raised_of"}
     whole = {"_sampled_of", "_count", "_parts_of", "_still_of"}
     assert handed_out == reading | learning | levels | whole
+
+
+def night(*words: str) -> dict[str, Any]:
+    """Run the nightly command and return its report's data; what goes wrong is raised."""
+    line = ["--config", "nightly.toml", *words]
+    result = CliRunner().invoke(nightly_command, line, standalone_mode=False)
+    assert result.exception is None, result.exception
+    return last_night()
+
+
+def test_a_night_on_two_workers_publishes_the_same_model_though_one_is_killed_over_the_levels(
+    address: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.chdir(tmp_path)
+    write_site(tmp_path)
+    with running(tmp_path) as api:
+        for number, source in enumerate(NIGHT_SOURCES):
+            assert api.post(some_records(source, number)).status_code == 200
+    first, alone = night(), night()
+    lost: list[str] = []
+    submit, handed_out = Cluster._submit, noting(monkeypatch)
+    noted = Cluster._submit
+    with two_workers(tmp_path, address) as workers:
+
+        def submitted(self: Cluster, work: Any, item: Any) -> Any:
+            if lost or work.func.__name__ != "_episodes_of":
+                return noted(self, work, item)
+            handed_out.add(work.func.__name__)
+            future = submit(self, partial(slowly, work=work), item)
+            lost.append(end_a_busy_one(self.client, workers))
+            return future
+
+        @contextmanager
+        def in_small_parts(where: str | None) -> Iterator[Hands]:
+            with cluster_at(where) as hands:
+                assert isinstance(hands, Cluster)
+                hands.client.wait_for_workers(2, timeout=60)
+                hands.part_records = N_RECORDS // 2
+                yield hands
+
+        monkeypatch.setattr(Cluster, "_submit", submitted)
+        monkeypatch.setattr("training.nightly.cluster_at", in_small_parts)
+        shared = night("--cluster", address)
+    assert len(lost) == 1
+    assert shared["verdict"] == alone["verdict"] == "published"
+    name = read_model(Path("models/current")).name
+    assert shared["model"] == alone["model"] == first["model"] == name
+    # The judge, too, finds the same to the last digit.
+    assert shared["answers"] == alone["answers"]
+    assert len(shared["answers"]) == 13
+    levels = {"_keep", "_rest_of", "_episodes_of", "_peaks_of", "_raised_of"}
+    assert {"_learn_part", "_count", "tell", *levels} <= handed_out
 
 
 def test_a_night_does_not_wait_for_workers_that_are_all_gone(

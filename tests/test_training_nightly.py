@@ -2,10 +2,8 @@
 
 from __future__ import annotations
 
-import json
 import math
 import os
-import random
 import re
 import signal
 import subprocess
@@ -14,7 +12,7 @@ from collections.abc import Iterator
 from contextlib import contextmanager
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import Any, NoReturn
+from typing import NoReturn
 
 import numpy as np
 import pytest
@@ -25,7 +23,17 @@ from scoring.errors import OddbranchError
 from scoring.scorer import Scorer
 from tests.conftest import ROOT
 from tests.models import a_model
-from tests.service_http import NOW_NS, START_S, Api, record, running
+from tests.night_site import (
+    CHANNELS,
+    N_HELD,
+    N_RECORDS,
+    SETTINGS,
+    SOURCES,
+    last_night,
+    some_records,
+    write_site,
+)
+from tests.service_http import NOW_NS, START_S, Api, running
 from tests.stored_alerts import put_alert
 from training import nightly
 from training.hands import Hands, Here
@@ -34,53 +42,14 @@ from training.kept import KeptModels
 from training.night_files import NightFiles
 from training.nightly import Failed, Refused, nightly_command
 
-CHANNELS = """\
-format = 1
-step_s = 60
-[[channel]]
-name = "flow"
-[[channel]]
-name = "power"
-[[channel]]
-name = "speed"
-"""
-# The last 72 of the minutes are the judge's.
-SETTINGS = """\
-[history]
-least_records = 100
-least_hours = 3
-join_alerts_h = 0.0
-[judge]
-days = 0.05
-least_hours = 1
-block_h = 0.25
-drill_trials = 0
-[report]
-metrics = "night.prom"
-"""
-N_RECORDS, N_HELD = 500, 72
 LAST_WEEK = datetime(2026, 11, 24, 2, 15, tzinfo=UTC)
-SOURCES = ("mill-lane", "quarry-rise")
-
-
-def some_records(source: str, seed: int, until: int = 0) -> list[dict[str, Any]]:
-    """Return records of a pump whose flow and power follow its speed, up to a minute."""
-    rng = random.Random(seed)
-    found = []
-    for minute in range(until - N_RECORDS, until):
-        speed = 1300 + 120 * math.sin(minute / 40) + rng.gauss(0, 5)
-        flow, power = speed / 6 + rng.gauss(0, 1), (speed / 1300) ** 3 * 30 + rng.gauss(0, 0.2)
-        readings = {"flow": round(flow, 1), "power": round(power, 2), "speed": round(speed)}
-        found.append(record(minute, source, **readings))
-    return found
 
 
 @pytest.fixture
 def site(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
     """Make the site's folder the working one, with its settings."""
     monkeypatch.chdir(tmp_path)
-    Path("channels.toml").write_text(CHANNELS, encoding="utf-8")
-    Path("nightly.toml").write_text(SETTINGS, encoding="utf-8")
+    write_site(tmp_path)
     return tmp_path
 
 
@@ -104,12 +73,6 @@ def run() -> str:
         raise result.exception
     assert result.exception is None, result.exception
     return result.output
-
-
-def last_night() -> dict[str, Any]:
-    """Return the newest report's data."""
-    found: dict[str, Any] = json.loads(sorted(Path("nightly").glob("*.json"))[-1].read_text())
-    return found
 
 
 def metrics() -> dict[str, float]:

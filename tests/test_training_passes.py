@@ -3,8 +3,7 @@
 from __future__ import annotations
 
 import pickle
-from collections.abc import Callable, Iterator, Sequence
-from dataclasses import dataclass, fields
+from dataclasses import fields
 from pathlib import Path
 from typing import Any
 
@@ -12,9 +11,9 @@ import numpy as np
 import pytest
 
 from scoring.alert_settings import AlertSettings
-from tests.each_alone import EachAlone
+from tests.each_alone import ByPost, EachAlone
 from tests.streams import NEVER, held
-from training.hands import HERE, Counted, Here, Item, Result
+from training.hands import HERE, Here
 from training.heldexcess import HeldExcess
 from training.levels import Curve, curve_of
 from training.passes import DAY_NS, Passes, inside
@@ -26,31 +25,6 @@ PAIRS = Pairs(
     sustained=np.array([6.0, np.inf, 5.0]),
     cap=np.array([30.0, np.inf, 25.0]),
 )
-
-
-@dataclass(frozen=True)
-class ByPost(EachAlone):
-    """Hands that get everything as bytes, as another machine would, and note how many."""
-
-    n_bytes: list[int]
-
-    def each(self, work: Callable[[Item], Result], items: Sequence[Item]) -> Iterator[Result]:
-        """Yield what comes back of all items."""
-        yield from super().each(self._posted(work), items)
-
-    def total(self, work: Callable[[Item], Counted], items: Sequence[Item]) -> Counted:
-        """Return the sum of what comes back."""
-        return super().total(self._posted(work), items)
-
-    def _posted(self, work: Callable[[Item], Result]) -> Callable[[Item], Result]:
-        def posted(item: Item) -> Result:
-            sent = pickle.dumps((work, item))
-            self.n_bytes.append(len(sent))
-            there, what = pickle.loads(sent)
-            result: Result = pickle.loads(pickle.dumps(there(what)))
-            return result
-
-        return posted
 
 
 def left_out_of(kept: list[HeldExcess]) -> dict[str, Any]:
@@ -77,7 +51,7 @@ def test_whoever_follows_the_excess_the_curve_is_the_same_to_the_last_bit(
     n_bytes: list[int] = []
     for number, hands in enumerate((HERE, EachAlone(), ByPost(n_bytes))):
         (tmp_path / f"{number}").mkdir()
-        kept = held(tmp_path / f"{number}", bursts_per_day=2.0)
+        kept = held(tmp_path / f"{number}", n=8000, bursts_per_day=2.0)
         left_out = left_out_of(kept) if some_left_out else {}
         curve = curve_of(kept, NEVER, 1.5, SETTINGS, left_out, hands)
         assert curve is not None
@@ -86,7 +60,7 @@ def test_whoever_follows_the_excess_the_curve_is_the_same_to_the_last_bit(
         usual.append([one.usual for one in kept])
     assert curves[0] == curves[1] == curves[2]
     assert usual[0] == usual[1] == usual[2]
-    # Names of files travel, not the excess: 14,400 records of 24 bytes, and a sample of them.
+    # Names of files travel, not the excess: 8,000 records of 24 bytes, and a sample of them.
     assert 0 < max(n_bytes) < 20_000
 
 

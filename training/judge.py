@@ -8,8 +8,9 @@ change of plant, models from before it are no measure for the sources it touched
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
+from functools import partial
 from pathlib import Path
 
 import numpy as np
@@ -18,6 +19,7 @@ from scoring.model import Model
 from training import judge_answers as answers
 from training.changes import Change, since
 from training.chosen import HOUR_NS, Chosen
+from training.hands import HERE, Hands
 from training.history.batch import HistoryBatch
 from training.history.spool import Spool
 from training.history.tally import Tally
@@ -30,21 +32,22 @@ from training.judge_cover import (
     spans_covered,
     tree_change,
 )
-from training.judge_density import Compared, Records, as_read_by, compare
+from training.judge_density import Compared, as_read_by, compared
 from training.judge_drill import Quiet, Smallest, drill_both, smallest, worst
-from training.judge_runaway import Residual, residuals_of
+from training.judge_runaway import Residual
+from training.judge_source import Asked, Told, only, tell
 from training.judging import DAY_NS
 from training.learn import LearnResult
 from training.members import LEAST_OWN_RECORDS
 from training.nightly_settings import HistoryWanted, JudgeLimits
-from training.online import Online
 
 
 @dataclass(frozen=True)
 class Judgement:
     """What the judge found; the rest is for the report.
 
-    smallest: offsets of the drill. residuals: of all sources under their witness.
+    smallest: offsets of the drill. residuals: of all sources under their witness. own_nats:
+    the new model's surprise on the judge's days, nats a reading.
     """
 
     answers: tuple[Answer, ...]
@@ -53,6 +56,7 @@ class Judgement:
     residuals: tuple[Residual, ...] = ()
     compared: Compared | None = None
     n_alerts: int = 0
+    own_nats: float | None = None
 
     @property
     def refusals(self) -> tuple[Answer, ...]:
@@ -83,7 +87,7 @@ class Case:
     """What the judge looks at. witnesses: kept models, oldest first.
 
     left_out_before: the share left out of the tables the night before.
-    folder: for temporary files.
+    folder: for temporary files. hands: who looks at the sources.
     """
 
     chosen: Chosen
@@ -93,6 +97,7 @@ class Case:
     limits: JudgeLimits
     left_out_before: float | None
     folder: Path
+    hands: Hands = HERE
 
     @property
     def new(self) -> Model:
@@ -104,18 +109,10 @@ class Case:
         """The changes of plant that the site declared."""
         return self.chosen.changes
 
-    def records(self, sources: Sequence[str] | None = None) -> Iterator[Records]:
-        """Yield the judge's records of some sources, all unless said."""
-        return held_records(self.chosen.held, sources)
-
-
-def held_records(held: Spool, sources: Sequence[str] | None = None) -> Iterator[Records]:
-    """Yield whole sources of a spool, all unless said."""
-    for source in held.sources if sources is None else sources:
-        if source in held.sources:
-            parts = list(held.chunks(source))
-            times, values = (np.concatenate(part) for part in zip(*parts, strict=True))
-            yield source, times, values
+    @property
+    def block_ns(self) -> int:
+        """The blocks of time that are drawn anew."""
+        return round(self.limits.block_h * HOUR_NS)
 
 
 def enough(chosen: Chosen, wanted: HistoryWanted) -> list[Answer]:
@@ -135,24 +132,25 @@ def enough(chosen: Chosen, wanted: HistoryWanted) -> list[Answer]:
 def judge(case: Case, first: Sequence[Answer] = ()) -> Judgement:
     """Return the judgement. first: answers found before, which stand first."""
     limits = case.limits
-    hours = {int(t) for _, times, _ in case.records() for t in np.unique(times // HOUR_NS)}
+    alike = [] if case.in_use is None else comparable(case.new, case.in_use, case.changes)
+    spoke = {source: witness_of(case, source) for source in case.chosen.held.sources}
+    told = _told(case, alike, spoke)
+    hours = {hour for one in told for hour in one.hours.tolist()}
     found = [*first, _known_sources(case)]
     found.append(
         answers.at_least("judge's hours", len(hours), limits.least_hours, "hours to judge by")
     )
-    n_alerts, alert_answer = _alerts(case)
-    residuals, run_away = _run_away(case)
+    n_alerts, alert_answer = _alerts(case, told)
+    residuals, run_away = _run_away(case, told, spoke)
+    own = compared([one.own for one in told])
+    own_nats = own.new if own is not None else None
     share = left_out_share(case.learned)
     left_out = answers.left_out(share, case.left_out_before, limits.most_left_out_growth)
     if case.in_use is None:
         offsets, drilled = _drill(case, None)
         found += [alert_answer, drilled, run_away, left_out]
-        return Judgement(tuple(found), None, offsets, residuals, None, n_alerts)
-    alike = comparable(case.new, case.in_use, case.changes)
-    names = [source for source in case.chosen.held.sources if source in alike]
-    compared = compare(
-        case.new, case.in_use, unseen(case, case.in_use, names), round(limits.block_h * HOUR_NS)
-    )
+        return Judgement(tuple(found), None, offsets, residuals, None, n_alerts, own_nats)
+    both = compared([one.compared for one in told if one.compared is not None])
     tree = tree_change(case.new, case.in_use, alike) if alike else None
     offsets, drilled = _drill(case, case.in_use if alike else None)
     found += [
@@ -160,14 +158,14 @@ def judge(case: Case, first: Sequence[Answer] = ()) -> Judgement:
         answers.covered(
             "spans", spans_covered(case.new, case.in_use, alike), limits.least_span, "range"
         ),
-        answers.density(compared, limits.density_slack_nats),
+        answers.density(both, limits.density_slack_nats),
         alert_answer,
         drilled,
     ]
     if tree is not None:
         found.append(answers.tree(tree, limits.most_tree_change))
     found += [run_away, left_out]
-    return Judgement(tuple(found), tree, offsets, residuals, compared, n_alerts)
+    return Judgement(tuple(found), tree, offsets, residuals, both, n_alerts, own_nats)
 
 
 def comparable(new: Model, old: Model, changes: Sequence[Change]) -> list[str]:
@@ -175,16 +173,37 @@ def comparable(new: Model, old: Model, changes: Sequence[Change]) -> list[str]:
     return [source for source in both_own(new, old) if is_after(old, source, changes)]
 
 
-def unseen(case: Case, old: Model, sources: Sequence[str]) -> Iterator[Records]:
-    """Yield the judge's records of some sources that an older model did not learn from.
+def _told(case: Case, alike: Sequence[str], spoke: dict[str, Witness | None]) -> list[Told]:
+    """Return what is found at each source with a record on the judge's days, in their order."""
+    held = case.chosen.held
+    if not held.sources:
+        return []
+    case.hands.must_see(case.folder)
+    until_ns = max(held.first_last_ns(source)[1] for source in held.sources)
+    asked = [
+        Asked(
+            source,
+            held.only((source,)),
+            only(case.new, source),
+            only(case.in_use, source) if case.in_use is not None and source in alike else None,
+            learned_until(case.in_use, source),
+            only(witness.model, source) if witness is not None else None,
+        )
+        for source, witness in spoke.items()
+    ]
+    work = partial(tell, block_ns=case.block_ns, until_ns=until_ns, folder=case.folder)
+    return list(case.hands.each(work, asked))
 
-    One that was learned by hand may know the judge's days; what it knows is no measure.
+
+def learned_until(model: Model | None, source: str) -> int:
+    """Return the last time that a source's member learned from, -1 if that is not known.
+
+    A model that was learned by hand may know the judge's days; what it knows is no measure.
     """
-    for source, times_ns, values in case.records(sources):
-        last_ns = old.members[source].about.get("last_ns") if source in old.members else None
-        later = times_ns > (last_ns if last_ns is not None else -1)
-        if later.any():
-            yield source, times_ns[later], values[later]
+    if model is None or source not in model.members:
+        return -1
+    last_ns = model.members[source].about.get("last_ns")
+    return -1 if last_ns is None else int(last_ns)
 
 
 def is_after(model: Model, source: str, changes: Sequence[Change]) -> bool:
@@ -227,18 +246,14 @@ def _readings(case: Case, old: Model, alike: Sequence[str]) -> Answer:
     )
 
 
-def _alerts(case: Case) -> tuple[int, Answer]:
+def _alerts(case: Case, told: Sequence[Told]) -> tuple[int, Answer]:
     confidence, promise = case.limits.alert_confidence, case.learned.promise
     if promise is None:
         sentence = "The new model has no levels: it would raise no alert at all."
         return 0, Answer("alerts", None, None, False, sentence)
-    online = Online(case.new, case.folder)
-    for source, times_ns, values in case.records():
-        online.add(source, times_ns, values)
-    online.finish()
-    n = len(online.calls())
+    n = sum(one.n_alerts for one in told)
     step_s = case.new.levels.step_s
-    source_days = sum(one.n_judged for one in online.excess) * step_s * 1e9 / DAY_NS
+    source_days = sum(one.n_judged for one in told) * step_s * 1e9 / DAY_NS
     # Beyond the data fewer episodes were seen than the tail expects; the larger counts.
     count = max(float(promise.n_seen), promise.rate * promise.source_days)
     low, high = count_to_come(
@@ -274,32 +289,33 @@ def _drill(case: Case, old: Model | None) -> tuple[tuple[Smallest, ...], Answer]
 
 def respooled(case: Case, old: Model) -> Spool:
     """Return the judge's records in the order of another model's instruments, to be closed."""
-    spool, tally = Spool(len(old.table.instruments), case.folder), Tally()
-    for source, times_ns, values in case.records():
-        n = len(times_ns)
-        spool.add(
-            HistoryBatch(
-                Path(source), np.arange(n), times_ns, np.zeros(n, dtype=np.int32), (source,),
-                as_read_by(old, case.new, values), np.full(n, "", dtype=object),
-            ),
-            (),
-            tally,
-        )  # fmt: skip
+    spool, tally, held = Spool(len(old.table.instruments), case.folder), Tally(), case.chosen.held
+    for source in held.sources:
+        for times_ns, values in held.chunks(source):
+            n = len(times_ns)
+            spool.add(
+                HistoryBatch(
+                    Path(source), np.arange(n), times_ns, np.zeros(n, dtype=np.int32), (source,),
+                    as_read_by(old, case.new, values), np.full(n, "", dtype=object),
+                ),
+                (),
+                tally,
+            )  # fmt: skip
     spool.finish(tally)
     return spool
 
 
-def _run_away(case: Case) -> tuple[tuple[Residual, ...], Answer]:
-    found: list[Residual] = []
-    unasked, names = [], []
-    for source, times_ns, values in case.records():
-        witness = next((w for w in case.witnesses if _may_speak(w, source, case.changes)), None)
-        if witness is None:
-            unasked.append(source)
-            continue
-        names.append(witness.name)
-        read = as_read_by(witness.model, case.new, values)
-        found += residuals_of(witness.model, source, times_ns, read)
+def witness_of(case: Case, source: str) -> Witness | None:
+    """Return the oldest kept model that may speak of a source."""
+    return next((w for w in case.witnesses if _may_speak(w, source, case.changes)), None)
+
+
+def _run_away(
+    case: Case, told: Sequence[Told], spoke: dict[str, Witness | None]
+) -> tuple[tuple[Residual, ...], Answer]:
+    found = [residual for one in told for residual in one.residuals]
+    names = [witness.name for witness in spoke.values() if witness is not None]
+    unasked = [source for source, witness in spoke.items() if witness is None]
     limits = case.limits
     name = f"the oldest kept model, {names[0]}" if names else "no kept model"
     answer = answers.run_away(

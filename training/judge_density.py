@@ -53,23 +53,56 @@ class Compared:
     by_source: dict[str, float]
 
 
+@dataclass(frozen=True, slots=True)
+class Sums:
+    """What two models made of one source's records.
+
+    blocks: (k,) numbers of its blocks of time. sums: (k, 3) of each the new model's nats less
+    the other's, the new model's own, readings compared. n_hidden: readings that only one knows.
+    """
+
+    source: str
+    blocks: Ints
+    sums: Floats
+    n_hidden: int
+
+
 def compare(new: Model, old: Model, records: Iterable[Records], block_ns: int) -> Compared | None:
     """Return how two models compare; None where they share no reading."""
-    pairs = shared_instruments(new, old)
+    return compared(sums_of(new, old, one, block_ns) for one in records)
+
+
+def sums_of(new: Model, old: Model, records: Records, block_ns: int) -> Sums:
+    """Return what two models make of one source's records."""
+    source, times_ns, values = records
+    difference, own, n_known, n_hidden = _differences(
+        new.member(source), old.member(source), new, old, shared_instruments(new, old), values
+    )
+    blocks, at = np.unique(times_ns // block_ns, return_inverse=True)
+    table = np.array(
+        [
+            [difference[rows].sum(), own[rows].sum(), n_known[rows].sum()]
+            for rows in (at == k for k in range(len(blocks)))
+        ]
+    )
+    return Sums(source, blocks, table.reshape(-1, 3), n_hidden)
+
+
+def compared(found: Iterable[Sums]) -> Compared | None:
+    """Return how two models compare over sources, in the order given; None without a reading.
+
+    The same sources in the same order give the same numbers to the last digit.
+    """
     sums: dict[int, Floats] = {}
     by_source: dict[str, float] = {}
     n_hidden = 0
-    for source, times_ns, values in records:
-        found = _differences(new.member(source), old.member(source), new, old, pairs, values)
-        difference, own, n_known, hidden = found
-        n_hidden += hidden
-        if not n_known.sum():
+    for one in found:
+        n_hidden += one.n_hidden
+        difference, _, n_known = one.sums.sum(axis=0)
+        if not n_known:
             continue
-        by_source[source] = float(difference.sum() / n_known.sum())
-        blocks, at = np.unique(times_ns // block_ns, return_inverse=True)
-        for k, block in enumerate(blocks.tolist()):
-            rows = at == k
-            part = np.array([difference[rows].sum(), own[rows].sum(), n_known[rows].sum()])
+        by_source[one.source] = float(difference / n_known)
+        for block, part in zip(one.blocks.tolist(), one.sums, strict=True):
             sums[block] = sums.get(block, np.zeros(3)) + part
     if not sums:
         return None

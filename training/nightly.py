@@ -23,7 +23,7 @@ from scoring.channels import ChannelTable, load_channels
 from scoring.errors import BadArtefact, OddbranchError
 from scoring.model import Model
 from training.changes import load_changes
-from training.chosen import HOUR_NS, Chosen, Wanted, choose
+from training.chosen import Chosen, Wanted, choose
 from training.cluster import cluster_at, cluster_option
 from training.hands import HERE, Hands
 from training.history.exclusions import Exclusion, load_exclusions
@@ -32,12 +32,10 @@ from training.judge import (
     Judgement,
     Witness,
     enough,
-    held_records,
     judge,
     left_out_share,
 )
 from training.judge_answers import Answer
-from training.judge_density import compare
 from training.kept import BusyModels, Kept, KeptModels
 from training.learn import LearnResult, learn_model
 from training.night_files import NightFiles
@@ -122,7 +120,7 @@ def run_night(job: Job, now: Callable[[], datetime], tell: Tell, hands: Hands = 
             with stages.stage("judging") as said:
                 case = Case(
                     chosen, learned, before, Witnesses(models.kept()), settings.judge,
-                    files.last_left_out(), Path(name),
+                    files.last_left_out(), Path(name), hands,
                 )  # fmt: skip
                 judgement = judge(case, first)
                 said.append(f"{len(judgement.refusals)} of {len(judgement.answers)} refused")
@@ -248,11 +246,9 @@ def _note(
     if learned is not None:
         share = left_out_share(learned)
         figures["left_out_ratio"] = ("Share of records left out of the tables.", share)
-        block_ns = round(job.settings.judge.block_h * HOUR_NS)
-        own = compare(learned.model, learned.model, held_records(chosen.held), block_ns)
-        if own is not None:
+        if night.judgement.own_nats is not None:
             text = "The new model's surprise at the judge's days, nats a reading."
-            figures["held_out_nats_per_reading"] = (text, own.new)
+            figures["held_out_nats_per_reading"] = (text, night.judgement.own_nats)
     answers = [(one.name, one.passed, one.number) for one in night.judgement.answers]
     current = models.current()
     _write(job, night.verdict, night.at, stages.total_s, current, figures, answers)

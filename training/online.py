@@ -84,9 +84,13 @@ class Online:
         for part in self._parts(source, known, times_ns):
             self._step(source, known, times_ns[part], values[part])
 
-    def finish(self) -> None:
-        """Let time pass up to the newest record of all, and take what is still open."""
+    def finish(self, until_ns: int = 0) -> None:
+        """Let time pass up to the newest record of all, and take what is still open.
+
+        until_ns: a newer one of sources that others replay.
+        """
         newest_ns = max((known.last_ns for known in self.sources.values()), default=0)
+        newest_ns = max(newest_ns, until_ns)
         for source, known in self.sources.items():
             self._tick(source, known, newest_ns)
             assert known.alerts is not None
