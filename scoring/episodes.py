@@ -63,11 +63,12 @@ class Episodes:
         *,
         heard_ns: int | None = None,
         ahead: Bools | None = None,
+        rows: slice = slice(None),
     ) -> tuple[AlertStanding, tuple[Event, ...]]:
         """Return the source's new standing and what happened, in order.
 
         times_ns (n,), values (n, n_instruments): what was scored, all records of the
-        source in order of arrival. scores: what came of it.
+        source in order of arrival. scores: what came of it, in `rows` of them.
         heard_ns: when they arrived, by the caller's clock; None = take their own times.
         ahead: (n,) records too far ahead of the caller's clock; they change nothing.
         A standing of a model with other channels keeps its alerts and starts its clocks.
@@ -79,16 +80,17 @@ class Episodes:
         if not (standing.cases or standing.shelves or standing.out_of_service):
             ints, floats = standing.ints.copy(), standing.floats.copy()
             n_marks = kernel.watch_rows(
-                times_ns, values, scores.excess, scores.sustained, scores.channel_surprise,
-                ahead, arrived_ns, rules.knobs, rules.rows, rules.limits, rules.codes,
-                rules.states, rules.neighbours, floats, ints, np.empty((1, 3), np.int64),
+                times_ns, values, scores.excess[rows], scores.sustained[rows],
+                scores.channel_surprise[rows], ahead, arrived_ns, rules.knobs, rules.rows,
+                rules.limits, rules.codes, rules.states, rules.neighbours, floats, ints,
+                np.empty((1, 3), np.int64),
             )  # fmt: skip
             if not n_marks:
                 heard = max(
                     int(ints[kernel.LAST]) if heard_ns is None else heard_ns, standing.heard_ns
                 )
                 return AlertStanding(self._key, heard, ints, floats, raised=standing.raised), ()
-        batch = Batch.of(source, times_ns, values, scores, ahead, standing.last_ns)
+        batch = Batch.of(source, times_ns, values, scores.part(rows), ahead, standing.last_ns)
         attendance = Attendance(self.scorer, self.settings, rules, batch, arrived_ns, standing)
         after = attendance.attend()
         return after, tuple(attendance.turn.events)

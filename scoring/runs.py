@@ -63,6 +63,10 @@ class Outcome(NamedTuple):
     best: Floats
     gaps: Ints
 
+    def part(self, rows: slice) -> Outcome:
+        """Return some of the records, to be filled in; `gaps` stays whole."""
+        return Outcome._make([*(array[rows] for array in self[:-1]), self.gaps])
+
 
 class Bench:
     """Members of one part laid out side by side, each once it is needed; one list a thread.

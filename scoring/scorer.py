@@ -87,7 +87,7 @@ class Scores(NamedTuple):
 
     def part(self, rows: slice) -> Scores:
         """Return the scores of some of the records."""
-        return Scores(*(array[rows] for array in self))
+        return Scores._make(array[rows] for array in self)
 
 
 class Scorer:
@@ -199,9 +199,7 @@ class Scorer:
         for k in np.flatnonzero((at < 0) | (out.gaps > 0)).tolist():
             use = slice(start[k], start[k + 1])
             if at[k] < 0:
-                self._score_parts(
-                    members[k], nodes[use], Outcome(*(a[use] for a in out[:-1]), out.gaps)
-                )
+                self._score_parts(members[k], nodes[use], out.part(use))
             excess[use] = self._scale(members[k]).excess(out.rows[use], surprise[use])
             excess[use][~judged[use]] = np.nan
         return out

@@ -54,8 +54,8 @@ class Keeper:
             if episodes is None or (standing is None and run.still):
                 continue
             state.alert_live, events = episodes.step(
-                state.name, run.times_ns, run.values, run.scored.scores.part(run.rows), standing,
-                heard_ns=run.heard_ns, ahead=run.ahead,
+                state.name, run.times_ns, run.values, run.scored.scores, standing,
+                heard_ns=run.heard_ns, ahead=run.ahead, rows=run.rows,
             )  # fmt: skip
             touched[state.name] = state
             changes.add(events)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Mapping, Sequence
 from typing import Any
 
 import orjson
@@ -23,7 +23,7 @@ def batch_answers(batch: Batch, outcome: Outcome) -> list[dict[str, Any]]:
     answers = record_answers(outcome)
     sheet = outcome.sheet
     if not batch.problems and sheet.is_plain:
-        return list(answers)
+        return answers
     found: list[dict[str, Any]] = [{}] * batch.n_items
     for row, (position, answer) in enumerate(zip(batch.positions, answers, strict=True)):
         problem = problem_of(outcome, row)
@@ -52,45 +52,39 @@ def problem_of(outcome: Outcome, row: int) -> Problem | None:
     return None
 
 
-def record_answers(outcome: Outcome) -> Iterator[dict[str, Any]]:
-    """Yield the answer of every row of a batch."""
-    sheet = outcome.sheet
+def record_answers(outcome: Outcome) -> list[dict[str, Any]]:
+    """Return the answer of every row of a batch."""
+    sheet, first, stop = outcome.sheet, outcome.start, outcome.stop
     engine, names, missing, unknown = (
         sheet.engine, sheet.engine.layout.names, sheet.missing, sheet.unknown
     )  # fmt: skip
-    span = slice(outcome.start, outcome.stop)
-    rows = zip(
-        range(outcome.start, outcome.stop),
-        sheet.sources[span],
-        *(column[span] for column in sheet.columns),
-        strict=True,
-    )
     member_of: dict[str, str] = {}
-    model, plain, words, states = (
-        engine.name,
-        sheet.is_plain,
-        sheet.scored.words,
-        engine.layout.states,
-    )
-    for (
-        row, source, time, surprise, excess, sustained, own, low, high, best, reading, column, alert
-    ) in rows:  # fmt: skip
+    near: dict[tuple[str, int], Sequence[str]] = {}
+    model, words, states = engine.name, sheet.scored.words, engine.layout.states
+    answers = []
+    for row, source, cells in zip(
+        range(first, stop), sheet.sources[first:stop], sheet.cells[first:stop], strict=True
+    ):
+        time, surprise, excess, sustained, own, low, high, best, reading, column, alert = cells
         suspect = None
         if column >= 0:
-            is_state = column in states
+            place = source, column
+            beside = near.get(place)
+            if beside is None:
+                beside = near[place] = engine.neighbours(source, column)
             suspect = {
                 "channel": names[column],
                 "surprise": own,
-                "reading": _word(sheet, row, column, reading) if is_state else reading,
+                "reading": _word(sheet, row, column, reading) if column in states else reading,
                 "expected": {"words": words[row]}
                 if row in words
                 else {"low": low, "high": high, "best": best},
-                "neighbours": engine.neighbours(source, column),
+                "neighbours": beside,
             }
         member = member_of.get(source)
         if member is None:
             member = member_of[source] = engine.member(source)
-        answer = {
+        answers.append({
             "source": source,
             "time": time,
             "model": model,
@@ -102,10 +96,11 @@ def record_answers(outcome: Outcome) -> Iterator[dict[str, Any]]:
             "unknown": unknown.get(row, _NONE),
             "suspect": suspect,
             "alert": ALERT_WORDS[alert],
-        }
-        if not plain:
+        })  # fmt: skip
+    if not sheet.is_plain:
+        for row, answer in zip(range(first, stop), answers, strict=True):
             _add_marks(answer, sheet, row)
-        yield answer
+    return answers
 
 
 _NONE: list[str] = []

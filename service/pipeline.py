@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any, Protocol
 
 import numpy as np
@@ -98,6 +99,7 @@ class GroupScorer:
     def __init__(self, group: Group, engine: Engine, jobs: Sequence[Job], now_ns: int) -> None:
         self.group, self.engine, self.jobs, self.now_ns = group, engine, jobs, now_ns
         self.sheet = Sheet.of(engine, [job.batch for job in jobs])
+        self._times: list[int] = self.sheet.times_ns.tolist()
         self.channels = any(job.channels for job in jobs)
         self.kept: list[tuple[SourceState, list[int]]] = []
         self.copies: dict[int, int] = {}
@@ -134,10 +136,9 @@ class GroupScorer:
 
     def _fresh(self, state: SourceState, rows: list[int]) -> list[int]:
         """Return the rows that are not stored yet; settle the others."""
-        times = self.sheet.times_ns[rows]
-        if times[0] > state.newest_ns and (len(rows) == 1 or bool((np.diff(times) > 0).all())):
+        times_list = self._times_of(rows)
+        if times_list[0] > state.newest_ns and _is_rising(times_list):
             return rows
-        times_list = times.tolist()
         stored = self.group.find(state, [t for t in times_list if t <= state.newest_ns])
         first_at: dict[int, int] = {}
         fresh: list[int] = []
@@ -150,6 +151,9 @@ class GroupScorer:
                 first_at[time_ns] = row
                 fresh.append(row)
         return fresh
+
+    def _times_of(self, rows: list[int]) -> list[int]:
+        return [self._times[row] for row in rows]
 
     def _settle_stored(self, row: int, stored: StoredRecord) -> None:
         layout_id = self._layout_id()
@@ -202,16 +206,13 @@ class GroupScorer:
 
     def _stretches(self, state: SourceState, rows: list[int]) -> list[_Stretch]:
         """Return a source's fresh rows in stretches that move its standing, or do not."""
-        times = self.sheet.times_ns[rows]
-        newest_ns = int(times.max())
-        ahead_from_ns = self.now_ns + AHEAD_NS
-        first_ns, last_ns = int(times[0]), state.last_ns
+        times_list, last_ns = self._times_of(rows), state.last_ns
+        newest_ns, ahead_from_ns = max(times_list), self.now_ns + AHEAD_NS
         state.newest_ns = max(state.newest_ns, newest_ns)
         state.n_records += len(rows)
-        # Most requests bring one record, and most batches only rising times.
-        is_rising = len(rows) == 1 or bool((times[1:] > times[:-1]).all())
-        if is_rising and first_ns > last_ns and newest_ns <= ahead_from_ns:
+        if times_list[0] > last_ns and newest_ns <= ahead_from_ns and _is_rising(times_list):
             return [_Stretch(state, rows)]
+        times = self.sheet.times_ns[rows]
         ahead = times > ahead_from_ns
         moving = np.where(ahead, last_ns, times)
         newest_before = np.maximum.accumulate(np.concatenate([[last_ns], moving[:-1]]))
@@ -243,7 +244,8 @@ class GroupScorer:
         out.scored.put(at, scored, rows)
         if not scored.judged.all():
             out.flags[at] += (~scored.judged * FLAG_NOT_JUDGED).astype(np.int16)
-        alerts = scored.alert.tolist()
+        alerts, times_list = scored.alert.tolist(), times.tolist()
+        excess, sustained = _nullable(scored.excess), _nullable(scored.sustained)
         for one, live, first, stop in zip(
             stretches, lives, start[:-1].tolist(), start[1:].tolist(), strict=True
         ):
@@ -263,9 +265,8 @@ class GroupScorer:
                 continue
             state.live, state.model = live, engine.name
             state.standing = engine.standing_bytes(live)
-            state.last_ns = int(times[stop - 1])
-            state.excess = _or_none(float(scored.excess[stop - 1]))
-            state.sustained = _or_none(float(scored.sustained[stop - 1]))
+            state.last_ns = times_list[stop - 1]
+            state.excess, state.sustained = excess[stop - 1], sustained[stop - 1]
             state.alert = alerts[stop - 1]
 
     def _rows(self) -> list[tuple[Any, ...]]:
@@ -346,6 +347,10 @@ _ARRAYS = (
 )  # fmt: skip
 
 
+def _is_rising(times: list[int]) -> bool:
+    return all(earlier < later for earlier, later in pairwise(times))
+
+
 def _present(readings: dict[str, Any]) -> dict[str, Any]:
     """Return readings without the missing ones, which one model lists and another does not."""
     return {name: value for name, value in readings.items() if value is not None}
@@ -396,7 +401,3 @@ def _nullable(values: NDArray[np.float64]) -> list[float | None]:
 
 def _or_nan(value: float | None) -> float:
     return float("nan") if value is None else value
-
-
-def _or_none(value: float) -> float | None:
-    return None if value != value else float(value)

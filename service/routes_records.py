@@ -68,7 +68,7 @@ class RecordsEndpoint:
         problem = problem_of(outcome, 0)
         if problem:
             raise problem
-        return orjson.dumps(next(record_answers(outcome)))
+        return orjson.dumps(record_answers(outcome)[0])
 
 
 def _channels(query: bytes) -> bool:

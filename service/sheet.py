@@ -97,8 +97,12 @@ class Sheet:
         return not (self.flags.any() or self.status.any() or self.scored.every)
 
     @cached_property
-    def columns(self) -> list[list[Any]]:
-        """What answers show of every row, as lists: numbers of Python are quick to read."""
+    def cells(self) -> list[tuple[Any, ...]]:
+        """What answers show of every row, as numbers of Python, which are quick to read.
+
+        Time, surprise, excess, sustained, the suspect's own surprise, low, high, best, reading
+        and column, alert.
+        """
         scored = self.scored
         nats = np.round(
             np.stack([scored.surprise, scored.excess, scored.sustained, scored.suspect_surprise]),
@@ -109,13 +113,14 @@ class Sheet:
         suspects = np.maximum(scored.suspect, 0).astype(np.intp)
         readings = self.values[np.arange(len(self.sources)), suspects]
         expected = np.stack([scored.low, scored.high, scored.best, readings])
-        return [
+        columns = (
             format_times(self.times_ns),
             *nats.tolist(),
             *expected.tolist(),
             scored.suspect.tolist(),
             scored.alert.tolist(),
-        ]
+        )
+        return list(zip(*columns, strict=True))
 
 
 def _joined_bad(batches: Sequence[Batch]) -> NDArray[np.bool_] | None:

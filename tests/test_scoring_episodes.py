@@ -243,8 +243,7 @@ def test_one_by_one_equals_batches(excess: list[float], seed: int, data: st.Data
     at = START_NS + np.cumsum(rng.choice([10, 10, 10, 10, 11, 95, 0, -15], n)) * S
     own = rng.exponential(2.0, (n, 4)) * (1 + np.nan_to_num(np.array(excess))[:, None] / 5)
     own[rng.random((n, 4)) < 0.1] = np.nan
-    scores = replace(
-        scores_of(excess, sustained_of(machine, at, np.array(excess))),
+    scores = scores_of(excess, sustained_of(machine, at, np.array(excess)))._replace(
         channel_surprise=own,
         suspect=rng.integers(-1, 4, n).astype(np.int16),
         suspect_surprise=rng.exponential(3.0, n),

@@ -92,7 +92,7 @@ def test_of_equal_readings_the_first_is_shown(cuts: tuple[int, ...]) -> None:
 
 def test_open_sides_are_told_as_none() -> None:
     fed = Fed(episodes())
-    scores = replace(scores_of([20.0]), expected_high=np.array([np.inf]))
+    scores = scores_of([20.0])._replace(expected_high=np.array([np.inf]))
     fed.feed([], scores=scores, values=readings(1))
     assert fed.open[0].suspects[0].high is None
     assert "where at least 10 was expected" in fed.open[0].sentence
@@ -129,9 +129,8 @@ def test_the_records_just_before_an_alert_count_for_its_suspects() -> None:
 
 
 def test_an_alert_without_any_suspect_still_has_a_sentence() -> None:
-    scores = replace(
-        scores_of([20.0], own=np.full((1, 4), np.nan)), suspect=np.array([-1], dtype=np.int16)
-    )
+    scores = scores_of([20.0], own=np.full((1, 4), np.nan))
+    scores = scores._replace(suspect=np.array([-1], dtype=np.int16))
     fed = Fed(episodes())
     fed.feed([], scores=scores, values=np.full((1, 4), np.nan))
     (alert,) = fed.open

@@ -168,7 +168,13 @@ class Database:
 def _sqlite_engine(path: Path, *, read_only: bool, max_pages: int) -> sa.Engine:
     engine = sa.create_engine(
         f"sqlite:///{path}",
-        connect_args={"isolation_level": None, "check_same_thread": False, "timeout": 10},
+        connect_args={
+            "isolation_level": None,
+            "check_same_thread": False,
+            "timeout": 10,
+            # Room for the statements of every size of group, see store.group.
+            "cached_statements": 256,
+        },
         pool_size=8 if read_only else 1,
         max_overflow=8 if read_only else 1,
         poolclass=sa.pool.QueuePool,

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import json
 from abc import ABC, abstractmethod
-from collections.abc import Iterable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from functools import lru_cache
 from itertools import chain
 from typing import Any, Protocol
@@ -24,9 +24,9 @@ SOURCE_COLUMNS = tuple(column.name for column in tables.source.columns)
 _STORED = tuple(tables.record.c[name] for name in ("id", *RECORD_COLUMNS) if name != "source_id")
 
 # Rows of one INSERT: one statement lets go of the interpreter once, where a statement a row
-# lets go a thousand times and waits each time for a busy event loop. Powers of two keep
-# the number of prepared statements small.
-_MAX_ROWS = 1024
+# lets go a thousand times and waits each time for a busy event loop. Up to the first number
+# a group goes in one statement; above it powers of two keep the number of prepared ones small.
+_WHOLE_ROWS, _MAX_ROWS = 64, 1024
 # SQLite takes 32 766 parameters a statement; a look-up needs one a time.
 _MAX_TIMES = 5000
 
@@ -152,23 +152,21 @@ class SqliteGroup(Group):
         return {name: state.copy() for name, state in states if state is not None}
 
     def insert(self, rows: Sequence[tuple[Any, ...]]) -> None:
-        start, left = 0, len(rows)
-        while left:
-            n_rows = min(_MAX_ROWS, 1 << (left.bit_length() - 1))
-            values = tuple(chain.from_iterable(rows[start : start + n_rows]))
-            self.connection.exec_driver_sql(_insert_records(n_rows), values)
-            start, left = start + n_rows, left - n_rows
+        self._in_pieces(_insert_records, rows)
 
     def save(self, states: Iterable[SourceState]) -> None:
         rows = []
         for state in states:
             self._changed[state.name] = state
             rows.append(_source_row(state))
+        self._in_pieces(_upsert_sources, rows)
+
+    def _in_pieces(self, statement: Callable[[int], str], rows: Sequence[tuple[Any, ...]]) -> None:
         start, left = 0, len(rows)
         while left:
-            n_rows = min(_MAX_ROWS, 1 << (left.bit_length() - 1))
+            n_rows = left if left <= _WHOLE_ROWS else min(_MAX_ROWS, 1 << (left.bit_length() - 1))
             values = tuple(chain.from_iterable(rows[start : start + n_rows]))
-            self.connection.exec_driver_sql(_upsert_sources(n_rows), values)
+            self.connection.exec_driver_sql(statement(n_rows), values)
             start, left = start + n_rows, left - n_rows
 
     def _add_layout(self, model: str, channels: str) -> None:
@@ -248,7 +246,7 @@ def _source_row(state: SourceState) -> tuple[Any, ...]:
     )  # fmt: skip
 
 
-@lru_cache(maxsize=32)
+@lru_cache(maxsize=128)
 def _insert_records(n_rows: int) -> str:
     cells = "(" + ",".join("?" * len(RECORD_COLUMNS)) + ")"
     return (
@@ -256,7 +254,7 @@ def _insert_records(n_rows: int) -> str:
     )
 
 
-@lru_cache(maxsize=32)
+@lru_cache(maxsize=128)
 def _upsert_sources(n_rows: int) -> str:
     cells = "(" + ",".join("?" * len(SOURCE_COLUMNS)) + ")"
     changing = ", ".join(
