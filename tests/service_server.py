@@ -7,6 +7,7 @@ the service once and not for every start makes it cheap to kill a server many ti
 
 from __future__ import annotations
 
+import contextlib
 import gc
 import json
 import os
@@ -15,6 +16,7 @@ import sys
 from pathlib import Path
 from typing import Any
 
+from scoring.errors import OddbranchError
 from service.running import Service
 from service.scoring_engine import load_engine
 from service.server import listen, run, say_where
@@ -37,8 +39,7 @@ def main(folder: Path, words: list[str]) -> None:
         section, _, key = name.partition(".")
         options.setdefault(section, {})[key] = json.loads(value)
     settings = load_settings(None, options)
-    load = load_engine if (folder / "model" / "tables.npz").exists() else load_fake
-    service = Service(settings, load)
+    service = Service(settings, load_engine if _is_real(folder) else load_fake)
     service.open()
     listener = listen(settings)
     say_where(settings, listener)
@@ -49,9 +50,15 @@ def main(folder: Path, words: list[str]) -> None:
 def spawn() -> None:
     """Fork a server for every line."""
     signal.signal(signal.SIGCHLD, signal.SIG_IGN)
-    gc.freeze()
+    is_warm = False
     for line in sys.stdin:
         folder, *words = json.loads(line)
+        if not is_warm and _is_real(Path(folder)):
+            # Kernels too are then loaded once and not for every server.
+            with contextlib.suppress(OddbranchError):
+                load_engine(Path(folder) / "model")
+            is_warm = True
+        gc.freeze()
         pid = os.fork()
         if pid == 0:
             signal.signal(signal.SIGCHLD, signal.SIG_DFL)
@@ -60,6 +67,10 @@ def spawn() -> None:
             os._exit(0)
         sys.stdout.write(f"{pid}\n")
         sys.stdout.flush()
+
+
+def _is_real(folder: Path) -> bool:
+    return (folder / "model" / "tables.npz").exists()
 
 
 def _redirect(folder: Path) -> None:

@@ -8,14 +8,18 @@ import re
 import signal
 import subprocess
 import sys
+import threading
 import time
+from http.server import BaseHTTPRequestHandler, ThreadingHTTPServer
 from pathlib import Path
+from typing import Any, ClassVar
 
 import httpx
 import pytest
 from click.testing import CliRunner
 
 import oddbranch
+from service.problems import Problem
 from tests.conftest import ROOT, need_program
 from tests.service_http import Server, record, serving
 
@@ -72,7 +76,7 @@ def test_the_httpx_recipe_posts_an_array(tmp_path: Path) -> None:
 
 def test_the_forwarder_is_twenty_lines_and_keeps_its_place(tmp_path: Path) -> None:
     text = recipe("forwarder")
-    assert len([line for line in text.splitlines() if line.strip()]) <= 24
+    assert len([line for line in text.splitlines() if line.strip()]) <= 20
     lines = tmp_path / "records.ndjson"
     items = [json.dumps(record(i / 6)) for i in range(1200)]
     items[700] = "nonsense"
@@ -100,6 +104,66 @@ def test_the_forwarder_is_twenty_lines_and_keeps_its_place(tmp_path: Path) -> No
     finally:
         end(second)
         server.stop()
+
+
+class Moody(BaseHTTPRequestHandler):
+    """Answers as told: first no, for two seconds, then no to a line, then to all as they are."""
+
+    seen: ClassVar[list[tuple[float, int]]] = []
+
+    def do_POST(self) -> None:
+        """Answer one request."""
+        lines = self.rfile.read(int(self.headers["content-length"])).splitlines()
+        self.seen.append((time.monotonic(), len(lines)))
+        answers: list[dict[str, Any]] = [{"surprise": 1.0}] * len(lines)
+        if len(self.seen) == 1:
+            problem = Problem("overload", "for now")
+            self.send_response(problem.status)
+            for name, value in {**problem.headers(), "retry-after": "2"}.items():
+                self.send_header(name, value)
+            answers = [problem.as_dict()]
+        else:
+            self.send_response(200)
+            if len(self.seen) == 2:
+                answers[3:] = [Problem("store-away", "not now").as_item(3)]
+            elif lines:
+                answers[1] = Problem("bad-record", "line of nonsense").as_item(1)
+        self.end_headers()
+        self.wfile.writelines(json.dumps(answer).encode() + b"\n" for answer in answers)
+
+    def log_message(self, *_words: Any) -> None:
+        """Say nothing."""
+
+
+def test_the_forwarder_waits_as_told_and_says_what_is_refused(tmp_path: Path) -> None:
+    path, place = tmp_path / "records.ndjson", tmp_path / "records.place"
+    path.write_text("{}\n" * 5, encoding="utf-8")
+    server = ThreadingHTTPServer(("127.0.0.1", 0), Moody)
+    thread = threading.Thread(target=server.serve_forever)
+    thread.start()
+    url = f"http://127.0.0.1:{server.server_port}/records"
+    program = [sys.executable, "-c", recipe("forwarder"), str(path), url]
+    process = subprocess.Popen(program, stderr=subprocess.PIPE, text=True)
+    try:
+        end_s = time.monotonic() + 30
+        while len(Moody.seen) < 4:
+            assert len(Moody.seen) > 2 or not place.exists(), "a place before all was answered"
+            assert time.monotonic() < end_s
+            time.sleep(0.01)
+        assert place.read_text() == "15"
+    finally:
+        process.kill()
+        said = process.communicate()[1]
+        server.shutdown()
+        thread.join()
+        server.server_close()
+    times, n_lines = zip(*Moody.seen[:4], strict=True)
+    assert n_lines == (5, 5, 5, 0)
+    assert times[1] - times[0] >= 2
+    assert times[2] - times[1] >= 1
+    assert said.splitlines()[0].startswith("Server error '503")
+    assert said.splitlines()[-2:] == ["not now", "line of nonsense"]
+    assert [p.name for p in tmp_path.iterdir() if p != path] == ["records.place"]
 
 
 def end(process: subprocess.Popen[bytes]) -> None:
