@@ -175,6 +175,20 @@ def test_the_drill_can_be_switched_off(tmp_path: Path) -> None:
     assert by_name["drill"].passed
 
 
+def test_the_drill_asks_some_sources_of_a_large_fleet(tmp_path: Path) -> None:
+    model = known_model()
+    names = [f"pump-{k:02}" for k in range(62)]
+    member, values = model.members[A], pump_values(A, N_HELD, N_LEARNED)
+    fleet = replace(model, members={name: replace(member, source=name) for name in names})
+    case = a_case(
+        tmp_path, in_use=fleet, new=fleet, held=dict.fromkeys(names, values), drill_trials=10
+    )
+    _, by_name = answers(case)
+    # Three for each trial, so every third: one trial each.
+    assert "half of 21 trials" in by_name["drill"].sentence
+    assert by_name["drill"].number == pytest.approx(1.0)
+
+
 def test_a_share_left_out_that_grew_is_refused(tmp_path: Path) -> None:
     case = a_case(tmp_path, before=0.5)
     found, by_name = answers(case)
@@ -196,7 +210,7 @@ def test_records_in_another_models_order_are_the_same_readings(tmp_path: Path) -
         model, table=ChannelTable(step_s=60.0, channel=tuple(reversed(model.table.channel)))
     )
     case = a_case(tmp_path)
-    with case.chosen, respooled(case, turned) as spool:
+    with case.chosen, respooled(case, turned, case.chosen.held) as spool:
         values = np.concatenate([v for _, v in spool.chunks(B)])
         np.testing.assert_array_equal(values, pump_values(B, N_HELD, N_LEARNED)[:, ::-1])
         assert Counter(spool.sources) == Counter(SOURCES)

@@ -16,6 +16,7 @@ from training.judge_drill import (
     Drilled,
     Quiet,
     drill_both,
+    drilled_sources,
     smallest,
     worst,
 )
@@ -105,3 +106,13 @@ def test_records_that_cannot_carry_a_drill_say_why() -> None:
         assert "quiet stretches" in str(Quiet.of(pump_model(), spool, 20, 60))
     with Spool(5) as empty:
         assert "no record" in str(Quiet.of(pump_model(), empty, 20, 60))
+
+
+def test_in_a_large_fleet_some_sources_evenly_among_all_are_drilled() -> None:
+    fleet = [f"{k:04}" for k in range(5000)]
+    some = drilled_sources(fleet, 20)
+    assert some[:3] == ("0000", "0084", "0168")
+    assert (len(some), some[-1]) == (60, "4956")
+    assert drilled_sources(fleet[:60], 20) == tuple(fleet[:60])
+    assert drilled_sources(fleet[:61], 20) == tuple(fleet[:61:2])
+    assert drilled_sources([], 20) == ()

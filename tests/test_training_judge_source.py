@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import pickle
 from dataclasses import replace
 from pathlib import Path
 
@@ -71,7 +72,10 @@ def test_alerts_of_each_source_are_those_of_a_replay_of_all(tmp_path: Path) -> N
 def test_a_source_is_asked_with_its_own_member_alone(tmp_path: Path) -> None:
     model = known_model()
     assert list(only(model, A).members) == [A]
-    assert only(model, "never seen").members == {}
+    assert only(model, "never seen") == replace(model, members={}, about={})
+    # The fleet's member, which has no say, does not travel beside its own.
+    with_fleet = replace(model, members={A: model.members[A]}, about={})
+    assert len(pickle.dumps(only(model, A))) < 0.6 * len(pickle.dumps(with_fleet))
     case = troubled_case(tmp_path)
     with case.chosen as chosen:
         until_ns = chosen.held.first_last_ns(B)[1]

@@ -33,7 +33,14 @@ from training.judge_cover import (
     tree_change,
 )
 from training.judge_density import Compared, as_read_by, compared
-from training.judge_drill import Quiet, Smallest, drill_both, smallest, worst
+from training.judge_drill import (
+    Quiet,
+    Smallest,
+    drill_both,
+    drilled_sources,
+    smallest,
+    worst,
+)
 from training.judge_runaway import Residual
 from training.judge_source import Asked, Told, only, tell
 from training.judging import DAY_NS
@@ -267,7 +274,9 @@ def _drill(case: Case, old: Model | None) -> tuple[tuple[Smallest, ...], Answer]
     if not limits.drill_trials:
         return (), Answer("drill", None, limits.drill_factor, True, "Switched off by the site.")
     wanted = (limits.drill_trials, limits.drill_within)
-    mine = Quiet.of(case.new, case.chosen.held, *wanted)
+    sources = drilled_sources(case.chosen.held.sources, limits.drill_trials)
+    held = case.chosen.held.only(sources)
+    mine = Quiet.of(case.new, held, *wanted)
     if isinstance(mine, str):
         # A model that is in alert all the time fails by its alerts, not by this.
         sentence = f"No drill with the new model: {mine}."
@@ -277,7 +286,7 @@ def _drill(case: Case, old: Model | None) -> tuple[tuple[Smallest, ...], Answer]
         alone = "The one in use is from before a change of plant, and no measure."
     both = None
     if old is not None:
-        with respooled(case, old) as spool:
+        with respooled(case, old, held) as spool:
             theirs = Quiet.of(old, spool, *wanted)
         both = None if isinstance(theirs, str) else drill_both(mine, theirs)
         alone = "Too few stretches are quiet to both models."
@@ -287,9 +296,9 @@ def _drill(case: Case, old: Model | None) -> tuple[tuple[Smallest, ...], Answer]
     return tuple(found), answer
 
 
-def respooled(case: Case, old: Model) -> Spool:
-    """Return the judge's records in the order of another model's instruments, to be closed."""
-    spool, tally, held = Spool(len(old.table.instruments), case.folder), Tally(), case.chosen.held
+def respooled(case: Case, old: Model, held: Spool) -> Spool:
+    """Return records in the order of another model's instruments, to be closed."""
+    spool, tally = Spool(len(old.table.instruments), case.folder), Tally()
     for source in held.sources:
         for times_ns, values in held.chunks(source):
             n = len(times_ns)

@@ -24,6 +24,9 @@ from training.trials import LEAST_TRIALS, BadTrials, OnlinePath, Trials, find_tr
 # caught under one model and the next but one under the other, decided one night in seven.
 MOST_SPREADS: Final = 30.0
 LEAST_SPREADS: Final = 0.25
+# Stretches are looked for at so many sources for each trial that is wanted, evenly among all:
+# some are not quiet. Thousands more would say the same again, at a thousand times the cost.
+SOURCES_A_TRIAL: Final = 3
 _SEED: Final = 1
 # A channel that the site took out of its table is absent to the older model; that is no
 # alert to wait for here.
@@ -102,6 +105,12 @@ class Quiet:
             {drill.channels[k].name: float(drill.spread[k]) for k in measured},
             len(self.starts),
         )
+
+
+def drilled_sources(sources: Sequence[str], n_trials: int) -> tuple[str, ...]:
+    """Return the sources whose records faults are planted into, evenly among all, in order."""
+    step = -(-len(sources) // (SOURCES_A_TRIAL * n_trials))
+    return tuple(sources[:: max(step, 1)])
 
 
 def drill_both(mine: Quiet, theirs: Quiet) -> tuple[Drilled, Drilled] | None:

@@ -59,9 +59,12 @@ class Told:
 
 
 def only(model: Model, source: str) -> Model:
-    """Return a model with one source's member alone, if it has one, to be sent anywhere."""
-    members = {source: model.members[source]} if source in model.members else {}
-    return replace(model, members=members, about={})
+    """Return a model with what scores one source alone, to be sent anywhere."""
+    member = model.member(source)
+    members = {source: member} if source in model.members else {}
+    # Where the source has a member of its own nobody asks the fleet's, and twice the same
+    # travels once.
+    return replace(model, members=members, fleet=member, about={})
 
 
 def tell(asked: Asked, block_ns: int, until_ns: int, folder: Path) -> Told:
