@@ -78,6 +78,8 @@ def lead(night: Night) -> str:
     """Return the verdict in a sentence or two."""
     n = len(night.judgement.answers)
     instead = f" instead of {night.before_name}" if night.before_name else ", the first one"
+    if night.before_name == night.model:
+        instead = " as before: the records gave the same one again"
     if night.verdict == PUBLISHED:
         return f"Model {night.model} is in use{instead}. All {n} questions were passed."
     against = night.judgement.refusals

@@ -81,7 +81,8 @@ def write_store(data: Path) -> int:
 
 def a_night(folder: Path) -> list[str]:
     """Run the job as a user does; print its lines, processor time and peak, and return them."""
-    words = [sys.executable, ROOT / "oddbranch.py", "nightly", "--config", "nightly.toml"]
+    words: list[str | Path] = [sys.executable, ROOT / "oddbranch.py", "nightly"]
+    words += ["--config", "nightly.toml"]
     before, began = resource.getrusage(resource.RUSAGE_CHILDREN), time.perf_counter()
     found = subprocess.run(words, cwd=folder, capture_output=True, text=True, check=False)
     seconds, after = time.perf_counter() - began, resource.getrusage(resource.RUSAGE_CHILDREN)
