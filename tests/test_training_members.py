@@ -10,14 +10,15 @@ import pytest
 from numpy.typing import NDArray
 
 from scoring.channels import ChannelTable, parse_channels
+from tests.each_alone import ByPost
 from tests.spools import measurements, spool_of, times
 from training.members import (
     MAX_REGIME_STATES,
     Learned,
-    has_enough,
     learn_fleet,
     learn_member,
     regimes_to_try,
+    with_enough,
 )
 from training.rows import Rows
 
@@ -127,8 +128,22 @@ def test_a_source_in_alert_for_nearly_all_its_time_has_too_little_left() -> None
     at = times(1000)
     with spool_of({"a": np.zeros((1000, 1))}) as spool:
         rows = Rows(spool, measurements(1), ("a",), 60.0)
-        assert has_enough(rows, "a")
-        assert has_enough(replace(rows, left_out={"a": np.array([[at[0], at[599]]])}), "a")
+        assert with_enough(rows) == ["a"]
+
+        def without(last: int) -> list[str]:
+            return with_enough(replace(rows, left_out={"a": np.array([[at[0], at[last]]])}))
+
+        assert without(599) == ["a"]
         # What is left is all in one fold: without it there is nothing.
-        assert not has_enough(replace(rows, left_out={"a": np.array([[at[0], at[898]]])}), "a")
-        assert not has_enough(replace(rows, left_out={"a": np.array([[at[0], at[850]]])}), "a")
+        assert without(898) == without(850) == []
+
+
+def test_others_look_at_sources_in_alert_alone() -> None:
+    at = times(1000)
+    sources = {"a": np.zeros((199, 1)), "b": np.zeros((200, 1)), "c": np.zeros((1000, 1))}
+    left_out = {"c": np.array([[at[0], at[599]]]), "a": np.array([[at[0], at[1]]])}
+    posted = ByPost([])
+    with spool_of(sources) as spool:
+        rows = Rows(spool, measurements(1), spool.sources, 60.0, left_out, posted)
+        assert with_enough(rows) == ["b", "c"]
+    assert len(posted.n_bytes) == 1

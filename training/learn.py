@@ -24,7 +24,7 @@ from training.history.spool import Spool, spool_history
 from training.history.spool_parts import parts_read_by
 from training.learn_report import learn_page
 from training.levels import Curve, set_levels
-from training.members import Learned, has_enough, learn_fleet, learn_members, share_tables
+from training.members import Learned, learn_fleet, learn_members, share_tables, with_enough
 from training.progress import Progress
 from training.promise import Promise, promise_of
 from training.promise_words import promise_lines
@@ -72,9 +72,9 @@ def learn_model(
     began = time.perf_counter()
     step_s = table.step_s or DEFAULT_STEP_S
     rows = Rows(spool, table, spool.sources, step_s, in_alert or {}, hands)
-    enough = [s for s in spool.sources if has_enough(rows, s)]
     with tempfile.TemporaryDirectory(prefix="oddbranch-held-out-") as folder:
         hands.must_see(Path(folder))
+        enough = with_enough(rows)
         learned = {}
         for one in learn_members(rows, enough, Path(folder)):
             learned[one.member.source] = one

@@ -51,17 +51,21 @@ class Learned:
         return np.concatenate([self.in_alert, as_left_out(self.left_out)])
 
 
-def has_enough(rows: Rows, source: str) -> bool:
-    """Return whether a source has records enough for a member of its own.
+def with_enough(rows: Rows) -> list[str]:
+    """Return the sources that have records enough for a member of their own.
 
     Where the rows leave stretches out, what is left must be enough without any one fold.
     """
-    if rows.spool.n_records(source) < LEAST_OWN_RECORDS:
-        return False
-    if not len(rows.left_out.get(source, ())):
-        return True
+    many = [s for s in rows.sources if rows.spool.n_records(s) >= LEAST_OWN_RECORDS]
+    asked = [s for s in many if len(rows.left_out.get(s, ()))]
+    found = rows.hands.each(_is_enough_left, [rows.part(s) for s in asked])
+    enough = dict(zip(asked, found, strict=True))
+    return [s for s in many if enough.get(s, True)]
+
+
+def _is_enough_left(rows: Rows) -> bool:
     n = np.zeros(N_FOLDS, dtype=np.int64)
-    for chunk in rows.of(source).chunks():
+    for chunk in rows.chunks():
         n += np.bincount(chunk.fold[chunk.kept], minlength=N_FOLDS)
     return bool(n.sum() - n.max() >= LEAST_OWN_RECORDS)
 
