@@ -129,7 +129,7 @@ class GroupScorer:
         self._copy_repeats()
         if self.kept:
             self.sheet.scored.close_open_sides()
-            self.group.insert(self._rows())
+            self.group.insert(self._columns())
             sink.take(self.group, self.runs)
             self.group.save([state for state, _ in self.kept])
         return self._split()
@@ -156,7 +156,7 @@ class GroupScorer:
         return [self._times[row] for row in rows]
 
     def _settle_stored(self, row: int, stored: StoredRecord) -> None:
-        layout_id = self._layout_id()
+        layout_id = self.group.layout_id(self.engine.name, self.engine.layout)
         same = (
             stored.readings == self.sheet.values[row].tobytes()
             and stored.extra == _pack(self.sheet.extra.get(row))
@@ -269,57 +269,43 @@ class GroupScorer:
             state.excess, state.sustained = excess[stop - 1], sustained[stop - 1]
             state.alert = alerts[stop - 1]
 
-    def _rows(self) -> list[tuple[Any, ...]]:
-        """Return the rows for the store, source by source."""
-        out, scored = self.sheet, self.sheet.scored
+    def _columns(self) -> list[Sequence[Any]]:
+        """Return what the store is to add, by RECORD_COLUMNS, source by source."""
+        out, scored, engine = self.sheet, self.sheet.scored, self.engine
         order = [row for _, rows in self.kept for row in rows]
-        ids = [state.id for state, rows in self.kept for _ in rows]
-        requests = self._requests()
+        at, n = np.array(order), len(order)
         detail = np.column_stack(
-            [scored.suspect_surprise[order], scored.low[order], scored.high[order],
-             scored.best[order]]
-        ).tobytes()  # fmt: skip
-        readings = self.sheet.values[order].tobytes()
-        details = [detail[i : i + 32] for i in range(0, 32 * len(order), 32)]
+            [scored.suspect_surprise[at], scored.low[at], scored.high[at], scored.best[at]]
+        ).tobytes()
+        details = [detail[i : i + 32] for i in range(0, 32 * n, 32)]
         if scored.words:
             details = [
                 pack_words(part, scored.words[row]) if row in scored.words else part
                 for part, row in zip(details, order, strict=True)
             ]
-        width = self.sheet.values.shape[1] * 8
-        layout_id = self._layout_id()
-        extra = (
-            [_pack(self.sheet.extra.get(row)) for row in order]
-            if self.sheet.extra
-            else [None] * len(order)
-        )
-        return list(
-            zip(
-                ids,
-                self.sheet.times_ns[order].tolist(),
-                [self.now_ns] * len(order),
-                [requests[row] for row in order],
-                [layout_id] * len(order),
-                _nullable(scored.surprise[order]),
-                _nullable(scored.excess[order]),
-                _nullable(scored.sustained[order]),
-                scored.suspect[order].tolist(),
-                scored.alert[order].tolist(),
-                out.flags[order].tolist(),
-                details,
-                [readings[i : i + width] for i in range(0, width * len(order), width)],
-                extra,
-                strict=True,
-            )
-        )
+        width, readings = self.sheet.values.shape[1] * 8, self.sheet.values[at].tobytes()
+        requests = self._requests()
+        return [
+            [state.id for state, rows in self.kept for _ in rows],
+            out.times_ns[at].tolist(),
+            [self.now_ns] * n,
+            [requests[row] for row in order],
+            [self.group.layout_id(engine.name, engine.layout)] * n,
+            _nullable(scored.surprise[at]),
+            _nullable(scored.excess[at]),
+            _nullable(scored.sustained[at]),
+            scored.suspect[at].tolist(),
+            scored.alert[at].tolist(),
+            out.flags[at].tolist(),
+            details,
+            [readings[i : i + width] for i in range(0, width * n, width)],
+            [_pack(out.extra.get(row)) for row in order] if out.extra else [None] * n,
+        ]
 
     def _requests(self) -> list[str]:
         if len(self.jobs) == 1:
             return [self.jobs[0].request] * len(self.sheet.sources)
         return [job.request for job in self.jobs for _ in job.batch.sources]
-
-    def _layout_id(self) -> int:
-        return self.group.layout_id(self.engine.name, self.engine.layout)
 
     def _stored_readings(self, stored: StoredRecord) -> dict[str, Any]:
         channels = orjson.loads(self.group.layout_channels(stored.layout_id))

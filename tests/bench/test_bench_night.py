@@ -69,7 +69,7 @@ def write_store(data: Path) -> int:
                          0.1, 1, 0, 0, None, blobs[at : at + width], None)
                     )  # fmt: skip
             assert len(rows[0]) == len(RECORD_COLUMNS)
-            group.insert(rows)
+            group.insert(list(zip(*rows, strict=True)))
             for state in states:
                 state.newest_ns = state.last_ns = int(times_s[-1]) * 10**9
                 state.n_records += n
