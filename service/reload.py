@@ -30,6 +30,8 @@ class ModelWatch:
         self._in_use: tuple[Engine, Parser] | None = None
         self._mark: _Mark | None = None
         self._published_s = 0.0
+        # Called once another model is in use.
+        self.when_taken: Callable[[], None] = lambda: None
         # Why the model that lies there now is not in use, for the readiness answer.
         self.refusal: str | None = None
 
@@ -72,6 +74,7 @@ class ModelWatch:
             log_event("model_changed", model=engine.name, before=self.engine.name)
             self.metrics.reloads["taken"] += 1
             self._in_use = self._ready(engine)
+            self.when_taken()
 
     def _ready(self, engine: Engine) -> tuple[Engine, Parser]:
         if self._mark is not None:

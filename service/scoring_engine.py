@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from functools import lru_cache
+from functools import lru_cache, partial
 from pathlib import Path
 from typing import Any
 
@@ -39,7 +39,8 @@ class ScoringEngine:
         self._scorer.warm()
         self.episodes: Episodes | None = Episodes(self._scorer)
         self.episodes.warm()
-        self._neighbours = lru_cache(maxsize=_N_CACHED_NEIGHBOURS)(self._find_neighbours)
+        # Made of the model alone: a cache that leads back here would keep this from being freed.
+        self._neighbours = lru_cache(maxsize=_N_CACHED_NEIGHBOURS)(partial(_neighbours, model))
 
     def score(
         self,
@@ -118,13 +119,6 @@ class ScoringEngine:
         """Return the names of the channels that share an edge with one."""
         return self._neighbours(source if source in self.model.members else "", column)
 
-    def _find_neighbours(self, member: str, column: int) -> tuple[str, ...]:
-        names = self.model.table.names
-        near: dict[str, None] = {}
-        for part in self.model.member(member).parts:
-            near.update((names[node], None) for node in part.tree.neighbours(column))
-        return tuple(near)
-
     def member(self, source: str) -> str:
         """Return `own` where the model has a member for the source, else `fleet`."""
         return "own" if source in self.model.members else "fleet"
@@ -151,6 +145,14 @@ class ScoringEngine:
 def load_engine(path: Path) -> ScoringEngine:
     """Return the model of a directory, ready to score; raises BadArtefact."""
     return ScoringEngine(read_model(path))
+
+
+def _neighbours(model: Model, member: str, column: int) -> tuple[str, ...]:
+    names = model.table.names
+    near: dict[str, None] = {}
+    for part in model.member(member).parts:
+        near.update((names[node], None) for node in part.tree.neighbours(column))
+    return tuple(near)
 
 
 def _figures(model: Model) -> dict[str, float]:

@@ -151,6 +151,8 @@ class Writer:
                 self._do_errand(entries)
             else:
                 self._store(entries)
+            # What waits for the next bell must not keep the last batches and their model.
+            del entries
         self._drop_connection()
 
     def _take(self) -> list[_Waiting] | _Errand:

@@ -1,17 +1,24 @@
-"""The web server: TLS of its own, and what keeps it from listening."""
+"""The web server: TLS of its own, what keeps it from listening, and the memory of models."""
 
 from __future__ import annotations
 
+import gc
 import ssl
 import subprocess
+import weakref
+from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import httpx
 import pytest
 
-from service.server import CannotListen, check_tls, listen
+from scoring.artefact import write_model
+from service.scoring_engine import load_engine
+from service.server import YOUNG, CannotListen, check_tls, listen, settle
 from tests.conftest import need_program
-from tests.service_http import record, serving, settings_for
+from tests.models import a_model
+from tests.service_http import record, running, serving, settings_for
 
 
 @pytest.fixture(scope="module")
@@ -67,3 +74,33 @@ def test_files_that_no_tls_can_be_made_of_are_refused_with_a_sentence(
             settings_for(tmp_path, server={"tls_certificate": certificate, "tls_key": locked})
         )
     check_tls(settings_for(tmp_path))
+
+
+@pytest.fixture
+def _rounds_as_before() -> Iterator[None]:
+    threshold = gc.get_threshold()
+    yield
+    gc.set_threshold(*threshold)
+    gc.unfreeze()
+
+
+@pytest.mark.usefixtures("_rounds_as_before")
+def test_a_model_that_was_replaced_is_freed(tmp_path: Path) -> None:
+    model = a_model()
+    write_model(model, tmp_path / "one")
+    levels = replace(model.levels, record=model.levels.record + 1)
+    write_model(replace(model, levels=levels), tmp_path / "two")
+    (tmp_path / "model").symlink_to("one")
+    with running(tmp_path, load=load_engine) as api:
+        settle()
+        assert (gc.get_threshold()[0], gc.get_freeze_count() > 0) == (YOUNG, True)
+        api.service.models.when_taken = settle
+        readings = {"in": 12.0, "out": 14.0, "power": 15.0, "pump": "running"}
+        item = {"source": "a", "time": "2026-11-30T00:00:00Z", "readings": readings}
+        assert api.post(item).json()["suspect"]["neighbours"]
+        name, before = api.service.engine.name, weakref.ref(api.service.engine)
+        (tmp_path / "model").unlink()
+        (tmp_path / "model").symlink_to("two")
+        api.call(api.service.models.look())
+        assert api.service.engine.name != name
+        assert before() is None
