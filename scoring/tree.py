@@ -37,6 +37,9 @@ class TreeArrays(NamedTuple):
         the product over a node's slots is its joint with its neighbours.
     flat_log_ratio: log_ratio's memory in one dimension, because a slice in a tight loop
         costs a reference count.
+    alone: nodes without an edge. flat_folded: log_ratio in one dimension with every other
+        node's log_marginal added to the first of its edges, so that a record without gaps
+        costs one look an edge.
     """
 
     start: Ints
@@ -53,6 +56,8 @@ class TreeArrays(NamedTuple):
     lowest: Floats
     flat_blanket: Floats
     flat_log_ratio: Floats
+    alone: Ints
+    flat_folded: Floats
 
 
 @dataclass(frozen=True)
@@ -111,6 +116,12 @@ class Tree:
             if own:
                 blanket[sum(map(len, slots[:node]))] *= marginal[node]
         edges = self.edges.reshape(-1, 2)
+        folded = log_ratio.copy()
+        for node, own in enumerate(slots):
+            if own:
+                _, number, is_left = own[0]
+                nats = log_marginal[node]
+                folded[number] += nats[:, None] if is_left else nats[None, :]
         lowest = [
             float(m.min()) + sum(min(0.0, float(self.log_ratios[slot[1]].min())) for slot in node)
             for m, node in zip(self.log_marginals, slots, strict=True)
@@ -130,4 +141,6 @@ class Tree:
             lowest=np.array(lowest),
             flat_blanket=blanket.reshape(-1),
             flat_log_ratio=log_ratio.reshape(-1),
+            alone=np.array([node for node, own in enumerate(slots) if not own], dtype=np.int64),
+            flat_folded=folded.reshape(-1),
         )
