@@ -33,7 +33,7 @@ class Hands(Protocol):
         """Return the sum of work(item) over all items, of which there is at least one."""
 
     def groups(self, sizes: Sequence[int]) -> list[list[int]]:
-        """Return which neighbours to count together, as places; sizes: their records."""
+        """Return which neighbours to take together, as places; sizes: records, as if counted."""
 
     def must_see(self, folder: Path) -> None:
         """Raise NoCluster unless whoever does the work can write to a folder."""

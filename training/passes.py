@@ -28,6 +28,9 @@ Ints = NDArray[np.int64]
 DAY_NS: Final = 86_400_000_000_000
 # What a single record may add to where sustained rests is cut off here.
 _CAP_QUANTILE: Final = 0.999
+# A record under hundreds of pairs of levels, some 8 us in all, is as much work as so many that
+# are counted, so that sources are followed in smaller parts than they are counted in.
+_WORTH: Final = 4
 
 # Some sources' excess, with the stretches of each that are passed over.
 Group = list[tuple[HeldExcess, Ints | None]]
@@ -132,7 +135,7 @@ class Passes:
         self, sources: Sequence[HeldExcess], hidden: dict[str, Ints] | None = None
     ) -> list[Group]:
         items = [(_bare(one), (hidden or {}).get(one.source)) for one in sources]
-        places = self.hands.groups([one.n_records for one in sources])
+        places = self.hands.groups([_WORTH * one.n_records for one in sources])
         return [[items[k] for k in group] for group in places]
 
 
