@@ -7,6 +7,7 @@ record older than `MAX_AGE_STEPS` usual intervals is a gap and gives no value.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -44,38 +45,70 @@ def derive(
     times_ns: (n,) rising. values: (n, n_instruments), NaN = missing.
     Returns (n, n_nodes); a derived value is NaN where an input is.
     """
-    if not table.derived:
-        return values, carry
     if not len(times_ns):
         return np.zeros((0, values.shape[1] + len(table.derived))), carry
+    start = np.array([0, len(times_ns)])
+    nodes, carries = derive_runs(table, start, times_ns, values, [carry])
+    return nodes, carries[0]
+
+
+def derive_runs(
+    table: ChannelTable,
+    start: NDArray[np.int64],
+    times_ns: NDArray[np.int64],
+    values: Floats,
+    carries: Sequence[Carry | None],
+) -> tuple[Floats, list[Carry | None]]:
+    """Do what `derive` does for the records of several sources, one after the other.
+
+    start: (n_runs + 1,) where each source's records begin; none is empty. carries: (n_runs,).
+    """
+    if not table.derived:
+        return values, list(carries)
     column = {c.name: i for i, c in enumerate(table.instruments)}
-    before = _before(table, times_ns, values, carry) if looks_back(table) else values
-    extra = np.empty((len(values), len(table.derived)))
-    for k, d in enumerate(table.derived):
+    last: list[Carry | None] = [None] * len(carries)
+    before = values
+    if looks_back(table):
+        before = _before(table, start, times_ns, values, carries)
+        ends = start[1:] - 1
+        last = [
+            Carry(time_ns, row)
+            for time_ns, row in zip(times_ns[ends].tolist(), values[ends], strict=True)
+        ]
+    n, n_instruments = values.shape
+    nodes = np.empty((n, n_instruments + len(table.derived)))
+    nodes[:, :n_instruments] = values
+    for k, d in enumerate(table.derived, n_instruments):
         inputs = [values[:, column[name]] for name in d.of]
         if d.operation == "difference":
-            extra[:, k] = inputs[0] - inputs[1]
+            nodes[:, k] = inputs[0] - inputs[1]
         elif d.operation == "ratio":
             zero = inputs[1] == 0
-            extra[:, k] = np.where(zero, np.nan, inputs[0] / np.where(zero, 1.0, inputs[1]))
+            nodes[:, k] = np.where(zero, np.nan, inputs[0] / np.where(zero, 1.0, inputs[1]))
         elif d.operation == "hour":
-            extra[:, k] = times_ns // NS_PER_HOUR % 24
+            nodes[:, k] = times_ns // NS_PER_HOUR % 24
         elif d.operation == "previous":
-            extra[:, k] = before[:, column[d.of[0]]]
+            nodes[:, k] = before[:, column[d.of[0]]]
         else:
-            extra[:, k] = inputs[0] - before[:, column[d.of[0]]]
-    last = Carry(int(times_ns[-1]), values[-1].copy()) if looks_back(table) else None
-    return np.hstack([values, extra]), last
+            nodes[:, k] = inputs[0] - before[:, column[d.of[0]]]
+    return nodes, last
 
 
 def _before(
-    table: ChannelTable, times_ns: NDArray[np.int64], values: Floats, carry: Carry | None
+    table: ChannelTable,
+    start: NDArray[np.int64],
+    times_ns: NDArray[np.int64],
+    values: Floats,
+    carries: Sequence[Carry | None],
 ) -> Floats:
     """Return the instruments one record earlier, NaN across a gap."""
-    first = carry.values if carry is not None else np.full(values.shape[1], np.nan)
-    first_ns = carry.time_ns if carry is not None else times_ns[0]
-    before = np.vstack([first[None, :], values[:-1]])
-    age_ns = np.diff(times_ns, prepend=first_ns)
+    before, age_ns = np.empty(values.shape), np.empty(len(times_ns), dtype=np.int64)
+    before[1:], age_ns[1:] = values[:-1], np.diff(times_ns)
+    for first, carry in zip(start[:-1].tolist(), carries, strict=True):
+        if carry is None:
+            age_ns[first] = 0
+        else:
+            before[first], age_ns[first] = carry.values, times_ns[first] - carry.time_ns
     longest_ns = MAX_AGE_STEPS * (table.step_s or np.inf) * NS_PER_S
     before[(age_ns > longest_ns) | (age_ns <= 0)] = np.nan
     return before

@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from scoring.bins import MISSING, BinRows
 from scoring.channels import Channel
 from scoring.density import belief_of, removal_of, rows_by_part
-from scoring.derived import Carry, derive
+from scoring.derived import Carry, derive, derive_runs
 from scoring.excess import ExcessScale
 from scoring.expected import shortest_interval
 from scoring.model import Member, Model
@@ -235,32 +235,31 @@ class Scorer:
         before: Sequence[Standing | None],
     ) -> tuple[Floats, list[Carry | None]]:
         """Return all nodes' values and each source's carry."""
-        if not self.model.table.derived:
-            return values, [one.carry if one else None for one in before]
-        nodes = np.empty((len(values), len(self.model.table.nodes)))
-        carries: list[Carry | None] = []
+        table, carries = self.model.table, [one.carry if one else None for one in before]
+        if not table.derived:
+            return values, carries
+        passed = np.diff(times_ns, prepend=0)
+        passed[start[:-1]] = times_ns[start[:-1]] - [one.time_ns if one else -1 for one in before]
+        if (passed > 0).all():
+            return derive_runs(table, start, times_ns, values, carries)
+        nodes = np.empty((len(values), values.shape[1] + len(table.derived)))
         for k, standing in enumerate(before):
             use = slice(start[k], start[k + 1])
-            nodes[use], carry = self._derive(times_ns[use], values[use], standing)
-            carries.append(carry)
+            nodes[use], carries[k] = self._derive(times_ns[use], values[use], standing)
         return nodes, carries
 
     def _derive(
         self, times_ns: NDArray[np.int64], values: Floats, standing: Standing | None
     ) -> tuple[Floats, Carry | None]:
         """Return all nodes' values; late records neither see nor become the last record."""
-        carry = standing.carry if standing else None
+        table, carry = self.model.table, standing.carry if standing else None
         newest = np.maximum.accumulate(times_ns)
         last_ns = standing.time_ns if standing else -1
         on_time = times_ns > np.maximum(np.concatenate([[last_ns], newest[:-1]]), last_ns)
-        if on_time.all():
-            return derive(self.model.table, times_ns, values, carry)
-        nodes = np.empty((len(values), len(self.model.table.nodes)))
-        nodes[on_time], carry = derive(self.model.table, times_ns[on_time], values[on_time], carry)
+        nodes = np.empty((len(values), values.shape[1] + len(table.derived)))
+        nodes[on_time], carry = derive(table, times_ns[on_time], values[on_time], carry)
         for r in np.flatnonzero(~on_time):
-            nodes[r : r + 1], _ = derive(
-                self.model.table, times_ns[r : r + 1], values[r : r + 1], None
-            )
+            nodes[r : r + 1], _ = derive(table, times_ns[r : r + 1], values[r : r + 1], None)
         return nodes, carry
 
     def _scale(self, member: Member) -> ExcessScale:
