@@ -224,7 +224,7 @@ def believe(t: TreeArrays, node: int, row: BinRows, s: Scratch) -> float:
 
 
 @njit(cache=True, nogil=True)
-def _evidence(t: TreeArrays, row: BinRows, s: Scratch) -> float:
+def evidence_row(t: TreeArrays, row: BinRows, s: Scratch) -> float:
     """Return ln p(observed bins of one row)."""
     total = 0.0
     hidden = False
@@ -316,7 +316,7 @@ def evidence_rows(t: TreeArrays, rows: BinRows) -> Floats:
         _folded_evidence(t, bins, out[first:last])
         for r in range(first, last):
             if gaps[r - first]:
-                out[r] = _evidence(t, rows[r], s)
+                out[r] = evidence_row(t, rows[r], s)
     return out
 
 
@@ -402,7 +402,7 @@ def _removed(t: TreeArrays, i: int, row: BinRows, evidence: float, s: Scratch) -
     value = math.log(s.vec[i, b]) if s.vec[i, b] > 0.0 else -np.inf
     if value < -500.0:
         # The normalised belief has left the float range; the evidences have not.
-        value = evidence - _evidence(t, row, s)
+        value = evidence - evidence_row(t, row, s)
     row[i] = b
     return value
 
@@ -447,7 +447,7 @@ def fill_removal(
         for r in range(first, last):
             row[:] = rows[r]
             if gaps[r - first]:
-                evidence[r] = _evidence(t, row, s)
+                evidence[r] = evidence_row(t, row, s)
                 _forget_open(t, row, alone[:, r - first])
             for i in range(n_instruments):
                 if row[i] == MISSING:
@@ -458,7 +458,7 @@ def fill_removal(
                     row[i] = MISSING
                     for k in range(group_start[i], group_start[i + 1]):
                         row[group_nodes[k]] = MISSING
-                    own[r, i] = _evidence(t, row, s) - evidence[r]
+                    own[r, i] = evidence_row(t, row, s) - evidence[r]
                     row[:] = rows[r]
                 elif value == value:
                     own[r, i] = -value

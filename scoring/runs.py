@@ -2,12 +2,13 @@
 
 A service is sent one or two records of each of many sources at a time, and for so few a
 call into compiled code costs more than what it does. So a call takes runs, each the
-records of one source, one after the other in the same arrays. Only members of one part
-go this way; `scorer` scores the others beside it.
+records of one source, one after the other in the same arrays. Records of which a regime
+channel is missing do not go this way: which part holds is open, and `scorer` mixes them.
 """
 
 from __future__ import annotations
 
+import math
 from threading import local
 from typing import Any, NamedTuple
 
@@ -18,7 +19,7 @@ from numpy.typing import NDArray
 
 from scoring.bins import MISSING, BinRows, fill_rows
 from scoring.expected import shortest_interval
-from scoring.kernels import believe, fill_removal, scratch
+from scoring.kernels import Scratch, believe, evidence_row, fill_removal, scratch
 from scoring.model import Member
 from scoring.tree import TreeArrays
 
@@ -27,11 +28,13 @@ Ints = NDArray[np.int64]
 Bools = NDArray[np.bool_]
 
 
-class Plain(NamedTuple):
-    """What the pass reads of a member of one part.
+class Laid(NamedTuple):
+    """What the pass reads of one part of a member; its other parts follow it in the list.
 
     borders, lasts, grid, cells, n_words: see BinTable. usual: (n_instruments,) median of each
-    own surprise, nats; median: of a full record's surprise, nats.
+    own surprise, nats; median: of a full record's surprise, nats. regime: (n_regime,) nodes
+    that choose a part. n_parts: of the member. key: (n_regime,) bins for which this part
+    holds; the last one holds for all that are not named. log_share: see Part.
     """
 
     tree: TreeArrays
@@ -42,6 +45,10 @@ class Plain(NamedTuple):
     n_words: Ints
     usual: Floats
     median: float
+    regime: Ints
+    n_parts: int
+    key: BinRows
+    log_share: float
 
 
 class Outcome(NamedTuple):
@@ -50,6 +57,7 @@ class Outcome(NamedTuple):
     rows: (n, n_nodes) bins. surprise, excess: nats; excess is that of records without gaps,
     NaN where not judged. own: (n, n_instruments) each own surprise, nats. suspect,
     suspect_surprise, low, high, best: as in Scores. gaps: (n_runs,) records with a gap.
+    Of a record that is left out, surprise is NaN and all after it in this list is open.
     """
 
     rows: BinRows
@@ -63,57 +71,75 @@ class Outcome(NamedTuple):
     best: Floats
     gaps: Ints
 
-    def part(self, rows: slice) -> Outcome:
-        """Return some of the records, to be filled in; `gaps` stays whole."""
-        return Outcome._make([*(array[rows] for array in self[:-1]), self.gaps])
+    @classmethod
+    def room(cls, n: int, n_instruments: int, n_nodes: int, n_runs: int) -> Outcome:
+        """Return arrays to be filled in."""
+        surprise, excess, own_surprise, low, high, best = np.empty((6, n))
+        return cls(
+            np.empty((n, n_nodes), np.uint8), surprise, excess, np.empty((n, n_instruments)),
+            np.empty(n, np.int16), own_surprise, low, high, best, np.empty(n_runs, np.int64),
+        )  # fmt: skip
 
 
 class Bench:
-    """Members of one part laid out side by side, each once it is needed; one list a thread.
+    """Members laid out side by side, each once it is needed; one list a thread.
 
     A list that grows may not be read by another thread at that moment.
+    group_start: see scoring.derived.groups.
     """
 
-    def __init__(self) -> None:
+    def __init__(self, group_start: Ints) -> None:
+        self._group_start = group_start
         self._own = local()
 
     def place(self, member: Member) -> int:
-        """Return a member's number in `members`, -1 if it has several parts."""
-        if len(member.parts) > 1:
-            return -1
+        """Return the number of a member's first part in `parts`, -1 if it does not go there.
+
+        It does not where something is derived from a regime channel: without that channel
+        what is derived is missing as well, and the parts are to be mixed.
+        """
         places: dict[str, int] | None = getattr(self._own, "places", None)
         if places is None:
             places = self._own.places = {}
         found = places.get(member.source)
         if found is None:
-            found = places[member.source] = len(places)
-            table = member.bin_table
-            plain = Plain(
-                member.parts[0].tree.arrays, table.borders, table.lasts, table.grid, table.cells,
-                table.n_words, np.asarray(member.usual.channel_median), float(member.usual.median),
-            )  # fmt: skip
-            if found:
-                _append(self._own.members, plain)
-            else:
-                self._own.members = _list_of(plain)
+            found = places[member.source] = self._lay_out(member)
         return found
 
+    def _lay_out(self, member: Member) -> int:
+        start = self._group_start
+        if any(start[i + 1] > start[i] for i in member.regime):
+            return -1
+        table, usual = member.bin_table, member.usual
+        for part in member.parts:
+            laid = Laid(
+                part.tree.arrays, table.borders, table.lasts, table.grid, table.cells,
+                table.n_words, np.asarray(usual.channel_median), float(usual.median),
+                np.array(member.regime, dtype=np.int64), len(member.parts),
+                np.array(part.key or (), dtype=np.uint8), float(part.log_share),
+            )  # fmt: skip
+            if hasattr(self._own, "parts"):
+                _append(self._own.parts, laid)
+            else:
+                self._own.parts = _list_of(laid)
+        return len(self._own.parts) - len(member.parts)
+
     @property
-    def members(self) -> Any:
-        """The members that this thread has asked for, a compiled code's list of Plain."""
-        return self._own.members
+    def parts(self) -> Any:
+        """What this thread has asked for, a compiled code's list of Laid."""
+        return self._own.parts
 
 
 @njit(cache=True)
-def _list_of(member: Plain) -> Any:
-    members = List()
-    members.append(member)
-    return members
+def _list_of(part: Laid) -> Any:
+    parts = List()
+    parts.append(part)
+    return parts
 
 
 @njit(cache=True)
-def _append(members: Any, member: Plain) -> None:
-    members.append(member)
+def _append(parts: Any, part: Laid) -> None:
+    parts.append(part)
 
 
 @njit(cache=True, nogil=True)
@@ -135,8 +161,73 @@ def usable_readings(
 
 
 @njit(cache=True, nogil=True)
+def _holds(parts: Any, first: int, row: BinRows) -> int:
+    """Return the number of the part that holds for a row of bins, -1 if that is open."""
+    m = parts[first]
+    for i in m.regime:
+        if row[i] == MISSING:
+            return -1
+    for p in range(first, first + m.n_parts - 1):
+        key, fits = parts[p].key, True
+        for k in range(key.shape[0]):
+            fits &= row[m.regime[k]] == key[k]
+        if fits:
+            return p
+    return first + int(m.n_parts) - 1
+
+
+@njit(cache=True, nogil=True)
+def _without_regime(parts: Any, first: int, row: BinRows, i: int, s: Scratch) -> float:
+    """Return ln p(all of a row but regime channel i): each of its bins is tried in turn,
+    whichever part holds then."""
+    own, n_bins = row[i], parts[first].tree.n_bins[i]
+    logs, most = np.empty(n_bins), -np.inf
+    for b in range(n_bins):
+        row[i] = b
+        part = parts[_holds(parts, first, row)]
+        logs[b] = evidence_row(part.tree, row, s) + part.log_share
+        most = max(most, logs[b])
+    row[i] = own
+    total = 0.0
+    for b in range(n_bins):
+        total += math.exp(logs[b] - most)
+    return most + math.log(total)
+
+
+@njit(cache=True, nogil=True)
+def _score_stretch(
+    parts: Any,
+    first: int,
+    part: int,
+    use: slice,
+    resolution: Floats,
+    group_start: Ints,
+    group_nodes: Ints,
+    out: Outcome,
+) -> None:
+    """Fill in what can be said of some rows for which the same part of a member holds."""
+    m = parts[part]
+    rows, own, suspect = out.rows[use], out.own[use], out.suspect[use]
+    surprise = out.surprise[use]
+    fill_removal(m.tree, rows, group_start, group_nodes, surprise, own)
+    for r in range(rows.shape[0]):
+        surprise[r] = -surprise[r] - m.log_share
+    if m.n_parts > 1:
+        s, row = scratch(m.tree), np.empty(rows.shape[1], np.uint8)
+        for r in range(rows.shape[0]):
+            row[:] = rows[r]
+            for i in m.regime:
+                own[r, i] = surprise[r] + _without_regime(parts, first, row, i, s)
+    fill_suspects(own, m.usual, suspect, out.suspect_surprise[use])
+    fill_intervals(
+        m.tree, rows, suspect, m.borders, resolution, group_start, group_nodes,
+        out.low[use], out.high[use], out.best[use],
+    )  # fmt: skip
+
+
+@njit(cache=True, nogil=True)
 def score_runs(
-    members: Any,
+    parts: Any,
     at: Ints,
     start: Ints,
     nodes: Floats,
@@ -148,25 +239,33 @@ def score_runs(
 ) -> None:
     """Fill in what can be said of every record by itself.
 
-    at: (n_runs,) each run's member, -1 = leave the run's rows of `out` alone. start:
+    at: (n_runs,) each run's member by Bench.place; runs with -1 are left alone. start:
         (n_runs + 1,) where each run's rows begin. nodes: (n, n_nodes) readings with the
         derived channels, NaN = missing. resolution: (n_instruments,), 0 = unknown.
     """
     for k in range(at.shape[0]):
         if at[k] < 0:
             continue
-        m, use = members[at[k]], slice(start[k], start[k + 1])
-        rows, own, suspect = out.rows[use], out.own[use], out.suspect[use]
+        m, use = parts[at[k]], slice(start[k], start[k + 1])
+        rows = out.rows[use]
         fill_rows(nodes[use], m.borders, m.lasts, m.grid, m.cells, m.n_words, rows)
-        fill_removal(m.tree, rows, group_start, group_nodes, out.surprise[use], own)
-        fill_suspects(own, m.usual, suspect, out.suspect_surprise[use])
-        fill_intervals(
-            m.tree, rows, suspect, m.borders, resolution, group_start, group_nodes,
-            out.low[use], out.high[use], out.best[use],
-        )  # fmt: skip
+        first = 0
+        while first < rows.shape[0]:
+            part, last = _holds(parts, at[k], rows[first]), first + 1
+            if m.n_parts == 1:
+                last = rows.shape[0]
+            while last < rows.shape[0] and _holds(parts, at[k], rows[last]) == part:
+                last += 1
+            stretch = slice(start[k] + first, start[k] + last)
+            if part < 0:
+                out.surprise[stretch] = np.nan
+            else:
+                _score_stretch(
+                    parts, at[k], part, stretch, resolution, group_start, group_nodes, out
+                )
+            first = last
         out.gaps[k] = 0
         for r in range(start[k], start[k + 1]):
-            out.surprise[r] = -out.surprise[r]
             out.excess[r] = out.surprise[r] - m.median if judged[r] else np.nan
             for i in range(nodes.shape[1]):
                 if out.rows[r, i] == MISSING:

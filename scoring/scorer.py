@@ -98,7 +98,7 @@ class Scorer:
         self.instruments: tuple[Channel, ...] = model.table.instruments
         self._scales: dict[str, ExcessScale] = {}
         self._lock = Lock()
-        self._bench = Bench()
+        self._bench = Bench(model.derived_groups[0])
         self._low = np.array([c.span[0] if c.span else -np.inf for c in self.instruments])
         self._high = np.array([c.span[1] if c.span else np.inf for c in self.instruments])
         self._resolution = np.array([c.resolution or 0.0 for c in self.instruments])
@@ -183,34 +183,33 @@ class Scorer:
         judged: NDArray[np.bool_],
     ) -> Outcome:
         """Return what can be said of every record by itself; judged: (n,)."""
-        n = len(nodes)
-        surprise, excess, own_surprise, low, high, best = np.empty((6, n))
-        own = np.empty((n, len(self.instruments)))
-        out = Outcome(
-            np.empty(nodes.shape, np.uint8), surprise, excess, own, np.empty(n, np.int16),
-            own_surprise, low, high, best, np.empty(len(members), np.int64),
-        )  # fmt: skip
+        out = Outcome.room(len(nodes), len(self.instruments), nodes.shape[1], len(members))
         at = np.array([self._bench.place(member) for member in members])
         groups = self.model.derived_groups
         if at.max() >= 0:
-            score_runs(
-                self._bench.members, at, start, nodes, judged, self._resolution, *groups, out
-            )
+            score_runs(self._bench.parts, at, start, nodes, judged, self._resolution, *groups, out)
         for k in np.flatnonzero((at < 0) | (out.gaps > 0)).tolist():
             use = slice(start[k], start[k + 1])
             if at[k] < 0:
-                self._score_parts(members[k], nodes[use], out.part(use))
-            excess[use] = self._scale(members[k]).excess(out.rows[use], surprise[use])
-            excess[use][~judged[use]] = np.nan
+                out.surprise[use] = np.nan
+            left = start[k] + np.flatnonzero(np.isnan(out.surprise[use]))
+            if len(left):
+                self._score_mixed(members[k], nodes, left, out)
+            out.excess[use] = self._scale(members[k]).excess(out.rows[use], out.surprise[use])
+            out.excess[use][~judged[use]] = np.nan
         return out
 
-    def _score_parts(self, member: Member, nodes: Floats, out: Outcome) -> None:
-        """Fill in, but for excess, what can be said of records under a member of several parts."""
-        out.rows[:] = member.bin_table.rows(nodes)
-        out.surprise[:], out.own[:] = removal_of(member, out.rows, *self.model.derived_groups)
-        usual = member.usual.channel_median
-        fill_suspects(out.own, usual, out.suspect, out.suspect_surprise)
-        out.low[:], out.high[:], out.best[:] = self._expected_rows(member, out.rows, out.suspect)
+    def _score_mixed(
+        self, member: Member, nodes: Floats, at: NDArray[np.int64], out: Outcome
+    ) -> None:
+        """Fill in, but for excess, what can be said of records at (m,) that the pass left out."""
+        rows = member.bin_table.rows(nodes[at])
+        suspect, own_surprise = np.empty(len(at), np.int16), np.empty(len(at))
+        surprise, own = removal_of(member, rows, *self.model.derived_groups)
+        fill_suspects(own, member.usual.channel_median, suspect, own_surprise)
+        out.rows[at], out.surprise[at], out.own[at] = rows, surprise, own
+        out.suspect[at], out.suspect_surprise[at] = suspect, own_surprise
+        out.low[at], out.high[at], out.best[at] = self._expected_rows(member, rows, suspect)
 
     def expected(self, source: str, row: BinRows, instrument: int) -> Expected:
         """Return what one instrument should have read beside the rest of `row`.

@@ -50,12 +50,13 @@ def test_sources_together_get_what_each_gets_alone(seed: int, sizes: list[int], 
 
 
 def test_a_member_has_one_place_in_every_thread_that_asks() -> None:
-    bench = Bench()
+    bench = Bench(MIXED.derived_groups[0])
 
     def places(names: list[str]) -> tuple[list[int], int]:
         found = [bench.place(MIXED.members[name]) for name in names]
-        return found, len(bench.members)
+        return found, len(bench.parts)
 
     with ThreadPoolExecutor(1) as other:
         assert places(["a", "b", "a"]) == ([0, 1, 0], 2)
-        assert other.submit(places, ["b", "c", "b"]).result() == ([0, -1, 0], 1)
+        # c has two parts, one after the other.
+        assert other.submit(places, ["b", "c", "a", "c"]).result() == ([0, 1, 3, 1], 4)
