@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+import gc
+import sys
+from collections.abc import Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any
 
@@ -29,7 +33,8 @@ def serve_command(
     """
     settings = load_settings(config, _options(model, data, host, port))
     service = Service(settings, load_engine)
-    service.open()
+    with _quickly():
+        service.open()
     try:
         require_tokens_off_loopback(settings, service.tokens)
         listener = listen(settings)
@@ -38,6 +43,23 @@ def serve_command(
         service.database.close()
         raise
     run(service, listener)
+
+
+@contextmanager
+def _quickly() -> Iterator[None]:
+    """Spare a start what it has no use for.
+
+    Numba, which only asks whether scipy's linear algebra is there, would import it and all
+    that it needs, where learning is installed too. What a start makes stays, so nobody
+    looks for garbage in it, then or later.
+    """
+    sys.modules.setdefault("scipy.linalg", None)  # type: ignore[arg-type]
+    gc.disable()
+    try:
+        yield
+    finally:
+        gc.freeze()
+        gc.enable()
 
 
 def _options(

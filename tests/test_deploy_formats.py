@@ -174,8 +174,9 @@ def test_so_it_does_in_postgresql(
 
 
 def test_a_store_is_held_of_every_version() -> None:
-    revisions = {one.revision for one in ScriptDirectory.from_config(alembic()).walk_revisions()}
-    assert revisions == set(VERSIONS)
+    scripts = ScriptDirectory.from_config(alembic())
+    assert {one.revision for one in scripts.walk_revisions()} == set(VERSIONS)
+    assert scripts.get_current_head() == migrations.HEAD
 
 
 def test_the_newest_held_store_has_the_tables_that_are_made_today(tmp_path: Path) -> None:

@@ -13,6 +13,7 @@ import httpx
 import pytest
 
 from scoring.artefact import write_model
+from service.store.database import Database
 from tests.conftest import ROOT
 from tests.models import a_model
 
@@ -61,6 +62,29 @@ def test_it_serves_until_it_is_told_to_stop(model: Path, tmp_path: Path) -> None
         _, log = process.communicate(timeout=30)
     assert '"event":"stopped"' in log
     assert "Traceback" not in log
+
+
+def test_a_start_imports_nothing_that_a_running_service_does_not_need(
+    model: Path, tmp_path: Path
+) -> None:
+    database = Database(tmp_path)
+    database.migrate()
+    database.close()
+    words = ("-X", "importtime", *command("serve", "--model", model, "--data", tmp_path)[1:])
+    log = tmp_path / "log"
+    with log.open("wb") as file:
+        process = subprocess.Popen(
+            [sys.executable, *words, "--port", "0"], stdout=subprocess.PIPE, stderr=file, text=True
+        )
+        assert process.stdout is not None
+        assert process.stdout.readline().startswith("Serving on")
+        process.send_signal(signal.SIGTERM)
+        process.communicate(timeout=30)
+    lines = log.read_text(encoding="utf-8").splitlines()
+    imported = {line.rpartition("|")[2].strip() for line in lines if "|" in line}
+    assert {"service.running", "numba.np.arraymath"} <= imported
+    # Migrations are for a store of an earlier version; the others are for learning.
+    assert not imported & {"alembic", "scipy.linalg", "pandas", "pyarrow", "training.fit"}
 
 
 def test_what_keeps_it_from_serving_is_one_sentence(model: Path, tmp_path: Path) -> None:

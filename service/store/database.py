@@ -14,10 +14,6 @@ from pathlib import Path
 from typing import Any
 
 import sqlalchemy as sa
-from alembic import command
-from alembic.config import Config
-from alembic.runtime.migration import MigrationContext
-from alembic.script import ScriptDirectory
 
 from scoring.errors import OddbranchError
 from service.store import migrations
@@ -242,20 +238,31 @@ def _migration_lock(connection: sa.Connection, is_sqlite: bool) -> Iterator[None
 
 
 def _upgrade(connection: sa.Connection) -> None:
+    current = _version_of(connection)
+    if current == migrations.HEAD:
+        return
+    # A quarter of a second that a start with the tables as they should be does not need.
+    from alembic import command
+    from alembic.config import Config
+    from alembic.script import ScriptDirectory
+
     config = Config()
     config.set_main_option("script_location", str(Path(migrations.__file__).parent))
     config.attributes["connection"] = connection
-    known = ScriptDirectory.from_config(config)
-    current = MigrationContext.configure(connection).get_current_revision()
-    if current == known.get_current_head():
-        return
-    if current is not None and current not in {
-        script.revision for script in known.walk_revisions()
-    }:
+    known = {script.revision for script in ScriptDirectory.from_config(config).walk_revisions()}
+    if current is not None and current not in known:
         raise StoreRefused(
             f"the store has tables of version {current}, this program knows up to "
-            f"{known.get_current_head()}; install the later version that wrote them"
+            f"{migrations.HEAD}; install the later version that wrote them"
         )
     connection.rollback()
     command.upgrade(config, "head")
     connection.commit()
+
+
+def _version_of(connection: sa.Connection) -> str | None:
+    """Return the name of the last migration that the tables have seen, None where none has."""
+    if not sa.inspect(connection).has_table("alembic_version"):
+        return None
+    version = connection.exec_driver_sql("SELECT version_num FROM alembic_version").scalar()
+    return None if version is None else str(version)
