@@ -193,7 +193,7 @@ def test_two_workers_learn_the_same_model_though_one_is_killed_half_way_and_so_d
     assert read_model(tmp_path / "again").name == alone
     reading, learning = {"_read", "_join"}, {"_learn_part", "_shared_or_own"}
     levels = {"_keep", "_rest_of", "_episodes_of", "_peaks_of", "_raised_of"}
-    whole = {"_sampled_of", "_count", "_parts_of", "_still_of"}
+    whole = {"_sampled_of", "_count", "_parts_of", "_still_of", "_seen_nats"}
     assert handed_out == reading | learning | levels | whole
 
 

@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
+import pickle
 from pathlib import Path
 
 import numpy as np
 import pytest
 
 from scoring.channels import ChannelTable, parse_channels
+from tests.each_alone import ByPost
+from tests.learned import small_fleet
 from tests.spools import spool_of
 from training.rows import Rows
-from training.season import slow_channels
+from training.season import slow_channels, unseen_nats
 
 N = 20 * 1440
 MINUTES = np.arange(N)
@@ -69,3 +72,16 @@ def test_too_little_to_tell_is_no_season(
     table = parse_channels({"step_s": 60.0, "channel": [{"name": "x"}]}, "test")
     with spool_of({"a": values[:, None]}, folder=tmp_path) as spool:
         assert slow_channels(Rows(spool, table, spool.sources, 60.0)) == ()
+
+
+def test_what_members_carry_is_scored_by_others_who_keep_the_tables_layout() -> None:
+    result = small_fleet()[0]
+    held_out = {source: one.held_out for source, one in result.learned.items()}
+    # As they come from another process: without the layout that scoring makes.
+    members = {s: pickle.loads(pickle.dumps(one.member)) for s, one in result.learned.items()}
+    found = unseen_nats(members, held_out, ByPost([]))
+    trees = [part.tree for member in members.values() for part in member.parts]
+    assert not any("arrays" in vars(tree) for tree in trees)
+    assert found == unseen_nats(members, held_out) > 0.0
+    assert all("arrays" in vars(tree) for tree in trees)
+    assert unseen_nats({}, {}) == 0.0

@@ -106,7 +106,7 @@ def learn_model(
         )
     promise = None
     if curve is not None:
-        unseen = unseen_nats(members, held_out)
+        unseen = unseen_nats(members, held_out, hands)
         promise = promise_of(curve, levels, budget, slow_channels(rows), unseen)
     members = {s: replace(m, about=_about(rows, learned[s])) for s, m in members.items()}
     rests = [m.usual.sustained for m in members.values()] or [0.0]
