@@ -33,8 +33,8 @@ class Laid(NamedTuple):
 
     borders, lasts, grid, cells, n_words: see BinTable. usual: (n_instruments,) median of each
     own surprise, nats; median: of a full record's surprise, nats. regime: (n_regime,) nodes
-    that choose a part. n_parts: of the member. key: (n_regime,) bins for which this part
-    holds; the last one holds for all that are not named. log_share: see Part.
+    that choose a part. keys: (n_parts - 1, n_regime) bins for which each part holds, the last
+    one for all that are not named. log_share: see Part.
     """
 
     tree: TreeArrays
@@ -46,8 +46,7 @@ class Laid(NamedTuple):
     usual: Floats
     median: float
     regime: Ints
-    n_parts: int
-    key: BinRows
+    keys: BinRows
     log_share: float
 
 
@@ -110,13 +109,14 @@ class Bench:
         start = self._group_start
         if any(start[i + 1] > start[i] for i in member.regime):
             return -1
-        table, usual = member.bin_table, member.usual
+        table, usual, regime = member.bin_table, member.usual, list(member.regime)
+        named = [part.key for part in member.parts if part.key is not None]
+        keys = np.array(named, dtype=np.uint8).reshape(len(named), len(regime))
         for part in member.parts:
             laid = Laid(
                 part.tree.arrays, table.borders, table.lasts, table.grid, table.cells,
                 table.n_words, np.asarray(usual.channel_median), float(usual.median),
-                np.array(member.regime, dtype=np.int64), len(member.parts),
-                np.array(part.key or (), dtype=np.uint8), float(part.log_share),
+                np.array(regime, dtype=np.int64), keys, float(part.log_share),
             )  # fmt: skip
             if hasattr(self._own, "parts"):
                 _append(self._own.parts, laid)
@@ -161,68 +161,100 @@ def usable_readings(
 
 
 @njit(cache=True, nogil=True)
-def _holds(parts: Any, first: int, row: BinRows) -> int:
-    """Return the number of the part that holds for a row of bins, -1 if that is open."""
-    m = parts[first]
-    for i in m.regime:
+def _holds(keys: BinRows, regime: Ints, row: BinRows) -> int:
+    """Return which part of a member holds for a row of bins, -1 if that is open."""
+    for i in regime:
         if row[i] == MISSING:
             return -1
-    for p in range(first, first + m.n_parts - 1):
-        key, fits = parts[p].key, True
-        for k in range(key.shape[0]):
-            fits &= row[m.regime[k]] == key[k]
+    for p in range(keys.shape[0]):
+        fits = True
+        for k in range(regime.shape[0]):
+            fits &= row[regime[k]] == keys[p, k]
         if fits:
             return p
-    return first + int(m.n_parts) - 1
+    return int(keys.shape[0])
 
 
 @njit(cache=True, nogil=True)
-def _without_regime(parts: Any, first: int, row: BinRows, i: int, s: Scratch) -> float:
-    """Return ln p(all of a row but regime channel i): each of its bins is tried in turn,
-    whichever part holds then."""
-    own, n_bins = row[i], parts[first].tree.n_bins[i]
-    logs, most = np.empty(n_bins), -np.inf
-    for b in range(n_bins):
-        row[i] = b
-        part = parts[_holds(parts, first, row)]
-        logs[b] = evidence_row(part.tree, row, s) + part.log_share
-        most = max(most, logs[b])
-    row[i] = own
-    total = 0.0
-    for b in range(n_bins):
-        total += math.exp(logs[b] - most)
-    return most + math.log(total)
+def _other_regimes(m: Laid, p: int, held: Ints, row: BinRows, s: Scratch, logs: Floats) -> None:
+    """Put ln p of a row with another bin of a regime channel into logs, by channel and bin,
+    where part p holds then. held: the channels' first places in logs."""
+    for k in range(m.regime.shape[0]):
+        i = m.regime[k]
+        own = row[i]
+        for b in range(m.tree.n_bins[i]):
+            row[i] = b
+            if b != own and _holds(m.keys, m.regime, row) == p:
+                logs[held[k] + b] = evidence_row(m.tree, row, s) + m.log_share
+        row[i] = own
 
 
 @njit(cache=True, nogil=True)
-def _score_stretch(
+def _log_sum(logs: Floats) -> float:
+    most, total = np.max(logs), 0.0
+    for x in logs:
+        total += math.exp(x - most)
+    return float(most + math.log(total))
+
+
+@njit(cache=True, nogil=True)
+def _score_regimes(
     parts: Any,
     first: int,
-    part: int,
     use: slice,
     resolution: Floats,
     group_start: Ints,
     group_nodes: Ints,
     out: Outcome,
 ) -> None:
-    """Fill in what can be said of some rows for which the same part of a member holds."""
-    m = parts[part]
-    rows, own, suspect = out.rows[use], out.own[use], out.suspect[use]
-    surprise = out.surprise[use]
-    fill_removal(m.tree, rows, group_start, group_nodes, surprise, own)
-    for r in range(rows.shape[0]):
-        surprise[r] = -surprise[r] - m.log_share
-    if m.n_parts > 1:
-        s, row = scratch(m.tree), np.empty(rows.shape[1], np.uint8)
-        for r in range(rows.shape[0]):
-            row[:] = rows[r]
-            for i in m.regime:
-                own[r, i] = surprise[r] + _without_regime(parts, first, row, i, s)
+    """Fill in what can be said of a run's rows under a member of several parts.
+
+    A regime channel is removed by trying each of its bins, whichever part holds then.
+    """
+    m = parts[first]
+    rows, n_parts, regime = out.rows[use], m.keys.shape[0] + 1, m.regime
+    surprise, own, suspect = out.surprise[use], out.own[use], out.suspect[use]
+    n = rows.shape[0]
+    held = np.zeros(regime.shape[0] + 1, np.int64)
+    for k in range(regime.shape[0]):
+        held[k + 1] = held[k] + m.tree.n_bins[regime[k]]
+    holds, row, logs = (
+        np.empty(n, np.int64),
+        np.empty(rows.shape[1], np.uint8),
+        np.empty((n, held[-1])),
+    )
+    for r in range(n):
+        holds[r] = _holds(m.keys, regime, rows[r])
+        surprise[r] = np.nan
+    for p in range(n_parts):
+        part = parts[first + p]
+        at, s = np.flatnonzero(holds == p), scratch(part.tree)
+        if at.shape[0]:
+            evidence, alone = np.empty(at.shape[0]), np.empty((at.shape[0], own.shape[1]))
+            fill_removal(part.tree, rows[at], group_start, group_nodes, evidence, alone)
+            for j in range(at.shape[0]):
+                surprise[at[j]] = -evidence[j] - part.log_share
+                own[at[j]] = alone[j]
+        for r in range(n):
+            if holds[r] >= 0:
+                row[:] = rows[r]
+                _other_regimes(part, p, held, row, s, logs[r])
+    for r in range(n):
+        if holds[r] >= 0:
+            for k in range(regime.shape[0]):
+                i = regime[k]
+                logs[r, held[k] + rows[r, i]] = -surprise[r]
+                own[r, i] = surprise[r] + _log_sum(logs[r, held[k] : held[k + 1]])
     fill_suspects(own, m.usual, suspect, out.suspect_surprise[use])
-    fill_intervals(
-        m.tree, rows, suspect, m.borders, resolution, group_start, group_nodes,
-        out.low[use], out.high[use], out.best[use],
-    )  # fmt: skip
+    for p in range(n_parts):
+        at = np.flatnonzero(holds == p)
+        if at.shape[0]:
+            part, found = parts[first + p], np.empty((3, at.shape[0]))
+            fill_intervals(
+                part.tree, rows[at], suspect[at], m.borders, resolution, group_start,
+                group_nodes, found[0], found[1], found[2],
+            )  # fmt: skip
+            out.low[use][at], out.high[use][at], out.best[use][at] = found[0], found[1], found[2]
 
 
 @njit(cache=True, nogil=True)
@@ -247,23 +279,19 @@ def score_runs(
         if at[k] < 0:
             continue
         m, use = parts[at[k]], slice(start[k], start[k + 1])
-        rows = out.rows[use]
+        rows, own, suspect = out.rows[use], out.own[use], out.suspect[use]
         fill_rows(nodes[use], m.borders, m.lasts, m.grid, m.cells, m.n_words, rows)
-        first = 0
-        while first < rows.shape[0]:
-            part, last = _holds(parts, at[k], rows[first]), first + 1
-            if m.n_parts == 1:
-                last = rows.shape[0]
-            while last < rows.shape[0] and _holds(parts, at[k], rows[last]) == part:
-                last += 1
-            stretch = slice(start[k] + first, start[k] + last)
-            if part < 0:
-                out.surprise[stretch] = np.nan
-            else:
-                _score_stretch(
-                    parts, at[k], part, stretch, resolution, group_start, group_nodes, out
-                )
-            first = last
+        if m.keys.shape[0]:
+            _score_regimes(parts, at[k], use, resolution, group_start, group_nodes, out)
+        else:
+            fill_removal(m.tree, rows, group_start, group_nodes, out.surprise[use], own)
+            for r in range(start[k], start[k + 1]):
+                out.surprise[r] = -out.surprise[r]
+            fill_suspects(own, m.usual, suspect, out.suspect_surprise[use])
+            fill_intervals(
+                m.tree, rows, suspect, m.borders, resolution, group_start, group_nodes,
+                out.low[use], out.high[use], out.best[use],
+            )  # fmt: skip
         out.gaps[k] = 0
         for r in range(start[k], start[k + 1]):
             out.excess[r] = out.surprise[r] - m.median if judged[r] else np.nan
