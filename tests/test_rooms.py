@@ -29,6 +29,7 @@ SCORING_ORDER = (
     "excess",
     "sustained",
     "standing",
+    "runs",
     "scorer",
     "artefact",
     "alert_settings",
