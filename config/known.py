@@ -61,6 +61,11 @@ def known_variables() -> frozenset[str]:
     return frozenset(variable_of(name, *key) for name in OWNERS for key in comments_of(name))
 
 
+def file_with(section: str, key: str) -> str | None:
+    """Return the first file that has a key, for whoever wrote it into another."""
+    return next((name for name in OWNERS if (section, key) in comments_of(name)), None)
+
+
 def misspelt(environment: Mapping[str, str]) -> str | None:
     """Return a sentence about a variable that no file knows, or None where there is none."""
     for name in environment:

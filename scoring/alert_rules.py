@@ -60,7 +60,8 @@ def channels_key(names: Sequence[str]) -> int:
 
 def level_knobs(levels: Levels, settings: AlertSettings, usual_sustained: float) -> Floats:
     """Return the knobs of the kernel. usual_sustained: where the source's sustained rests."""
-    step_s, kept = levels.step_s, 1.0 - settings.deadband
+    delays, step_s = levels.delays, levels.step_s
+    kept = 1.0 - delays.deadband
     above = levels.sustained - usual_sustained
     knobs = np.zeros(kernel.N_KNOBS)
     knobs[kernel.RECORD] = levels.record
@@ -69,9 +70,9 @@ def level_knobs(levels: Levels, settings: AlertSettings, usual_sustained: float)
     knobs[kernel.SUSTAINED] = levels.sustained
     knobs[kernel.SUSTAINED_OFF] = min(levels.sustained, usual_sustained + kept * above)
     knobs[kernel.HALF] = usual_sustained + 0.5 * above
-    knobs[kernel.RUN_LENGTH] = settings.record_run
-    knobs[kernel.ON_S] = settings.sustained_on_steps * step_s
-    knobs[kernel.OFF_S] = settings.off_delay_steps * step_s
+    knobs[kernel.RUN_LENGTH] = delays.record_run
+    knobs[kernel.ON_S] = delays.sustained_on_steps * step_s
+    knobs[kernel.OFF_S] = delays.off_delay_steps * step_s
     knobs[kernel.STEP_S] = step_s
     knobs[kernel.SPAN_S] = settings.span_steps * step_s
     knobs[kernel.CLOCK_S] = settings.clock_steps * step_s

@@ -23,6 +23,7 @@ from numpy.typing import NDArray
 
 from scoring.bins import Bins
 from scoring.channels import parse_channels
+from scoring.delays import Delays
 from scoring.errors import BadArtefact, BadChannelTable
 from scoring.model import Levels, Member, Model, Part, Usual
 from scoring.stillness import StillnessLimits
@@ -185,11 +186,10 @@ def _to_arrays(model: Model) -> tuple[Arrays, dict[str, Any]]:
                 ],
             }
         )
-    levels = model.levels
     data = {
         "format": MODEL_FORMAT,
         "table": model.table.model_dump(mode="json"),
-        "levels": {name: getattr(levels, name) for name in Levels.__dataclass_fields__},
+        "levels": _levels_data(model.levels),
         "members": members,
     }
     return arrays, data
@@ -206,10 +206,22 @@ def _from_arrays(data: dict[str, Any], arrays: Arrays, place: str) -> Model:
         table=table,
         fleet=members[0],
         members={m.source: m for m in members[1:]},
-        levels=Levels(**data["levels"]),
+        levels=_levels(data["levels"]),
         name=str(data["name"]),
         about=about["model"],
     )
+
+
+def _levels_data(levels: Levels) -> dict[str, Any]:
+    data = {name: getattr(levels, name) for name in Levels.__dataclass_fields__}
+    # What a site left alone is not written: models from before there were delays in them
+    # keep their names, and older versions read what they can follow.
+    delays = data.pop("delays").model_dump(exclude_defaults=True)
+    return {**data, "delays": delays} if delays else data
+
+
+def _levels(data: dict[str, Any]) -> Levels:
+    return Levels(**{**data, "delays": Delays(**data.get("delays", {}))})
 
 
 def _member(

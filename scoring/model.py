@@ -17,6 +17,7 @@ from numpy.typing import NDArray
 
 from scoring.bins import Bins, BinTable
 from scoring.channels import ChannelTable
+from scoring.delays import DELAYS, Delays
 from scoring.derived import groups
 from scoring.stillness import StillnessLimits
 from scoring.tree import Tree
@@ -92,6 +93,7 @@ class Levels:
     cap: the most that one record adds to sustained before weighting, nats.
     tau_s: time constant of sustained, seconds; step_s: the usual interval.
     least_readings: with fewer readings a record is not judged.
+    delays: with which they were set, and with which alerts are raised.
     """
 
     record: float
@@ -100,6 +102,7 @@ class Levels:
     tau_s: float
     step_s: float
     least_readings: int
+    delays: Delays = DELAYS
 
 
 @dataclass(frozen=True)

@@ -12,7 +12,6 @@ from typing import Any
 
 import sqlalchemy as sa
 
-from scoring.alert_settings import AlertSettings
 from service.access import Tokens, is_loopback
 from service.alerting import N_TICKED, Keeper, budget_used, flood_answer
 from service.engine import Engine
@@ -60,7 +59,7 @@ class Service:
         )
         self.tokens = Tokens(open_without=is_loopback(settings.server.host))
         self.models = ModelWatch(settings.model.path, load, self.metrics, settings.limits)
-        self.keeper = Keeper(AlertSettings(), clock_ns())
+        self.keeper = Keeper(settings.alerts, clock_ns())
         self.writer = Writer(
             self.database,
             self.metrics,

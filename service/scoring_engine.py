@@ -11,6 +11,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from scoring.alert_settings import AlertSettings
 from scoring.artefact import read_model
 from scoring.episodes import Episodes
 from scoring.model import Member, Model
@@ -24,9 +25,9 @@ _N_CACHED_NEIGHBOURS = 4096
 
 
 class ScoringEngine:
-    """One loaded model with its kernels compiled."""
+    """One loaded model with its kernels compiled. alerts: what a site set of them."""
 
-    def __init__(self, model: Model) -> None:
+    def __init__(self, model: Model, alerts: AlertSettings | None = None) -> None:
         self.model = model
         self.name = model.name
         self.layout = Layout(tuple(model.table.instruments))
@@ -37,7 +38,7 @@ class ScoringEngine:
         self.figures: Mapping[str, float] = _figures(model)
         self._scorer = Scorer(model)
         self._scorer.warm()
-        self.episodes: Episodes | None = Episodes(self._scorer)
+        self.episodes: Episodes | None = Episodes(self._scorer, alerts)
         self.episodes.warm()
         # Made of the model alone: a cache that leads back here would keep this from being freed.
         self._neighbours = lru_cache(maxsize=_N_CACHED_NEIGHBOURS)(partial(_neighbours, model))
@@ -142,9 +143,9 @@ class ScoringEngine:
         }
 
 
-def load_engine(path: Path) -> ScoringEngine:
+def load_engine(path: Path, alerts: AlertSettings | None = None) -> ScoringEngine:
     """Return the model of a directory, ready to score; raises BadArtefact."""
-    return ScoringEngine(read_model(path))
+    return ScoringEngine(read_model(path), alerts)
 
 
 def _neighbours(model: Model, member: str, column: int) -> tuple[str, ...]:

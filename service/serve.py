@@ -6,6 +6,7 @@ import gc
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -32,7 +33,7 @@ def serve_command(
     An option wins over an environment variable, that over the file given with --config.
     """
     settings = load_settings(config, _options(model, data, host, port))
-    service = Service(settings, load_engine)
+    service = Service(settings, partial(load_engine, alerts=settings.alerts))
     with _quickly():
         service.open()
     try:

@@ -22,6 +22,7 @@ from pydantic_settings import (
 )
 
 from config import known
+from scoring.alert_settings import AlertSettings
 from scoring.errors import OddbranchError
 from service.nearest import nearest_of
 
@@ -120,6 +121,7 @@ class Settings(BaseSettings):
     model: ModelSettings = ModelSettings()
     store: StoreSettings = StoreSettings()
     limits: LimitSettings = LimitSettings()
+    alerts: AlertSettings = AlertSettings()
     metrics: MetricSettings = MetricSettings()
     log: LogSettings = LogSettings()
 
@@ -192,9 +194,9 @@ def _check_file(file: Mapping[str, Any], path: Path | None) -> None:
             raise BadSettings(f"{path}: {section} is a section; write [{section}] on its own line")
         for key in content:
             if key not in sections[section]:
-                raise BadSettings(
-                    f"{path}: {section}.{key} is not known{_hint(key, sections[section])}"
-                )
+                other = known.file_with(section, key)
+                hint = f"; it belongs in {other}" if other else _hint(key, sections[section])
+                raise BadSettings(f"{path}: {section}.{key} is not known{hint}")
 
 
 def _hint(name: str, names: Any) -> str:

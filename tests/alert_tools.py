@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 from scoring.alert_settings import AlertSettings
 from scoring.alert_standing import AlertStanding
 from scoring.alerts import Alert, Event
+from scoring.delays import DELAYS, Delays
 from scoring.episodes import Episodes
 from scoring.model import Model
 from scoring.scorer import Scorer, Scores
@@ -42,10 +43,14 @@ def limits_of(
 
 
 def episodes(
-    settings: AlertSettings | None = None, model: Model | None = None, **limits: float
+    settings: AlertSettings | None = None,
+    model: Model | None = None,
+    delays: Delays = DELAYS,
+    **limits: float,
 ) -> Episodes:
     """Return the machine over the small model. limits: see `limits_of`."""
     model = model or a_model()
+    model = replace(model, levels=replace(model.levels, delays=delays))
     if limits:
         members = {
             name: replace(member, stillness=limits_of(model, **limits))

@@ -13,6 +13,7 @@ import json
 import os
 import signal
 import sys
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -39,7 +40,8 @@ def main(folder: Path, words: list[str]) -> None:
         section, _, key = name.partition(".")
         options.setdefault(section, {})[key] = json.loads(value)
     settings = load_settings(None, options)
-    service = Service(settings, load_engine if _is_real(folder) else load_fake)
+    real = partial(load_engine, alerts=settings.alerts)
+    service = Service(settings, real if _is_real(folder) else load_fake)
     service.open()
     listener = listen(settings)
     say_where(settings, listener)

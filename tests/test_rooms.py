@@ -22,6 +22,7 @@ SCORING_ORDER = (
     "bins",
     "tree",
     "stillness",
+    "delays",
     "model",
     "kernels",
     "density",

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -11,6 +13,7 @@ from scoring import alert_kernel as kernel
 from scoring.alert_kernel import scan
 from scoring.alert_rules import level_knobs
 from scoring.alert_settings import AlertSettings
+from scoring.delays import Delays
 from scoring.model import Levels
 from tests.alert_tools import STEP_NS, Fed, S, episodes, readings, times, told
 
@@ -44,7 +47,8 @@ def test_an_on_delay_of_n_records_waits_as_long_as_the_run_rule_says(p: float, n
     rng = np.random.default_rng(20 + n)
     n_records = 400_000
     excess = np.where(rng.random(n_records) < p, 2.0, 0.0)
-    knobs = level_knobs(LEVELS, AlertSettings(record_run=n, off_delay_steps=0), 0.0)
+    levels = replace(LEVELS, delays=Delays(record_run=n, off_delay_steps=0))
+    knobs = level_knobs(levels, AlertSettings(), 0.0)
     found = np.empty((n_records, 2), dtype=np.int64)
     n_found = scan(times(n_records), excess, np.zeros(n_records), knobs, kernel.new_ints(0), found)
     starts, ends = found[:n_found, 0], found[:n_found, 1]
@@ -87,13 +91,12 @@ def test_levels_and_delays_do_what_their_slow_twin_does(
     rows: list[tuple[float, float]], run: int, on: int, off: int, band: float
 ) -> None:
     excess, sustained = [e for e, _ in rows], [s for _, s in rows]
-    delays = AlertSettings(
-        record_run=run, sustained_on_steps=on, off_delay_steps=off, deadband=band
-    )
+    delays = Delays(record_run=run, sustained_on_steps=on, off_delay_steps=off, deadband=band)
     found = np.empty((len(rows), 2), dtype=np.int64)
     n_found = scan(
         times(len(rows)), np.array(excess), np.array(sustained),
-        level_knobs(LEVELS, delays, 0.0), kernel.new_ints(0), found,
+        level_knobs(replace(LEVELS, delays=delays), AlertSettings(), 0.0), kernel.new_ints(0),
+        found,
     )  # fmt: skip
     expected = slow_episodes(excess, sustained, run, on, off, band)
     assert [tuple(one) for one in found[:n_found].tolist()] == expected

@@ -1,8 +1,11 @@
-"""The defaults are those that the trade's figures and the levels' own counting ask for."""
+"""The defaults are those that the trade's figures ask for, and nonsense is refused by name."""
 
 from __future__ import annotations
 
-from scoring.alert_settings import OFF_DELAY_STEPS, AlertSettings
+import pytest
+from pydantic import ValidationError
+
+from scoring.alert_settings import AlertSettings
 
 
 def test_the_flood_figures_are_those_of_the_standard() -> None:
@@ -16,5 +19,18 @@ def test_the_flood_figures_are_those_of_the_standard() -> None:
     assert settings.realarm_s == 24 * 3600
 
 
-def test_levels_and_alerts_hold_an_episode_for_the_same_time() -> None:
-    assert AlertSettings().off_delay_steps == OFF_DELAY_STEPS
+@pytest.mark.parametrize(
+    "wrong",
+    [
+        {"away_factor": 0.5}, {"stuck_factor": 0.9}, {"chatter_cycles": 1}, {"unknown": 1},
+        {"realarm_s": float("nan")}, {"repeat_n": 0}, {"silent_steps": -1}, {"shelve_most_s": 1e9},
+    ],
+)  # fmt: skip
+def test_settings_that_make_no_sense_are_refused(wrong: dict[str, float]) -> None:
+    with pytest.raises(ValidationError, match=next(iter(wrong))):
+        AlertSettings(**wrong)
+
+
+def test_a_flood_that_would_end_as_it_starts_is_refused() -> None:
+    with pytest.raises(ValidationError, match="flood_end_n = 11 is more than flood_start_n = 10"):
+        AlertSettings(flood_end_n=11)

@@ -17,6 +17,7 @@ from hypothesis import HealthCheck, given, settings
 from scoring import artefact
 from scoring.artefact import MODEL_FORMAT, read_model, write_model
 from scoring.channels import parse_channels
+from scoring.delays import Delays
 from scoring.density import surprise_of
 from scoring.errors import BadArtefact
 from scoring.model import Member, Model, Part
@@ -102,6 +103,16 @@ def test_the_name_is_that_of_the_content_alone(tmp_path: Path) -> None:
     tables = (tree.log_ratios[0] + 1e-12, *tree.log_ratios[1:])
     fleet = replace(model.fleet, parts=(Part(replace(tree, log_ratios=tables)),))
     assert write_model(replace(model, fleet=fleet), tmp_path / "d").name != first
+
+
+def test_delays_are_held_where_a_site_has_set_them(tmp_path: Path) -> None:
+    model = a_model()
+    bare = write_model(model, tmp_path / "a").name
+    # What was left alone is not written, so that models without delays keep their names.
+    assert "delays" not in (tmp_path / "a" / "model.json").read_text(encoding="utf-8")
+    levels = replace(model.levels, delays=Delays(deadband=0.25))
+    assert write_model(replace(model, levels=levels), tmp_path / "b").name != bare
+    assert read_model(tmp_path / "b").levels == levels
 
 
 def test_writing_over_a_model_replaces_it_and_leaves_nothing_beside(tmp_path: Path) -> None:

@@ -12,6 +12,7 @@ from hypothesis import strategies as st
 from scoring.alert_settings import AlertSettings
 from scoring.alert_standing import AlertStanding
 from scoring.alerts import KINDS, SCORED, SILENT
+from scoring.delays import Delays
 from scoring.episodes import Episodes, find_episodes
 from scoring.scorer import Scorer
 from tests.alert_tools import (
@@ -85,13 +86,13 @@ def test_the_deadband_holds_until_the_return_is_clear() -> None:
     # Sustained level 3, usual 0.1: with a band of 0.1 it must return below 2.71.
     band = [0.0, 3.1, *[2.8] * 60]
     for deadband, cleared in ((0.1, False), (0.0, True)):
-        fed = Fed(episodes(AlertSettings(deadband=deadband)))
+        fed = Fed(episodes(delays=Delays(deadband=deadband)))
         fed.feed([QUIET] * len(band), band)
         assert (("cleared", SCORED) in told(fed.events)) is cleared
 
 
 def test_on_delays_keep_short_crossings_out() -> None:
-    fed = Fed(episodes(AlertSettings(record_run=3, sustained_on_steps=4)))
+    fed = Fed(episodes(delays=Delays(record_run=3, sustained_on_steps=4)))
     fed.feed([OVER, OVER, QUIET, OVER, OVER, QUIET], [0, 0, 4, 4, 4, 0])
     assert fed.events == []
     events = fed.feed([OVER, OVER, OVER])
@@ -100,7 +101,7 @@ def test_on_delays_keep_short_crossings_out() -> None:
     assert alert is not None
     # Since when is the first record of the run, not the one that raised.
     assert alert.raised_ns - alert.since_ns == 2 * STEP_NS
-    fed = Fed(episodes(AlertSettings(sustained_on_steps=4)))
+    fed = Fed(episodes(delays=Delays(sustained_on_steps=4)))
     events = fed.feed([QUIET] * 6, [4.0] * 6)
     assert [e.time_ns for e in events] == [START_NS + 4 * STEP_NS]
 
@@ -231,7 +232,8 @@ def test_one_by_one_equals_batches(excess: list[float], seed: int, data: st.Data
     rng = np.random.default_rng(seed)
     n = len(excess)
     machine = episodes(
-        AlertSettings(off_delay_steps=5, realarm_s=200.0, repeat_n=2, hold_steps=2),
+        AlertSettings(realarm_s=200.0, repeat_n=2, hold_steps=2),
+        delays=Delays(off_delay_steps=5),
         still_s=30.0, moving_s=20.0, away_s=20.0,
     )  # fmt: skip
     values = readings(n)
@@ -265,7 +267,7 @@ def test_open_alerts_are_one_a_kind_and_cleared_only_after_raised(
     excess: list[float], seed: int
 ) -> None:
     rng = np.random.default_rng(seed)
-    machine = episodes(AlertSettings(off_delay_steps=3), still_s=20.0, away_s=10.0)
+    machine = episodes(delays=Delays(off_delay_steps=3), still_s=20.0, away_s=10.0)
     fed = Fed(machine)
     values = readings(len(excess))
     values[rng.random(values.shape) < 0.4] = np.nan
@@ -339,7 +341,7 @@ def test_one_glitch_of_any_size_raises_one_record_alert_and_never_a_sustained_on
 def test_finding_episodes_alone_gives_what_the_machine_raises(
     rows: list[tuple[float, float]],
 ) -> None:
-    machine = episodes(AlertSettings(off_delay_steps=4, record_run=2, sustained_on_steps=1))
+    machine = episodes(delays=Delays(off_delay_steps=4, record_run=2, sustained_on_steps=1))
     excess, sustained = np.array([e for e, _ in rows]), np.array([s for _, s in rows])
     at = times(len(rows))
     usual = machine.scorer.model.member("a").usual.sustained

@@ -40,8 +40,11 @@ def refused(*words: str | Path) -> str:
 
 
 def test_it_serves_until_it_is_told_to_stop(model: Path, tmp_path: Path) -> None:
+    config = tmp_path / "service.toml"
+    config.write_text("[alerts]\nspan_steps = 0\n", encoding="utf-8")
+    words = ("--config", config, "--model", model, "--data", tmp_path / "data", "--port", "0")
     process = subprocess.Popen(
-        command("serve", "--model", model, "--data", tmp_path / "data", "--port", "0"),
+        command("serve", *words),
         stdout=subprocess.PIPE,
         stderr=subprocess.PIPE,
         text=True,
@@ -52,11 +55,16 @@ def test_it_serves_until_it_is_told_to_stop(model: Path, tmp_path: Path) -> None
         found = re.match(r"Serving on (http://127\.0\.0\.1:\d+) \(stop with Ctrl-C\)", line)
         assert found, line
         assert process.stdout.readline().startswith("Advice only")
-        readings = {"in": 12.0, "out": 16.0, "power": 11.0, "pump": "running"}
+        readings = {"in": 12.0, "out": 16.0, "power": 111.0, "pump": "running"}
         body = {"source": "a", "time": "2025-12-01T04:00:10Z", "readings": readings}
         answer = httpx.post(f"{found.group(1)}/records", json=body, timeout=20)
         assert answer.status_code == 200
         assert answer.json()["member"] == "own"
+        # Beyond its span for one interval; it would take six if the file did not say otherwise.
+        body["time"] = "2025-12-01T04:00:20Z"
+        assert httpx.post(f"{found.group(1)}/records", json=body, timeout=20).is_success
+        alerts = httpx.get(f"{found.group(1)}/alerts", timeout=20).json()["items"]
+        assert "span" in {alert["kind"] for alert in alerts}
     finally:
         process.send_signal(signal.SIGTERM)
         _, log = process.communicate(timeout=30)

@@ -81,6 +81,13 @@ def test_an_option_wins_over_the_environment(monkeypatch: pytest.MonkeyPatch) ->
         ('[server]\nport = "many"', r"server.port = 'many' cannot be used: a whole number"),
         ('[log]\nrequests = "some"', r"log.requests = 'some' cannot be used: .*refused.*all"),
         ("[server", r"cannot be read as TOML"),
+        ("[alerts]\ndeadband = 0.2", r"alerts.deadband is not known; it belongs in learn\.toml"),
+        ("[alerts]\nrealarm = 0", r"alerts.realarm is not known; is realarm_s meant"),
+        (
+            "[alerts]\nstuck_factor = 0.5",
+            r"alerts.stuck_factor = 0.5 cannot be used: a number from 1 to 100 is wanted \(times",
+        ),
+        ("[alerts]\nflood_end_n = 11", r"service.toml: alerts: .*11 is more than flood_start_n"),
     ],
 )
 def test_a_file_that_cannot_be_used_gets_a_sentence(

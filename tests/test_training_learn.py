@@ -10,6 +10,7 @@ import pytest
 from click.testing import CliRunner, Result
 
 from scoring.artefact import read_model
+from scoring.delays import Delays
 from scoring.errors import BadChannelTable, OddbranchError
 from scoring.model import Model
 from tests.plant_files import CHANNELS, HEAD, SOURCES, Plant, lines, plant, records
@@ -98,6 +99,9 @@ CHANGES: list[tuple[LearnSettings, str]] = [
     (LearnSettings(sustained=Sustained(time_constant_steps=60.0)), "tau_s"),
     (LearnSettings(sustained=Sustained(time_constant_steps=60.0)), "sustained"),
     (LearnSettings(judging=Judging(least_share=1.0)), "least_readings"),
+    (LearnSettings(alerts=Delays(off_delay_steps=0.0)), "delays"),
+    # Two in a row are rarer than one: a lower level keeps the same budget.
+    (LearnSettings(alerts=Delays(record_run=2)), "record"),
 ]
 
 

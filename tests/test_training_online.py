@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
 import pytest
 
-from scoring.alert_settings import AlertSettings
 from scoring.alert_standing import AlertStanding
 from scoring.alerts import Alert
+from scoring.delays import Delays
 from scoring.episodes import Episodes
 from scoring.scorer import Scorer
 from scoring.standing import Standing
@@ -127,10 +128,12 @@ def test_the_excess_is_kept_for_the_sweep_without_late_records(tmp_path: Path) -
 
 
 @pytest.mark.parametrize("run", [1, 3])
-def test_settings_of_alerts_are_used(tmp_path: Path, run: int) -> None:
+def test_delays_of_the_model_are_used(tmp_path: Path, run: int) -> None:
     times_ns, values = pump_times(300, N_LEARNED), pump_values(SOURCES[0], 300, N_LEARNED)
     values[150:152, 2] += 40.0
-    online = Online(pump_model(), tmp_path, AlertSettings(record_run=run))
+    model = pump_model()
+    model = replace(model, levels=replace(model.levels, delays=Delays(record_run=run)))
+    online = Online(model, tmp_path)
     online.add(SOURCES[0], times_ns, values)
     online.finish()
     raised = [a for a in online.alerts if times_ns[150] <= a.raised_ns <= times_ns[151]]

@@ -43,6 +43,8 @@ def test_a_file_may_say_only_what_it_changes(tmp_path: Path) -> None:
         ("[budget]\nalerts_per_day = 2000\n", r"budget\.alerts_per_day = 2000: .*1000"),
         ("[judging]\nleast_share = 'half'\n", r"judging\.least_share = 'half': .*valid number"),
         ("[budget]\nalert_per_day = 1\n", r"unknown key budget\.alert_per_day; the nearest"),
+        ("[alerts]\ndeadband = 1\n", r"alerts\.deadband = 1: .*less than or equal to 0\.99"),
+        ("[alerts]\nrepeat_n = 1\n", r"unknown key alerts\.repeat_n; it belongs in service\.toml"),
         ("[budgett]\n", "unknown key budgett; the nearest known key is budget"),
         ("[qqqqq]\n", "unknown key qqqqq; known are budget"),
         ("[budget\n", "cannot be read as TOML"),

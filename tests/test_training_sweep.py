@@ -37,15 +37,15 @@ def one_by_one(
     sustained, _, _, _ = sustain(
         times_ns, excess, -1, usual, usual, NEVER.tau_s, NEVER.step_s, float(PAIRS.cap[pair])
     )
-    kept = 1.0 - SETTINGS.deadband
+    kept = 1.0 - NEVER.delays.deadband
     record, level = float(PAIRS.record[pair]), float(PAIRS.sustained[pair])
     knobs = np.zeros(kernel.N_KNOBS)
     knobs[kernel.RECORD], knobs[kernel.RECORD_OFF] = record, kept * record
     knobs[kernel.SUSTAINED] = level
     knobs[kernel.SUSTAINED_OFF] = usual + kept * (level - usual)
     knobs[kernel.HALF] = usual + 0.5 * (level - usual)
-    knobs[kernel.RUN_LENGTH] = SETTINGS.record_run
-    knobs[kernel.OFF_S] = SETTINGS.off_delay_steps * NEVER.step_s
+    knobs[kernel.RUN_LENGTH] = NEVER.delays.record_run
+    knobs[kernel.OFF_S] = NEVER.delays.off_delay_steps * NEVER.step_s
     found = np.empty((len(excess), 2), dtype=np.int64)
     n = kernel.scan(times_ns, excess, sustained, knobs, kernel.new_ints(0), found)
     n_over = 0

@@ -95,6 +95,7 @@ def learn_model(
             tau_s=settings.sustained.time_constant_steps * step_s,
             step_s=step_s,
             least_readings=max(1, round(settings.judging.least_share * len(table.instruments))),
+            delays=settings.alerts,
         )
         members = {s: one.member for s, one in learned.items()}
         # Sources without a member of their own are scored by the fleet's and take their

@@ -6,6 +6,7 @@ from pathlib import Path
 
 from pydantic import Field
 
+from scoring.delays import DELAYS, Delays
 from training.settings_file import BadSettings, Section, load_settings
 
 
@@ -33,6 +34,7 @@ class LearnSettings(Section):
     budget: AlarmBudget = AlarmBudget()
     sustained: Sustained = Sustained()
     judging: Judging = Judging()
+    alerts: Delays = DELAYS
 
 
 def load_learn_settings(path: Path | None) -> LearnSettings:

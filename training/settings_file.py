@@ -134,6 +134,9 @@ def _place(path: Path | None, kind: type[Section], loc: tuple[int | str, ...]) -
 def _nearest(key: str, kind: type[Section]) -> str:
     names = [f"{name}.{inner}" for name, table in _sections(kind) for inner in table.model_fields]
     names += list(kind.model_fields)
+    other = known.file_with(*key.split(".", 1)) if "." in key else None
+    if other is not None:
+        return f"; it belongs in {other}"
     near = difflib.get_close_matches(key, names, n=1)
     return f"; the nearest known key is {near[0]}" if near else f"; known are {', '.join(names)}"
 
