@@ -164,7 +164,8 @@ def test_the_next_night_is_held_against_the_first_and_both_are_kept(site: Path) 
     assert second.path != first.path
     # The same records and settings are the same model.
     assert second.name == first.name
-    assert f"instead of {first.name}. All 13 questions were passed." in says
+    assert f"Model {first.name} is in use as before: " in says
+    assert "gave the same one again. All 13 questions were passed." in says
     answers = {one["name"]: one for one in last_night()["answers"]}
     assert answers["held-out density"]["number"] == 0.0
     assert answers["tree"]["number"] == 0.0

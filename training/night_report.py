@@ -304,6 +304,10 @@ def _people(found: Sequence[ChannelFeedback]) -> Section:
     return Section(title, tuple(pieces))
 
 
+def _levels_data(levels: Levels) -> dict[str, Any]:
+    return {**asdict(levels), "delays": levels.delays.model_dump()}
+
+
 def night_data(night: Night) -> dict[str, Any]:
     """Return the same as plain data, for other programs and for the next night."""
     chosen, judgement, learned = night.chosen, night.judgement, night.learned
@@ -339,8 +343,8 @@ def night_data(night: Night) -> dict[str, Any]:
         curve = learned.curve
         data |= {
             "left_out_share": left_out_share(learned),
-            "levels": asdict(learned.model.levels),
-            "levels_before": asdict(night.before.levels) if night.before is not None else None,
+            "levels": _levels_data(learned.model.levels),
+            "levels_before": _levels_data(night.before.levels) if night.before else None,
             "alerts_seen": None if curve is None else int(curve.seen[curve.chosen]),
             "alerts_seen_without_left_out": None if curve is None else curve.seen_without,
             "source_days": None if curve is None else curve.source_days,
