@@ -52,14 +52,13 @@ def _quickly() -> Iterator[None]:
 
     Numba, which only asks whether scipy's linear algebra is there, would import it and all
     that it needs, where learning is installed too. What a start makes stays, so nobody
-    looks for garbage in it, then or later.
+    looks for garbage in it meanwhile.
     """
     sys.modules.setdefault("scipy.linalg", None)  # type: ignore[arg-type]
     gc.disable()
     try:
         yield
     finally:
-        gc.freeze()
         gc.enable()
 
 
