@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import asyncio
 import zlib
-from collections.abc import AsyncIterator, Mapping
+from collections.abc import AsyncIterator, Iterator, Mapping
 
 from starlette.types import Receive, Scope
 
@@ -48,19 +48,30 @@ class BodyReader:
             raise ClientGone
         if not message.get("more_body") and self._inflate is None:
             body: bytes = message.get("body", b"")
+            self._count(len(body))
             self._hold(len(body))
             return body
         pieces = [piece async for piece in self._pieces(message)]
         return b"".join(pieces)
 
-    def _hold(self, n_bytes: int) -> None:
+    def _count(self, n_bytes: int) -> None:
+        """Count bytes of the unpacked body; raises Problem over the limit."""
         self._n_bytes += n_bytes
         if self._n_bytes > self.limit_bytes:
+            key, way_out = (
+                ("stream_mb", "send the rest as another one")
+                if self.is_ndjson
+                else (
+                    "body_mb",
+                    "send fewer records at once, or stream them as application/x-ndjson",
+                )
+            )
             raise Problem(
                 "too-large",
-                f"the body is larger than limits.body_mb, {self.limit_mb:g} MB unpacked; "
-                "send fewer records at once, or stream them as application/x-ndjson",
+                f"the body is larger than limits.{key}, {self.limit_mb:g} MB unpacked; {way_out}",
             )
+
+    def _hold(self, n_bytes: int) -> None:
         memory = self.service.settings.limits.memory_mb * 1e6
         if self.service.n_body_bytes + n_bytes > memory:
             raise Problem("overload", "the bodies of other requests fill the memory for bodies")
@@ -90,6 +101,7 @@ class BodyReader:
             assert isinstance(piece, bytes)
             if self._inflate is None:
                 if piece:
+                    self._count(len(piece))
                     yield piece
             else:
                 for unpacked in self._unpacked(piece):
@@ -109,9 +121,8 @@ class BodyReader:
                 "slow-body", f"nothing more of the body came for {self._pause_s:g} s"
             ) from None
 
-    def _unpacked(self, piece: bytes) -> list[bytes]:
+    def _unpacked(self, piece: bytes) -> Iterator[bytes]:
         assert self._inflate is not None
-        found = []
         try:
             while piece:
                 if self._inflate.eof:
@@ -119,18 +130,11 @@ class BodyReader:
                     self._inflate = zlib.decompressobj(wbits=31)
                 unpacked = self._inflate.decompress(piece, _UNPACK_BYTES)
                 if unpacked:
-                    found.append(unpacked)
-                    self._n_unpacked += len(unpacked)
-                    if self._n_unpacked > self.limit_bytes:
-                        raise Problem(
-                            "too-large", f"the body unpacks to more than {self.limit_mb:g} MB"
-                        )
+                    self._count(len(unpacked))
+                    yield unpacked
                 piece = self._inflate.unconsumed_tail or self._inflate.unused_data
         except zlib.error:
             raise Problem("bad-encoding", "the body is not gzip data") from None
-        return found
-
-    _n_unpacked = 0
 
 
 def _described(scope: Scope, limit_bytes: int) -> tuple[str, zlib._Decompress | None]:

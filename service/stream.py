@@ -58,6 +58,8 @@ async def answer_lines(
             sender.cancel()
             raise
         spool.put_last(orjson.dumps({"problem": problem.as_dict()}) + b"\n")
+        # The sender ends by itself: where the body has come whole, nothing else wakes anyone.
+        spool.end()
         await _drop_rest(receive, sender)
     except BaseException:
         sender.cancel()
@@ -120,6 +122,14 @@ async def _pieces(
                 piece = coming.result()
             except StopAsyncIteration:
                 break
+            except Problem as problem:
+                # What came whole before it is answered, and the sender told from where to go on.
+                if lines:
+                    yield position, lines
+                index = position + len(lines)
+                if not index:
+                    raise
+                raise Problem(problem.kind, problem.detail, index=index) from None
             finally:
                 coming = None
             n_bytes += len(piece)

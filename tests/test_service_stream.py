@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import gzip
 import json
 import os
 import socket
@@ -107,6 +108,21 @@ def check_answers(lines: list[dict[str, Any]], source: str, n_lines: int) -> int
     assert {answer["source"] for answer in answers} == {source}
     assert [answer["time"] for answer in answers] == sorted(answer["time"] for answer in answers)
     return len(answers)
+
+
+@pytest.mark.parametrize("packed", [False, True], ids=["plain", "gzip"])
+def test_a_stream_over_its_limit_is_answered_up_to_there(tmp_path: Path, packed: bool) -> None:
+    n_lines = 20_000
+    body = lines_of("mill-lane-5", n_lines)
+    headers = NDJSON | ({"content-encoding": "gzip"} if packed else {})
+    with serving(tmp_path, "limits.stream_mb=1") as server:
+        content = gzip.compress(body) if packed else body
+        found = httpx.post(f"{server.url}/records", content=content, headers=headers)
+        *answers, last = [json.loads(line) for line in found.text.splitlines()]
+        problem = last["problem"]
+        assert (problem["type"], problem["status"]) == ("/problems/too-large", 413)
+        assert "limits.stream_mb" in problem["detail"]
+        assert 0 < problem["index"] == len(answers) == n_stored(server.url, "mill-lane-5") < n_lines
 
 
 def n_stored(url: str, source: str) -> int:
