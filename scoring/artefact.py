@@ -7,6 +7,7 @@ times, hosts and versions are not part of it. Nothing here is a pickle.
 
 from __future__ import annotations
 
+import ctypes
 import hashlib
 import io
 import json
@@ -120,14 +121,13 @@ def _publish(path: Path, text: str, packed: bytes) -> None:
                 file.flush()
                 os.fsync(file.fileno())
         aside.chmod(0o755)
-        if path.exists():
-            # A directory cannot be replaced in one step where the old one is not empty.
+        if not path.exists():
+            aside.rename(path)
+        elif not _exchange(aside, path):
             old = Path(tempfile.mkdtemp(prefix=f".{path.name}-old-", dir=path.parent))
             path.rename(old / "model")
             aside.rename(path)
             shutil.rmtree(old)
-        else:
-            aside.rename(path)
     finally:
         shutil.rmtree(aside, ignore_errors=True)
     descriptor = os.open(path.parent, os.O_RDONLY)
@@ -135,6 +135,17 @@ def _publish(path: Path, text: str, packed: bytes) -> None:
         os.fsync(descriptor)
     finally:
         os.close(descriptor)
+
+
+def _exchange(aside: Path, path: Path) -> bool:
+    """Let two directories change places in one step; False where the system cannot.
+
+    By renameat2(2) of Linux. A rename replaces no directory that holds something, and between
+    two renames whoever dies or looks finds nothing.
+    """
+    call = getattr(ctypes.CDLL(None, use_errno=True), "renameat2", None)
+    here, exchange = -100, 2  # AT_FDCWD and RENAME_EXCHANGE
+    return call is not None and not call(here, bytes(aside), here, bytes(path), exchange)
 
 
 def _all_members(model: Model) -> Iterator[Member]:

@@ -6,6 +6,7 @@ import hashlib
 import io
 import json
 import os
+import threading
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -123,6 +124,33 @@ def test_writing_over_a_model_replaces_it_and_leaves_nothing_beside(tmp_path: Pa
     assert read_model(tmp_path / "model").levels == levels
     assert [p.name for p in tmp_path.iterdir()] == ["model"]
     assert sorted(p.name for p in (tmp_path / "model").iterdir()) == ["model.json", "tables.npz"]
+
+
+@pytest.mark.parametrize("at_once", [True, False])
+def test_a_model_is_replaced_in_one_step_or_else_in_two(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, at_once: bool
+) -> None:
+    if not at_once:
+        monkeypatch.setattr("ctypes.CDLL", lambda *_names, **_more: object())
+    model, path = a_model(), tmp_path / "model"
+    write_model(model, path)
+    missing, done = [0], threading.Event()
+
+    def look() -> None:
+        while not done.is_set():
+            missing[0] += not (path / "model.json").exists()
+
+    looker = threading.Thread(target=look)
+    looker.start()
+    for k in range(60):
+        levels = replace(model.levels, record=10.0 + k)
+        write_model(replace(model, levels=levels), path)
+    done.set()
+    looker.join()
+    assert read_model(path).levels.record == 69.0
+    assert [p.name for p in tmp_path.iterdir()] == ["model"]
+    if at_once:
+        assert missing[0] == 0
 
 
 def test_a_write_that_fails_leaves_the_old_model(
