@@ -89,6 +89,13 @@ def leftovers(folder: Path) -> list[Path]:
     return [path for path in folder.glob(".*") if path.is_dir()]
 
 
+def catch_half_a_model(folder: Path) -> None:
+    """Return at a moment at which one is being written: chance alone may never meet it."""
+    end = time.monotonic() + 5
+    while not leftovers(folder) and time.monotonic() < end:
+        pass
+
+
 def check_folder(folder: Path, last_said: str, names: set[str]) -> str:
     """Everything that is kept is whole, and what was said is in use; return the name in use."""
     models = KeptModels(folder)
@@ -124,6 +131,8 @@ def kill_while_publishing(tmp_path: Path, n_kills: int, seed: int) -> None:
             victims = [publisher.kill, server.kill]
             chance.shuffle(victims)
             for kill in victims[: 1 + turn % 2]:
+                if kill == publisher.kill and not n_left:
+                    catch_half_a_model(folder)
                 kill()
                 time.sleep(chance.uniform(0.0, 0.02))
             if publisher.is_killed:
