@@ -61,6 +61,7 @@ class Front:
         self.log_all = service.settings.log.requests == "all"
         self.n_running_max = service.settings.server.n_connections
         self._n_running = 0
+        service.writer.n_requests = lambda: self._n_running
         self._prefix = secrets.token_hex(4)
         self._numbers = itertools.count(1)
 

@@ -104,15 +104,14 @@ class Sheet:
         and column, alert.
         """
         scored = self.scored
-        nats = np.round(
-            np.stack([scored.surprise, scored.excess, scored.sustained, scored.suspect_surprise]),
-            DECIMALS,
-        )
+        nats = np.array(
+            (scored.surprise, scored.excess, scored.sustained, scored.suspect_surprise)
+        ).round(DECIMALS)
         # No answer says -0.0.
         nats += 0.0
         suspects = np.maximum(scored.suspect, 0).astype(np.intp)
         readings = self.values[np.arange(len(self.sources)), suspects]
-        expected = np.stack([scored.low, scored.high, scored.best, readings])
+        expected = np.array((scored.low, scored.high, scored.best, readings))
         columns = (
             format_times(self.times_ns),
             *nats.tolist(),
