@@ -105,7 +105,7 @@ def rules_of(model: Model, member: Member, levels: Levels, settings: AlertSettin
         codes=codes,
         states=motion.states,
         neighbours=neighbours,
-        beside=_beside(model, member),
+        beside=tuple(model.beside(member.source, i) for i in range(n)),
         silent_s=float(away[n]),
         hold_s=settings.hold_steps * step_s,
         chatter_s=max(settings.chatter_window_s, 2 * settings.chatter_cycles * step_s),
@@ -130,14 +130,3 @@ def _away_limits(
     most = np.full(n + 1, settings.away_most_s)
     most[:n][~regular] = np.inf
     return np.asarray(np.maximum(np.minimum(settings.away_factor * own, most), least))
-
-
-def _beside(model: Model, member: Member) -> tuple[tuple[str, ...], ...]:
-    names = model.table.names
-    found = []
-    for i in range(len(model.table.instruments)):
-        near: dict[str, None] = {}
-        for part in member.parts:
-            near.update((names[node], None) for node in part.tree.neighbours(i))
-        found.append(tuple(near))
-    return tuple(found)

@@ -83,6 +83,18 @@ def _closed(p: Floats, borders: Floats) -> tuple[float, float]:
 
 
 @njit(cache=True, nogil=True)
+def _steps(n: float, resolution: float) -> float:
+    """Return n steps of a resolution as an instrument sends them: three of 0.1 are 0.3.
+
+    Their product is 0.30000000000000004, and a reading of 0.3 would lie outside of its interval.
+    """
+    per_unit = round(1.0 / resolution)
+    if per_unit >= 1.0 and abs(per_unit * resolution - 1.0) < 1e-9:
+        return n / per_unit
+    return n * resolution
+
+
+@njit(cache=True, nogil=True)
 def shortest_interval(p: Floats, borders: Floats, resolution: float) -> tuple[float, float, float]:
     """Return low, high and best of a belief over bins, in the channel's unit.
 
@@ -108,9 +120,9 @@ def shortest_interval(p: Floats, borders: Floats, resolution: float) -> tuple[fl
     if resolution > 0.0:
         # A hair inside, so that a border that is a multiple already stays where it is.
         if low > -np.inf:
-            low = math.floor(low / resolution + 1e-6) * resolution
+            low = _steps(math.floor(low / resolution + 1e-6), resolution)
         if high < np.inf:
-            high = math.ceil(high / resolution - 1e-6) * resolution
-        best = round(best / resolution) * resolution
+            high = _steps(math.ceil(high / resolution - 1e-6), resolution)
+        best = _steps(round(best / resolution), resolution)
         best = min(max(best, low), high)
     return low, high, best

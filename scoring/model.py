@@ -128,3 +128,23 @@ class Model:
     def derived_groups(self) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
         """Which nodes fall with each instrument (see scoring.derived.groups)."""
         return groups(self.table)
+
+    def beside(self, source: str, instrument: int) -> tuple[str, ...]:
+        """Return the names of the channels that tell what an instrument should read.
+
+        Those that share an edge with it in any part; what is derived from it tells nothing
+        without it, so in such a one's place stand its other neighbours.
+        """
+        start, nodes = self.derived_groups
+        own = {instrument, *nodes[start[instrument] : start[instrument + 1]].tolist()}
+        names, near = self.table.names, dict[str, None]()
+        for part in self.member(source).parts:
+            reached, seen = [instrument], {instrument}
+            for node in reached:
+                for other in part.tree.neighbours(node):
+                    if other in own and other not in seen:
+                        seen.add(other)
+                        reached.append(other)
+                    elif other not in own:
+                        near[names[other]] = None
+        return tuple(near)

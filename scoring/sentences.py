@@ -85,8 +85,23 @@ def scored_text(
     suspects: Sequence[Suspect],
     beside: Sequence[str],
     channels: Mapping[str, Channel],
+    stuck: Sequence[str] = (),
 ) -> str:
-    """Return the sentence of a scored alert."""
+    """Return the sentence of a scored alert. stuck: other channels known to stand still."""
+    sentence = _scored_text(source, likely, suspects, beside, channels)
+    if not stuck:
+        return sentence
+    verb, it = ("is", "it") if len(stuck) == 1 else ("are", "they")
+    return f"{sentence} {list_text(stuck)} {verb} known to be stuck: look whether {it} can be why."
+
+
+def _scored_text(
+    source: str,
+    likely: str,
+    suspects: Sequence[Suspect],
+    beside: Sequence[str],
+    channels: Mapping[str, Channel],
+) -> str:
     if not suspects:
         return f"records of {source} are odd, and no single channel stands out."
     first = suspects[0]

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from functools import lru_cache, partial
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -41,7 +41,7 @@ class ScoringEngine:
         self.episodes: Episodes | None = Episodes(self._scorer, alerts)
         self.episodes.warm()
         # Made of the model alone: a cache that leads back here would keep this from being freed.
-        self._neighbours = lru_cache(maxsize=_N_CACHED_NEIGHBOURS)(partial(_neighbours, model))
+        self._neighbours = lru_cache(maxsize=_N_CACHED_NEIGHBOURS)(model.beside)
 
     def score(
         self,
@@ -146,14 +146,6 @@ class ScoringEngine:
 def load_engine(path: Path, alerts: AlertSettings | None = None) -> ScoringEngine:
     """Return the model of a directory, ready to score; raises BadArtefact."""
     return ScoringEngine(read_model(path), alerts)
-
-
-def _neighbours(model: Model, member: str, column: int) -> tuple[str, ...]:
-    names = model.table.names
-    near: dict[str, None] = {}
-    for part in model.member(member).parts:
-        near.update((names[node], None) for node in part.tree.neighbours(column))
-    return tuple(near)
 
 
 def _figures(model: Model) -> dict[str, float]:

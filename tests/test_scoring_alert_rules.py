@@ -79,12 +79,12 @@ def test_one_record_counts_for_a_few_spreads_and_for_ten_nats_at_least() -> None
     assert rules.rows[kernel.CAP].tolist() == [15.0, 10.0, 10.0, 20.0]
 
 
-def test_neighbours_are_named_derived_ones_too() -> None:
+def test_neighbours_are_named_but_for_what_is_derived_from_the_channel() -> None:
     model = a_model()
     rules = rules_of(model, model.members["a"], LEVELS, AlertSettings())
     assert rules.beside == (
-        ("out", "head"),
-        ("in", "power", "out before"),
+        ("out",),
+        ("in", "power"),
         ("out", "pump"),
         ("power",),
     )

@@ -125,3 +125,15 @@ def test_best_is_the_median_of_what_is_believed(seed: int) -> None:
     p = np.concatenate([[0.0], rng.dirichlet(np.ones(4)), [0.0]])
     _, _, best = shortest_interval(p, borders, 0.0)
     assert below(best, p.tolist(), borders.tolist()) == pytest.approx(0.5, abs=1e-9)
+
+
+@pytest.mark.parametrize("resolution", [0.1, 0.01, 0.05, 0.25, 0.2, 0.001, 2.5, 10.0])
+def test_bounds_are_the_numbers_that_an_instrument_sends(resolution: float) -> None:
+    # As from text: what a reading of so many steps becomes on its way in.
+    readings = [float(f"{k * resolution:.6g}") for k in range(-40, 400)]
+    for k in (0, 7, 43, 250):
+        at, wide = readings[k], readings[k + 6]
+        borders = np.array([at + 0.3 * resolution, wide - 0.3 * resolution])
+        low, high, best = shortest_interval(np.array([0.01, 0.98, 0.01]), borders, resolution)
+        assert (low, high) == (at, wide)
+        assert best in readings

@@ -139,6 +139,13 @@ def test_a_stuck_suspect_is_said_to_be_stuck() -> None:
     assert text == f"{READS}, and it no longer moves: look at the flow instrument first."
 
 
+def test_another_channel_that_stands_still_is_named() -> None:
+    text = scored_text("mill-lane", INSTRUMENT, [suspect()], ["power"], CHANNELS, ["level"])
+    assert text.endswith("first. level is known to be stuck: look whether it can be why.")
+    more = scored_text("mill-lane", SEVERAL, [], [], {}, ["level", "speed"])
+    assert more.endswith("level and speed are known to be stuck: look whether they can be why.")
+
+
 def test_odd_records_without_a_suspect_have_a_sentence_too() -> None:
     assert scored_text("mill-lane", SEVERAL, [], [], {}) == (
         "records of mill-lane are odd, and no single channel stands out."
