@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 import tomllib
 from collections import Counter
+from difflib import get_close_matches
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -217,6 +218,8 @@ def parse_channels(data: dict[str, Any], place: str) -> ChannelTable:
         first = error.errors()[0]
         where = _where(data, first["loc"])
         what = str(first["msg"]).removeprefix("Value error, ")
+        if first["type"] == "extra_forbidden":
+            what = _unknown(first["loc"])
         raise BadChannelTable(place, f"{where}{what}") from None
 
 
@@ -227,6 +230,15 @@ def _where(data: dict[str, Any], loc: tuple[int | str, ...]) -> str:
         rest = ".".join(str(part) for part in loc[2:])
         return f"{loc[0]} {name!r}{', ' + rest if rest else ''}: "
     return ".".join(str(part) for part in loc) + ": " if loc else ""
+
+
+def _unknown(loc: tuple[int | str, ...]) -> str:
+    """Return what to say of a key that there is not."""
+    kinds = {"channel": Channel, "derived": Derived, "edges": EdgeSay}
+    kind = kinds.get(str(loc[0]), ChannelTable) if len(loc) > 1 else ChannelTable
+    names = list(kind.model_fields)
+    near = get_close_matches(str(loc[-1]), names, 1)
+    return "not known" + (f"; is {near[0]} meant?" if near else f"; known are {', '.join(names)}")
 
 
 def load_channels(path: Path) -> ChannelTable:
