@@ -93,6 +93,27 @@ def test_going_back_uses_the_one_published_before(tmp_path: Path) -> None:
     assert models.current() == kept[0]
 
 
+def test_going_back_passes_over_copies_of_the_one_in_use(tmp_path: Path) -> None:
+    models, kept = published(tmp_path, 2)
+    copy = models.publish(other_model(11.0), NIGHT + timedelta(days=5))
+    assert copy.name == kept[1].name
+    assert models.back() == kept[0]
+    only = KeptModels(tmp_path / "copies")
+    last = [only.publish(other_model(10.0), NIGHT) for _ in range(2)][1]
+    with pytest.raises(NoSuchModel, match="is the oldest kept model"):
+        only.back()
+    assert only.current() == last
+
+
+def test_a_prepared_model_that_is_dropped_leaves_nothing(tmp_path: Path) -> None:
+    models, kept = published(tmp_path, 1)
+    there = sorted(tmp_path.iterdir())
+    models.prepare(other_model(12.0))
+    models.drop_prepared()
+    assert sorted(tmp_path.iterdir()) == there
+    assert models.current() == kept[0]
+
+
 def test_a_model_is_named_by_the_beginning_of_its_hash_or_its_directory(tmp_path: Path) -> None:
     models, kept = published(tmp_path, 2)
     assert models.use(kept[0].name[:8]) == kept[0] == models.current()

@@ -106,8 +106,11 @@ def test_the_first_night_has_one_tree_and_says_so(night: Night) -> None:
     assert page[page.index('<div class="pair">') :].count("<svg") == 1
     assert lead(first) == "Model abc is in use, the first one. All 1 questions were passed."
     assert "No drill was run." in page
-    again = replace(first, before_name="abc")
-    assert "Model abc is in use as before: the records gave the same one again." in lead(again)
+    again = replace(first, before=night.before, before_name="abc")
+    same = "is in use as before: the records gave the same one again, so no further copy is kept."
+    assert f"Model abc {same}" in lead(again)
+    damaged = replace(first, before_name="abc")
+    assert "Model abc is in use instead of a damaged copy of it." in lead(damaged)
 
 
 def test_a_night_without_a_model_tells_what_there_was(night: Night) -> None:

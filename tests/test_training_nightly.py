@@ -154,24 +154,48 @@ def test_a_night_publishes_a_model_of_the_stored_records_and_says_what_it_did(si
 
 
 @pytest.mark.usefixtures("api")
-def test_the_next_night_is_held_against_the_first_and_both_are_kept(site: Path) -> None:
+def test_a_night_that_gives_the_model_in_use_again_keeps_no_further_copy(site: Path) -> None:
+    changed("[report]", "[models]\nkeep = 2\n[report]")
+    models = KeptModels(site / "models")
+    older = models.publish(a_model(), LAST_WEEK)
     run()
-    first = KeptModels(site / "models").current()
+    first = models.current()
     assert first is not None
-    says = run()
-    second = KeptModels(site / "models").current()
-    assert second is not None
-    assert second.path != first.path
-    # The same records and settings are the same model.
-    assert second.name == first.name
+    kept, says = models.kept(), run()
+    # The same records and settings are the same model: the way back and the witness stay.
+    assert (models.current(), models.kept(), kept) == (first, kept, (older, first))
+    assert not [p for p in (site / "models").glob(".*") if p.is_dir()]
+    assert "publishing: the same model is in use already, no further copy is kept" in says
     assert f"Model {first.name} is in use as before: " in says
-    assert "gave the same one again. All 13 questions were passed." in says
+    assert "gave the same one again, so no further copy is kept. All 13 questions" in says
+    night = last_night()
+    assert (night["verdict"], night["model"], night["before"]) == (
+        "published", first.name, first.name,
+    )  # fmt: skip
+    assert "no further copy is kept" in sorted(Path("nightly").glob("*.html"))[-1].read_text()
+    assert metrics()['oddbranch_nightly_verdict{verdict="published"}'] == 1
+    assert models.back() == older
     answers = {one["name"]: one for one in last_night()["answers"]}
     assert answers["held-out density"]["number"] == 0.0
     assert answers["tree"]["number"] == 0.0
     assert answers["left out"]["number"] == 0.0
     assert answers["spans"]["number"] == 1.0
     assert f"Under the oldest kept model, {first.name}" in answers["run-away"]["sentence"]
+
+
+@pytest.mark.usefixtures("api")
+def test_a_damaged_copy_of_the_same_model_is_replaced_by_a_whole_one(site: Path) -> None:
+    run()
+    models = KeptModels(site / "models")
+    first = models.current()
+    assert first is not None
+    (first.path / "tables.npz").write_bytes(b"short")
+    says = run()
+    current = models.current()
+    assert current is not None
+    assert current.path != first.path
+    assert read_model(current.path).name == first.name
+    assert f"Model {first.name} is in use instead of a damaged copy of it." in says
 
 
 def test_sources_and_channels_come_and_go_from_one_night_to_the_next(site: Path) -> None:

@@ -129,6 +129,10 @@ class KeptModels:
         self.switch(kept)
         return kept
 
+    def drop_prepared(self) -> None:
+        """Remove the model that was prepared: one in use already needs no further copy."""
+        shutil.rmtree(self.folder / _INCOMING)
+
     def _path(self, name: str, now: datetime) -> Path:
         """Return a directory that is not there yet, later than all that are."""
         newest = max((kept.published for kept in self.kept()), default=now - timedelta(days=1))
@@ -155,11 +159,15 @@ class KeptModels:
         return kept
 
     def back(self) -> Kept:
-        """Use the model published before the one in use; raises NoSuchModel."""
+        """Use the model published before the one in use; raises NoSuchModel.
+
+        Earlier copies of the one in use are passed over: with them nothing would change.
+        """
         current = self.current()
         if current is None:
             raise NoSuchModel(f"{self.folder}: no model is in use, so there is none before it")
-        older = self.kept()[: self.kept().index(current)]
+        kept = self.kept()
+        older = [k for k in kept[: kept.index(current)] if k.name != current.name]
         if not older:
             raise NoSuchModel(f"{self.folder}: {current.path.name} is the oldest kept model")
         return self.use(older[-1].path.name)

@@ -60,6 +60,11 @@ class Night:
     before_name: str
     seconds: float
 
+    @property
+    def is_same(self) -> bool:
+        """Whether the new model is the one in use until now, and that one is whole."""
+        return self.before is not None and self.model == self.before_name
+
 
 def night_page(night: Night) -> str:
     """Return the whole page."""
@@ -78,8 +83,10 @@ def lead(night: Night) -> str:
     """Return the verdict in a sentence or two."""
     n = len(night.judgement.answers)
     instead = f" instead of {night.before_name}" if night.before_name else ", the first one"
-    if night.before_name == night.model:
-        instead = " as before: the records gave the same one again"
+    if night.is_same:
+        instead = " as before: the records gave the same one again, so no further copy is kept"
+    elif night.before_name == night.model:
+        instead = " instead of a damaged copy of it"
     if night.verdict == PUBLISHED:
         return f"Model {night.model} is in use{instead}. All {n} questions were passed."
     against = night.judgement.refusals

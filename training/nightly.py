@@ -74,7 +74,10 @@ class Job:
 
 @dataclass(frozen=True)
 class Outcome:
-    """What came of a night. kept: the published model. page: of the report."""
+    """What came of a night. kept: the published model, or the one in use where it is the same.
+
+    page: of the report.
+    """
 
     verdict: str
     judgement: Judgement
@@ -139,9 +142,15 @@ def run_night(job: Job, now: Callable[[], datetime], tell: Tell, hands: Hands = 
             page = files.prepare(night.at, night.verdict, night_page(night), night_data(night))
         kept = None
         if prepared:
-            with stages.stage("publishing"):
-                kept = models.publish_prepared(prepared, night.at)
-                models.prune(settings.models.keep)
+            with stages.stage("publishing") as said:
+                if night.is_same:
+                    # A copy a night would push every other kept model out.
+                    models.drop_prepared()
+                    kept = in_use
+                    said.append("the same model is in use already, no further copy is kept")
+                else:
+                    kept = models.publish_prepared(prepared, night.at)
+                    models.prune(settings.models.keep)
         shown = files.show(page)
         files.prune(settings.report.keep)
         _note(job, night, models, stages, learned)
