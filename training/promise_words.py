@@ -40,8 +40,8 @@ def doubt_lines(promise: Promise) -> list[str]:
     lines = [beyond_words(p)]
     if p.held_back:
         lines.append(
-            "the limit of 1 % of the time in alert decides, not the budget: lower levels would "
-            "bring few more alerts but long ones"
+            "the limit of 1 % of the time in alert, outside of stretches that tables do not use, "
+            "decides, not the budget: lower levels would bring few more alerts but long ones"
         )
     if p.at_limit:
         lines.append(
