@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 from tests.histories import write
-from training.history.exclusions import Exclusion, excluded_by, load_exclusions
+from training.history.exclusions import Exclusion, excluded_by, load_exclusions, stray_lines
 from training.history.options import BadHistory, HistoryOptions
 
 HEAD = "source,start,end,reason\n"
@@ -46,6 +46,18 @@ def test_times_are_read_in_the_zone_of_the_history(tmp_path: Path) -> None:
 def test_nonsense_gets_one_sentence(tmp_path: Path, text: str | bytes, sentence: str) -> None:
     with pytest.raises(BadHistory, match=sentence):
         load_exclusions(write(tmp_path, text), HistoryOptions())
+
+
+def test_a_line_whose_source_has_no_record_is_told_with_the_nearest(tmp_path: Path) -> None:
+    when = "1970-01-01T00:00:01Z,1970-01-01T00:00:02Z,x"
+    path = write(tmp_path, f"{HEAD}mill-lane,{when}\n,{when}\nmill-lnae,{when}\n")
+    found = load_exclusions(path, HistoryOptions())
+    assert stray_lines(found, {"mill-lane", "quarry-rise"}) == [
+        f"{path}, line 4: no record has the source 'mill-lnae', so this line leaves nothing out; "
+        "the nearest is 'mill-lane'"
+    ]
+    # What is from no file nobody misspelt.
+    assert stray_lines([Exclusion("gone", 0, 1, "out of service")], {"mill-lane"}) == []
 
 
 def test_the_start_is_excluded_and_the_end_is_not() -> None:

@@ -93,6 +93,7 @@ def test_excluded_periods_are_left_out_of_parts_too(tmp_path: Path) -> None:
     )
     with assert_same(folder, exclude) as parts:
         assert parts.report.excluded["overhaul"] >= 7
+        assert parts.report.excluded_of.total() == parts.report.excluded.total()
 
 
 @pytest.mark.parametrize(

@@ -196,5 +196,7 @@ def test_what_a_model_says_of_itself_is_read_and_a_damaged_one_says_nothing(
 ) -> None:
     _, (kept,) = published(tmp_path, 1)
     assert kept.about() == {"n": 1}
+    assert kept.sources() == ("a",)
     (kept.path / "model.json").write_text("[]", encoding="utf-8")
     assert kept.about() == {}
+    assert kept.sources() == ()

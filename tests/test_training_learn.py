@@ -127,7 +127,8 @@ def test_options_of_the_command_are_followed(small: Plant, tmp_path: Path, model
     text = CHANNELS.replace('name = "power"', 'name = "power"\nleave_out = true')
     channels.write_text(text, encoding="utf-8")
     exclude.write_text(
-        "source,start,end,reason\nsouth,2026-01-01T00:00:00Z,2026-01-02T00:00:00Z,overhaul\n",
+        "source,start,end,reason\nsouth,2026-01-01T00:00:00Z,2026-01-02T00:00:00Z,overhaul\n"
+        "nroth,2026-01-01T00:00:00Z,2026-01-02T00:00:00Z,overhaul\n",
         encoding="utf-8",
     )
     config.write_text("[sustained]\ntime_constant_steps = 30.0\n", encoding="utf-8")
@@ -137,6 +138,12 @@ def test_options_of_the_command_are_followed(small: Plant, tmp_path: Path, model
     assert found.table.names == ("flow", "temp", "pump", "temp step")
     assert len(found.fleet.bins) == 4
     assert "excluded: 420 overhaul" in result.output
+    # A source whose records are all left out is no stray one.
+    assert result.output.count("no record has the source") == 1
+    assert (
+        f"warning: {exclude}, line 3: no record has the source 'nroth', so this line leaves "
+        "nothing out; the nearest is 'north'" in result.output
+    )
     assert sorted(found.members) == ["north"]
     assert found.levels.tau_s == 2 * model.levels.tau_s
 

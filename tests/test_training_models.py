@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from dataclasses import replace
+from datetime import UTC, datetime
 from pathlib import Path
 
 import pytest
@@ -17,6 +18,7 @@ from training.kept import BusyModels, KeptModels
 from training.models import models_command
 
 DAY_NS = 86_400 * 10**9
+NIGHT = datetime(2026, 12, 1, 2, 15, tzinfo=UTC)
 
 
 def models(folder: Path, *words: str | Path) -> str:
@@ -26,7 +28,7 @@ def models(folder: Path, *words: str | Path) -> str:
     if isinstance(result.exception, OddbranchError):
         raise result.exception
     assert result.exit_code == 0, result.output
-    return result.output
+    return result.stdout
 
 
 def a_directory(folder: Path, level: float) -> tuple[Path, str]:
@@ -90,6 +92,34 @@ def test_a_change_of_plant_is_declared_listed_and_taken_back(tmp_path: Path) -> 
     back = models(tmp_path, "since", at, "--source", "mill-lane", "--take-back")
     assert back == f"taken back: {says}"
     assert "no change" in models(tmp_path, "since")
+
+
+def test_a_change_at_a_source_that_no_kept_model_knows_is_refused(tmp_path: Path) -> None:
+    kept = KeptModels(tmp_path / "models")
+    model = a_model()
+    member = replace(model.members["a"], source="mill-lane")
+    kept.publish(replace(model, members={"mill-lane": member}), NIGHT)
+    # Any kept model may know it, not only the one in use.
+    kept.publish(model, NIGHT)
+    at, why = "2025-12-01T06:00:00Z", ("--reason", "new impeller")
+    says = "no kept model in .*models knows the source 'mill-lnae'; the nearest is 'mill-lane'"
+    with pytest.raises(BadChange, match=rf"{says}\. Nothing was declared; .* add --new-source"):
+        models(tmp_path, "since", at, "--source", "mill-lnae", *why)
+    assert "no change" in models(tmp_path, "since")
+    for source, more in (("mill-lane", ()), ("a", ()), ("", ()), ("brook-end", ("--new-source",))):
+        models(tmp_path, "since", at, "--source", source, *why, *more)
+    assert models(tmp_path, "since").count("\n") == 4
+    # What was declared before can always be taken back.
+    models(tmp_path, "since", at, "--source", "brook-end", "--take-back")
+
+
+def test_where_no_model_knows_sources_a_change_is_declared_with_a_warning(tmp_path: Path) -> None:
+    line = ["--folder", str(tmp_path), "since", "2025-12-01T06:00:00Z", "--source", "mill-lane"]
+    result = CliRunner().invoke(models_command, [*line, "--reason", "new impeller"])
+    assert result.exit_code == 0
+    assert "warning: " in result.stderr
+    assert "whether 'mill-lane' is one" in result.stderr
+    assert result.stdout.startswith("mill-lane: history counts from")
 
 
 def test_a_change_is_not_declared_while_a_night_is_at_work(tmp_path: Path) -> None:

@@ -234,7 +234,8 @@ def test_sources_and_channels_come_and_go_from_one_night_to_the_next(site: Path)
 @pytest.mark.usefixtures("api")
 def test_excluded_periods_are_kept_out_and_old_models_go(site: Path) -> None:
     Path("exclude.csv").write_text(
-        "source,start,end,reason\nmill-lane,2025-12-01T00:00:00Z,2025-12-01T01:00:00Z,cleaning\n",
+        "source,start,end,reason\nmill-lane,2025-12-01T00:00:00Z,2025-12-01T01:00:00Z,cleaning\n"
+        "mill-lnae,2025-12-01T00:00:00Z,2025-12-01T01:00:00Z,cleaning\n",
         encoding="utf-8",
     )
     more = '[learn]\nexclude = "exclude.csv"\n[models]\nkeep = 2\n[report]'
@@ -243,6 +244,11 @@ def test_excluded_periods_are_kept_out_and_old_models_go(site: Path) -> None:
     first, second = (models.publish(a_model(), LAST_WEEK) for _ in range(2))
     says = run()
     assert "60 left out of everything" in says
+    stray = "exclude.csv, line 3: no record has the source 'mill-lnae', so this line leaves nothing"
+    assert f"  warning: {stray}" in says
+    assert says.count("warning:") == 1
+    page = sorted(Path("nightly").glob("*.html"))[-1].read_text()
+    assert "no record has the source" in page
     assert last_night()["history"]["left_out"] == {"cleaning": 60}
     assert f"instead of {second.name}" in says
     assert first not in models.kept()

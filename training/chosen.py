@@ -18,7 +18,7 @@ from numpy.typing import NDArray
 from scoring.channels import ChannelTable
 from training.changes import Change, since
 from training.history.batch import HistoryBatch
-from training.history.exclusions import Exclusion
+from training.history.exclusions import Exclusion, stray_lines
 from training.history.options import HistoryOptions
 from training.history.reading import Advances, read_history
 from training.history.spool import Spool
@@ -51,6 +51,7 @@ class Chosen:
     in_alert: per source (n, 2) first and last times in ns of unlabelled alert.
     alerts: that touch the window. hours: with a record to learn from.
     n_in_alert_of: by source, records to learn from that lie in unlabelled alert.
+    stray: a sentence for each excluded period of a file whose source has no record.
     """
 
     learning: Spool
@@ -62,6 +63,7 @@ class Chosen:
     changes: tuple[Change, ...]
     hours: int
     n_in_alert_of: Counter[str]
+    stray: tuple[str, ...] = ()
 
     @property
     def n_in_alert(self) -> int:
@@ -158,12 +160,16 @@ def choose(
                     progress.advance(batch.n_rows)
             both.finish(tally)
         hours, n_in_alert_of = _look_over(both.learning, stretches)
+        # One that sent nothing lately is no slip of the pen.
+        sources = set(store.sources())
+        for spool in (both.learning, both.held):
+            sources |= {*spool.report.n_records, *spool.report.excluded_of}
     except BaseException:
         both.close()
         raise
     return Chosen(
         both.learning, both.held, window, cut_ns, stretches, alerts, wanted.changes, hours,
-        n_in_alert_of,
+        n_in_alert_of, tuple(stray_lines(wanted.exclusions, sources)),
     )  # fmt: skip
 
 

@@ -62,6 +62,14 @@ class Kept:
         except (OSError, ValueError, KeyError, TypeError):
             return {}
 
+    def sources(self) -> tuple[str, ...]:
+        """Return the sources with a member of their own; () if it is damaged."""
+        try:
+            data = json.loads((self.path / "model.json").read_text(encoding="utf-8"))
+            return tuple(str(one["source"]) for one in data["members"] if one["source"])
+        except (OSError, ValueError, KeyError, TypeError):
+            return ()
+
 
 class KeptModels:
     """The kept models of one folder, made when the first is published."""

@@ -7,7 +7,6 @@ that makes no sense is refused with the line's number and the way out.
 from __future__ import annotations
 
 import csv
-import difflib
 import itertools
 import math
 from collections.abc import Sequence
@@ -23,6 +22,7 @@ from training.history.files import open_text_bytes
 from training.history.options import HistoryOptions
 from training.history.tally import NO_OFFSET
 from training.history.times import TimeReader
+from training.near import near_words
 
 HEADING: Final = ["source", "start", "end", "kind", "size", "channels"]
 _BETWEEN_CHANNELS: Final = "|"
@@ -95,7 +95,7 @@ def _known(
     for name in concerned:
         if name not in channels:
             raise BadIncidents(
-                place, f"channel {name!r} is not in the model{_near(name, channels)}"
+                place, f"channel {name!r} is not in the model{near_words(name, channels)}"
             )
     return Known(source, start_ns, end_ns, kind, _size(place, size), concerned, line)
 
@@ -136,13 +136,5 @@ def refuse_unknown_sources(path: Path, known: Sequence[Known], sources: Sequence
         if one.source not in sources:
             raise BadIncidents(
                 f"{path}, line {one.line}",
-                f"source {one.source!r} has no record here{_near(one.source, sources)}",
+                f"source {one.source!r} has no record here{near_words(one.source, sources)}",
             )
-
-
-def _near(name: str, names: Sequence[str]) -> str:
-    near = difflib.get_close_matches(name, names, n=1)
-    if near:
-        return f"; the nearest is {near[0]!r}"
-    shown = ", ".join(repr(n) for n in names[:8])
-    return f"; there are {shown}" + (f" and {len(names) - 8} more" if len(names) > 8 else "")

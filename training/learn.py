@@ -249,6 +249,7 @@ def history_lines(spool: Spool) -> list[str]:
         lines.append(f"  rejected: {n} {reason} (first: {report.first[reason]})")
     for reason, n in report.excluded.most_common():
         lines.append(f"  excluded: {n} {reason}")
+    lines += [f"  warning: {line}" for line in report.stray]
     for what, counter in (
         ("outside the span", report.outside_span),
         ("unknown word", report.unknown_words),

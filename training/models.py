@@ -10,6 +10,7 @@ import click
 
 from scoring.artefact import read_model
 from training.changes import (
+    BadChange,
     change_line,
     declare,
     load_changes,
@@ -18,6 +19,7 @@ from training.changes import (
 )
 from training.channel_toml import text_table
 from training.kept import Kept, KeptModels
+from training.near import near_words
 from training.report.readings import day_text
 
 # The judge's numbers that are listed, by question, with their headings.
@@ -112,13 +114,21 @@ def back_command(models: KeptModels) -> None:
 @models_command.command("since")
 @click.argument("time", required=False, metavar="[TIME]")
 @click.option("--source", default="", metavar="NAME", help="One source.  [default: all]")
+@click.option(
+    "--new-source", is_flag=True, help="NAME is right, though no kept model knows it yet."
+)
 @click.option("--reason", default="", metavar="TEXT", help="What was changed.")
 @click.option(
     "--take-back", "is_wrong", is_flag=True, help="The change at TIME was none after all."
 )
 @click.pass_obj
 def since_command(
-    models: KeptModels, time: str | None, source: str, reason: str, is_wrong: bool
+    models: KeptModels,
+    time: str | None,
+    source: str,
+    new_source: bool,
+    reason: str,
+    is_wrong: bool,
 ) -> None:
     """Declare a real change of plant: history counts from TIME on. Without TIME: list them.
 
@@ -135,5 +145,24 @@ def since_command(
         if is_wrong:
             change = take_back(models.folder, source, since_ns)
         else:
+            if source and not new_source:
+                _refuse_unknown(models, source)
             change = declare(models.folder, source, since_ns, reason, datetime.now(UTC))
     click.echo(f"{'taken back: ' if is_wrong else ''}{change_line(change)}")
+
+
+def _refuse_unknown(models: KeptModels, source: str) -> None:
+    """Raise BadChange for a source that no kept model knows; warn where none can tell."""
+    known = {name for kept in models.kept() for name in kept.sources()}
+    if not known:
+        click.echo(
+            f"warning: {models.folder} holds no model that knows sources, so nobody can tell "
+            f"whether {source!r} is one; `oddbranch models since` shows what is declared",
+            err=True,
+        )
+    elif source not in known:
+        raise BadChange(
+            f"no kept model in {models.folder} knows the source {source!r}"
+            f"{near_words(source, sorted(known))}. Nothing was declared; if the name is right and "
+            "the source only too new for a member of its own, add --new-source"
+        )

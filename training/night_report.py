@@ -140,6 +140,7 @@ def _history(night: Night) -> Section:
         pieces.append(table(("why", "records"), reasons))
     else:
         pieces.append(paragraph("No record was left out altogether."))
+    pieces += [warning(line) for line in chosen.stray]
     pieces += [warning(unlabelled_words(chosen, s)) for s in chosen.unlabelled_for_long]
     stretches = _stretches(night)
     if stretches:

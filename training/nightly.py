@@ -112,6 +112,8 @@ def run_night(job: Job, now: Callable[[], datetime], tell: Tell, hands: Hands = 
     ):
         in_use = models.current()
         before = _read(in_use, tell)
+        for line in chosen.stray:
+            tell(f"  warning: {line}")
         first = enough(chosen, settings.history)
         learned = None
         if all(one.passed for one in first):

@@ -215,6 +215,10 @@ class Store:
                     high = middle
         return low
 
+    def sources(self) -> tuple[str, ...]:
+        """Return every source that ever sent a record."""
+        return tuple(self._sources().values())
+
     def _sources(self) -> dict[int, str]:
         with self.connect() as connection:
             rows = connection.execute(sa.text("SELECT id, name FROM source ORDER BY id")).all()

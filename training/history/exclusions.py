@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 import csv
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Collection, Sequence
+from dataclasses import dataclass, field
 from pathlib import Path
 
 import numpy as np
@@ -15,6 +15,7 @@ from training.history.files import open_text_bytes
 from training.history.options import BadHistory, HistoryOptions
 from training.history.tally import NO_OFFSET
 from training.history.times import TimeReader
+from training.near import near_words
 
 HEADING = ["source", "start", "end", "reason"]
 
@@ -23,13 +24,15 @@ HEADING = ["source", "start", "end", "reason"]
 class Exclusion:
     """A period to leave out: from start up to, not including, end.
 
-    source: "" for every source. Times in UTC nanoseconds since 1970.
+    source: "" for every source. Times in UTC nanoseconds since 1970. place: file and line, ""
+    where it is from no file.
     """
 
     source: str
     start_ns: int
     end_ns: int
     reason: str
+    place: str = field(default="", compare=False)
 
 
 def load_exclusions(path: Path, options: HistoryOptions) -> tuple[Exclusion, ...]:
@@ -59,7 +62,7 @@ def _exclusion(place: str, row: list[str], options: HistoryOptions) -> Exclusion
     start_ns, end_ns = (_time(place, text, options) for text in (start, end))
     if not start_ns < end_ns:
         raise BadHistory(place, f"start {start} is not before end {end}")
-    return Exclusion(source, start_ns, end_ns, reason)
+    return Exclusion(source, start_ns, end_ns, reason, place)
 
 
 def _time(place: str, text: str, options: HistoryOptions) -> int:
@@ -68,6 +71,19 @@ def _time(place: str, text: str, options: HistoryOptions) -> int:
         way = "; add one, or say --zone" if bad[0].reason == NO_OFFSET else ""
         raise BadHistory(place, f"{bad[0].reason}: {text!r}{way}")
     return int(times[0])
+
+
+def stray_lines(exclusions: Sequence[Exclusion], sources: Collection[str]) -> list[str]:
+    """Return a sentence for each line of a file whose source has no record.
+
+    sources: those with a record, left out or not.
+    """
+    return [
+        f"{one.place}: no record has the source {one.source!r}, so this line leaves nothing out"
+        f"{near_words(one.source, sorted(sources))}"
+        for one in exclusions
+        if one.place and one.source and one.source not in sources
+    ]
 
 
 def excluded_by(

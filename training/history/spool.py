@@ -22,7 +22,7 @@ from numpy.typing import NDArray
 
 from scoring.channels import ChannelTable
 from training.history.batch import HistoryBatch
-from training.history.exclusions import Exclusion, excluded_by, load_exclusions
+from training.history.exclusions import Exclusion, excluded_by, load_exclusions, stray_lines
 from training.history.files import find_files
 from training.history.options import BadHistory, HistoryOptions
 from training.history.reading import Advances, read_history
@@ -51,7 +51,8 @@ class HistoryReport:
     n_rows: rows met. rejected: rows not used by reason, with the first of each in words.
     outside_span, unknown_words, bad_quality: readings that count as missing, by channel
         (a word that the table does not list is scored as such, not as missing).
-    excluded: rows left out on request, by the reason given.
+    excluded: rows left out on request, by the reason given; excluded_of: by source.
+    stray: a sentence for each excluded period whose source has no record.
     n_records: rows kept, by source. first_ns, last_ns: of the rows kept, None if none.
     """
 
@@ -62,6 +63,8 @@ class HistoryReport:
     unknown_words: Counter[str] = field(default_factory=Counter)
     bad_quality: Counter[str] = field(default_factory=Counter)
     excluded: Counter[str] = field(default_factory=Counter)
+    excluded_of: Counter[str] = field(default_factory=Counter)
+    stray: list[str] = field(default_factory=list)
     n_records: dict[str, int] = field(default_factory=dict)
     first_ns: int | None = None
     last_ns: int | None = None
@@ -164,6 +167,8 @@ class Spool:
             number = excluded_by(exclusions, source, batch.times_ns[part])
             for i, n in zip(*np.unique(number[number >= 0], return_counts=True), strict=True):
                 self.report.excluded[exclusions[i].reason] += int(n)
+            if (number >= 0).any():
+                self.report.excluded_of[source] += int((number >= 0).sum())
             part = part[number < 0]
             if not len(part):
                 return
@@ -317,6 +322,8 @@ def spool_history(
         if not spool.sources:
             why = "every row is in an excluded period" if tally.n_rows else "a heading and no rows"
             raise BadHistory(place, f"no record is left to use: {why}")
+        report = spool.report
+        report.stray = stray_lines(exclusions, {*report.n_records, *report.excluded_of})
     except BaseException:
         spool.close()
         raise

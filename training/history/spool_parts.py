@@ -53,6 +53,7 @@ class Part:
     tally: Tally
     pieces: dict[str, Piece] = field(default_factory=dict)
     excluded: Counter[str] = field(default_factory=Counter)
+    excluded_of: Counter[str] = field(default_factory=Counter)
     in_order: bool = True
     bad: tuple[str, str] | None = None
 
@@ -115,6 +116,7 @@ def _read_parts(
     for part in parts:
         tally.take(part.tally)
         spool.report.excluded.update(part.excluded)
+        spool.report.excluded_of.update(part.excluded_of)
     joined = hands.each(partial(_join, reading.folder), list(pieces.values()))
     for (source, of), path in zip(pieces.items(), joined, strict=True):
         spool.adopt(source, path, sum(piece.n for piece in of), of[0].first_ns, of[-1].last_ns)
@@ -138,6 +140,7 @@ def _read(reading: Reading, file: Path) -> Part:
             part.bad = (error.place, error.what)
             return part
         part.excluded = spool.report.excluded
+        part.excluded_of = spool.report.excluded_of
         for source in spool.sources:
             path, in_order = spool.file_of(source)
             part.in_order &= in_order
