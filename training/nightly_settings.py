@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 from pathlib import Path
+from typing import Self
 
-from pydantic import Field
+from pydantic import Field, model_validator
 
 from training.history.flags import history_options
 from training.history.options import HistoryOptions
@@ -117,6 +118,18 @@ class NightlySettings(Section):
     judge: JudgeLimits = JudgeLimits()
     models: ModelsKept = ModelsKept()
     report: ReportWanted = ReportWanted()
+
+    @model_validator(mode="after")
+    def _leaves_days_to_learn_from(self) -> Self:
+        # Files beside the store are read whole, and may be all that is learned from.
+        if self.history.days <= self.judge.days and not self.files.paths:
+            raise ValueError(
+                f"history.days = {self.history.days:g} is not more than judge.days = "
+                f"{self.judge.days:g}: the judge's days are the newest of history.days and never "
+                "learned from, so nothing would be left to learn; make history.days longer, or "
+                "judge.days shorter"
+            )
+        return self
 
 
 def load_nightly_settings(path: Path | None) -> NightlySettings:

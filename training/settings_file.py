@@ -49,6 +49,10 @@ def load_settings(path: Path | None, kind: type[S]) -> S:
         return kind.model_validate(found)
     except ValidationError as error:
         first = error.errors()[0]
+        if not first["loc"]:
+            # Keys that do not go together; the sentence names them and their values.
+            where = "settings" if path is None else str(path)
+            raise BadSettings(where, str(first["msg"]).removeprefix("Value error, ")) from None
         key = ".".join(str(part) for part in first["loc"])
         place = _place(path, kind, first["loc"])
         if first["type"] == "extra_forbidden":
