@@ -58,8 +58,15 @@ def test_prometheus_reads_it(verdict: str) -> None:
 
 def test_the_file_is_replaced_whole_and_can_be_read_by_the_exporter(tmp_path: Path) -> None:
     path = tmp_path / "collector" / "oddbranch.prom"
+    path.parent.mkdir()
     write_metrics(path, "one 1\n")
     write_metrics(path, "two 2\n")
     assert path.read_text(encoding="utf-8") == "two 2\n"
     assert path.stat().st_mode & 0o777 == 0o644
     assert list(path.parent.iterdir()) == [path]
+
+
+def test_no_folder_is_made_for_the_file(tmp_path: Path) -> None:
+    with pytest.raises(FileNotFoundError):
+        write_metrics(tmp_path / "colector" / "oddbranch.prom", "one 1\n")
+    assert not list(tmp_path.iterdir())

@@ -368,6 +368,23 @@ def test_a_job_killed_between_rename_and_switch_leaves_the_old_model_in_use(site
     assert not list(Path("nightly").glob(".night-*"))
 
 
+@pytest.mark.parametrize("there", ["", "a file"])
+def test_numbers_for_a_folder_that_is_not_there_fail_the_night_before_it_begins(
+    site: Path, monkeypatch: pytest.MonkeyPatch, there: str
+) -> None:
+    if there:
+        (site / "colector").write_text(there, encoding="utf-8")
+    begun: list[object] = []
+    monkeypatch.setattr(nightly, "run_night", lambda *words: begun.append(words))
+    changed('"night.prom"', '"colector/night.prom"')
+    says = r'nightly.toml: report.metrics = "colector/night.prom": there is no folder colector; '
+    with pytest.raises(Failed, match=says + "name a file .* or leave report.metrics empty") as bad:
+        run()
+    assert bad.value.exit_code == 3
+    assert not begun
+    assert not (site / "colector").is_dir()
+
+
 def test_a_missing_store_table_or_setting_is_a_failure_that_names_it(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -71,8 +71,10 @@ def _lines(metrics: Iterable[Metric]) -> Iterable[str]:
 
 
 def write_metrics(path: Path, text: str) -> None:
-    """Replace the file in one step, readable for the exporter whatever the umask."""
-    path.parent.mkdir(parents=True, exist_ok=True)
+    """Replace the file in one step, readable for the exporter whatever the umask.
+
+    Its folder must be there: one that is made would be one that no exporter reads.
+    """
     aside = path.with_name(f".{path.name}.{os.getpid()}")
     aside.write_text(text, encoding="utf-8")
     aside.chmod(0o644)

@@ -44,6 +44,7 @@ from training.night_report import Night, lead, night_data, night_page, unlabelle
 from training.nightly_settings import NightlySettings, load_nightly_settings
 from training.progress import Progress
 from training.settings import LearnSettings, load_learn_settings
+from training.settings_file import BadSettings
 from training.stages import Stages
 from training.stored import Store
 
@@ -89,6 +90,7 @@ def read_job(config: Path | None) -> Job:
     """Return the job that a settings file describes; raises what names the wrong file."""
     settings = load_nightly_settings(config)
     wanted = settings.learn
+    _refuse_without_folder(config, settings.report.metrics)
     exclude = Path(wanted.exclude) if wanted.exclude else None
     return Job(
         settings,
@@ -96,6 +98,17 @@ def read_job(config: Path | None) -> Job:
         load_learn_settings(Path(wanted.settings) if wanted.settings else None),
         load_exclusions(exclude, settings.files.options()) if exclude else (),
     )
+
+
+def _refuse_without_folder(config: Path | None, metrics: str) -> None:
+    folder = Path(metrics).parent
+    if metrics and not folder.is_dir():
+        raise BadSettings(
+            "settings" if config is None else str(config),
+            f'report.metrics = "{metrics}": there is no folder {folder}; name a file in the folder '
+            "that the node exporter's text-file collector reads, make that folder first, or leave "
+            "report.metrics empty",
+        )
 
 
 def run_night(job: Job, now: Callable[[], datetime], tell: Tell, hands: Hands = HERE) -> Outcome:
