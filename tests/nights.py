@@ -64,6 +64,7 @@ def a_case(
     held: dict[str, Floats] | None = None,
     changes: tuple[Change, ...] = (),
     before: float | None = None,
+    learning: dict[str, Floats] | None = None,
     new: Model | None = None,
     **limits: Any,
 ) -> Case:
@@ -71,8 +72,10 @@ def a_case(
     model = new or known_model()
     if held is None:
         held = {source: pump_values(source, N_HELD, N_LEARNED) for source in SOURCES}
+    if learning is None:
+        learning = {source: pump_values(source, N_LEARNED) for source in SOURCES}
     chosen = Chosen(
-        learning=spool_from({s: pump_values(s, N_LEARNED) for s in SOURCES}, 0),
+        learning=spool_from(learning, 0),
         held=spool_from(held, N_LEARNED),
         window=Window(START_NS, CUT_NS + N_HELD * STEP_NS),
         cut_ns=CUT_NS,

@@ -9,6 +9,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from scoring.alerts import time_text
 from scoring.channels import ChannelTable
 from scoring.model import Model
 from tests.nights import CUT_NS, LIMITS, N_HELD, Floats, a_case, known_model
@@ -84,6 +85,36 @@ def test_a_model_that_lost_a_source_is_refused(tmp_path: Path) -> None:
     assert "known sources" in [one.name for one in found.refusals]
     assert by_name["known sources"].number == 0.5
     assert B in by_name["known sources"].sentence
+
+
+def test_a_source_that_a_declared_change_left_without_its_member_is_told_and_refuses_nothing(
+    tmp_path: Path,
+) -> None:
+    model = known_model()
+    new = replace(model, members={A: model.members[A]})
+    change_ns = CUT_NS - 149 * STEP_NS
+    changes = (Change(B, change_ns, "new impeller", NOW_NS),)
+
+    def known(n: int, *said: Change) -> Answer:
+        learning = {A: pump_values(A, N_LEARNED), B: pump_values(B, n)}
+        case = a_case(
+            tmp_path, in_use=model, witnesses=[model], new=new, changes=said, learning=learning
+        )
+        return answers(case)[1]["known sources"]
+
+    told = known(150, *changes)
+    assert (told.passed, told.number) == (True, 1.0)
+    assert told.sentence.startswith("1 of 1 sources with a member of their own keep one; not")
+    # Two hundred minutes of its own after the change, and the judge's days after them.
+    at, enough = (time_text(change_ns + k * STEP_NS) for k in (0, 200 + N_HELD))
+    assert f"{B} (history counts from {at} on, new impeller: 150 of 200 records" in told.sentence
+    assert f"enough from {enough} on at the earliest)" in told.sentence
+    assert "for want of quiet records" not in told.sentence
+    # With records enough since, or a change that the model in use knows, it is lost as ever.
+    for n, said in ((200, changes), (150, ()), (150, (replace(changes[0], since_ns=START_NS),))):
+        lost = known(n, *said)
+        assert (lost.passed, lost.number) == (False, 0.5)
+        assert f"{B} would be scored by the fleet's, for want of quiet" in lost.sentence
 
 
 def test_a_model_that_knows_the_days_less_well_is_refused(tmp_path: Path) -> None:

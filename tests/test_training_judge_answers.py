@@ -8,6 +8,7 @@ import pytest
 
 from scoring.channels import Channel
 from training.judge_answers import (
+    Anew,
     alerts,
     at_least,
     covered,
@@ -49,6 +50,17 @@ def test_sources_that_sent_nothing_do_not_count_as_lost() -> None:
     assert (lost.passed, lost.number) == (False, 0.5)
     assert "b would be scored by the fleet's" in lost.sentence
     assert known_sources([], [], [], 0.9, ["a"]).passed
+
+
+def test_sources_after_a_declared_change_are_told_and_others_still_count() -> None:
+    anew = [Anew(name, 0, "new meter", 12, 200, 3600 * 10**9) for name in "vwxyz"]
+    answer = known_sources(["a"], ["b"], [], 0.9, [], anew)
+    assert (answer.passed, answer.number) == (False, 0.5)
+    assert (
+        "v (history counts from 1970-01-01T00:00:00Z on, new meter: 12 of 200 records needed to "
+        "learn from, enough from 1970-01-01T01:00:00Z on at the earliest), w (" in answer.sentence
+    )
+    assert answer.sentence.endswith(" and 2 more. At least 90% must keep theirs.")
 
 
 def test_the_least_covered_channel_is_named() -> None:

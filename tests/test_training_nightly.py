@@ -39,6 +39,7 @@ from training import nightly
 from training.hands import Hands, Here
 from training.history.options import BadHistory
 from training.kept import KeptModels
+from training.models import models_command
 from training.night_files import NightFiles
 from training.nightly import Failed, Refused, nightly_command
 
@@ -196,6 +197,23 @@ def test_a_damaged_copy_of_the_same_model_is_replaced_by_a_whole_one(site: Path)
     assert current.path != first.path
     assert read_model(current.path).name == first.name
     assert f"Model {first.name} is in use instead of a damaged copy of it." in says
+
+
+@pytest.mark.usefixtures("api")
+def test_a_change_within_the_judges_days_leaves_the_source_to_the_fleet_and_is_published(
+    site: Path,
+) -> None:
+    run()
+    words = ["since", "2025-12-01T03:30:00Z", "--source", "mill-lane", "--reason", "new impeller"]
+    assert CliRunner().invoke(models_command, words).exit_code == 0
+    says = run()
+    answers = {one["name"]: one for one in last_night()["answers"]}
+    assert answers["known sources"]["passed"], says
+    assert last_night()["verdict"] == "published", says
+    assert "mill-lane (history counts from 2025-12-01T03:30:00Z on, new impeller: 0 of 200" in says
+    assert set(read_model(site / "models" / "current").members) == {"quarry-rise"}
+    # It has none to lose the night after.
+    assert "mill-lane (history" not in run()
 
 
 def test_sources_and_channels_come_and_go_from_one_night_to_the_next(site: Path) -> None:

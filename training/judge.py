@@ -231,13 +231,40 @@ def _known_sources(case: Case) -> Answer:
     before = set(case.in_use.members) if case.in_use is not None else set()
     now = set(case.new.members)
     seen = {*case.chosen.learning.sources, *case.chosen.held.sources}
+    anew = [one for source in sorted(before - now) if (one := _anew(case, source)) is not None]
+    before -= {one.source for one in anew}
     return answers.known_sources(
         sorted(before & now),
         sorted((before - now) & seen),
         sorted(before - now - seen),
         case.limits.least_known_sources,
         sorted(now - before),
+        anew,
     )
+
+
+def _anew(case: Case, source: str) -> answers.Anew | None:
+    """Return what is to be said of a source that lost its member to a declared change alone.
+
+    None where that is not why: no change since what the model in use learned, one before
+    the window, or records enough since, which then are not quiet.
+    """
+    change, chosen = since(case.changes, source), case.chosen
+    n = chosen.learning.report.n_records.get(source, 0)
+    if (
+        change is None
+        or case.in_use is None
+        or is_after(case.in_use, source, case.changes)
+        or change.since_ns <= chosen.window.since_ns
+        or n >= LEAST_OWN_RECORDS
+    ):
+        return None
+    held_ns = chosen.window.until_ns - chosen.cut_ns
+    learned_ns = round(LEAST_OWN_RECORDS * case.new.levels.step_s * 1e9)
+    return answers.Anew(
+        source, change.since_ns, change.reason, n, LEAST_OWN_RECORDS,
+        change.since_ns + learned_ns + held_ns,
+    )  # fmt: skip
 
 
 def _readings(case: Case, old: Model, alike: Sequence[str]) -> Answer:

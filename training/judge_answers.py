@@ -8,6 +8,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from dataclasses import dataclass
 
+from scoring.alerts import time_text
 from scoring.channels import Channel
 from training.judge_cover import Covered, TreeChange
 from training.judge_density import Compared
@@ -42,17 +43,55 @@ def at_least(name: str, number: float, limit: float, what: str) -> Answer:
     return Answer(name, number, limit, passed, sentence)
 
 
-def known_sources(kept: Sequence[str], lost: Sequence[str], gone: Sequence[str], limit: float,
-                  came: Sequence[str]) -> Answer:  # fmt: skip
+@dataclass(frozen=True, slots=True)
+class Anew:
+    """A source whose history the site declared to begin anew, with too few records since.
+
+    n: records to learn from since then. least: needed for a member of its own. enough_ns:
+    when there can be so many at the earliest, the judge's days behind them.
+    """
+
+    source: str
+    since_ns: int
+    reason: str
+    n: int
+    least: int
+    enough_ns: int
+
+    @property
+    def words(self) -> str:
+        """What to say of it."""
+        return (
+            f"{self.source} (history counts from {time_text(self.since_ns)} on, {self.reason}: "
+            f"{self.n} of {self.least} records needed to learn from, enough from "
+            f"{time_text(self.enough_ns)} on at the earliest)"
+        )
+
+
+def known_sources(
+    kept: Sequence[str],
+    lost: Sequence[str],
+    gone: Sequence[str],
+    limit: float,
+    came: Sequence[str],
+    anew: Sequence[Anew] = (),
+) -> Answer:
     """Return whether sources with a member of their own still have one.
 
     gone: sources that sent nothing in the window, which do not count. came: new ones.
+    anew: those that a declared change leaves without one, which do not count either: it is
+    the site's own word that what was known of them holds no longer.
     """
     n = len(kept) + len(lost)
     share = len(kept) / n if n else 1.0
     said = f"{len(kept)} of {n} sources with a member of their own keep one"
     if lost:
         said += f"; {listed(lost)} would be scored by the fleet's, for want of quiet records"
+    if anew:
+        said += (
+            f"; not counted, and scored by the fleet's meanwhile, after a declared change: "
+            f"{listed([one.words for one in anew])}"
+        )
     if came:
         said += f"; new with a member: {listed(came)}"
     if gone:
