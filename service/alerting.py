@@ -6,8 +6,9 @@ the source's row, and its events, kept as rows of alerts and actions.
 
 from __future__ import annotations
 
+from collections import Counter
 from collections.abc import Callable, Sequence
-from dataclasses import replace
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import orjson
@@ -16,7 +17,7 @@ import sqlalchemy as sa
 from scoring.alert_actions import ON_ALERTS, Action, BadAction, act_on_cleared, take_action
 from scoring.alert_settings import AlertSettings
 from scoring.alert_standing import AlertStanding, BadAlertStanding
-from scoring.alerts import CLEARED, SCORED, Alert, Event, time_text
+from scoring.alerts import CLEARED, RAISED, SCORED, SILENT, Alert, Event, time_text
 from scoring.flood import BadFlood, Flood, gather
 from service.engine import Engine
 from service.logs import log_event
@@ -33,6 +34,20 @@ _KEPT = ("out_of_service", "back_in_service")
 N_TICKED = 500
 _FLOOD = ("flood_started", "flood_ended")
 _DAY_NS = 86_400 * 1_000_000_000
+# Kinds that rules ask of each source apart, from numbers of records and not of alerts.
+ASKED_KINDS = (SCORED, SILENT)
+
+
+@dataclass(frozen=True, slots=True)
+class Quiet:
+    """What calls nobody now.
+
+    sources: (source, kind of ASKED_KINDS) out of service, or with that kind shelved.
+    alerts: raised alerts that are shelved or damped, by kind.
+    """
+
+    sources: set[tuple[str, str]] = field(default_factory=set)
+    alerts: Counter[str] = field(default_factory=Counter)
 
 
 class Keeper:
@@ -78,6 +93,23 @@ class Keeper:
             after, _ = episodes.tick(state.name, standing, now_ns, self.listening_ns)
             if after is not standing:
                 found.append(state.name)
+        return found
+
+    @staticmethod
+    def quiet(database: Database, now_ns: int) -> Quiet:
+        """Return what calls nobody now, over all sources."""
+        found = Quiet()
+        for state in database.alert_standings():
+            standing = standing_of(state)
+            if standing is None:
+                continue
+            found.alerts.update(
+                one.kind for one in standing.open if one.state == RAISED and one.quiet
+            )
+            if any(period.covers(now_ns) for period in standing.out_of_service):
+                found.sources.update((state.name, kind) for kind in ASKED_KINDS)
+            shelved = {one.kind for one in standing.shelves if now_ns < one.until_ns}
+            found.sources.update((state.name, kind) for kind in ASKED_KINDS if kind in shelved)
         return found
 
     def tick(self, group: Group, engine: Engine, names: Sequence[str], now_ns: int) -> int:

@@ -22,6 +22,8 @@ from prometheus_client.core import (
 )
 from prometheus_client.registry import CollectorRegistry
 
+from scoring.alerts import KINDS
+from service.alerting import ASKED_KINDS, Quiet
 from service.engine import ALERT_WORDS, Engine
 from service.pipeline import Job
 from service.sheet import CONFLICT, KNOWN, NO_ROOM, STORED, Sheet
@@ -118,6 +120,7 @@ class Metrics:
         self.gauges: Callable[[], Mapping[str, float]] = dict
         self.engine: Callable[[], Engine | None] = lambda: None
         self.alerts: Callable[[], Mapping[tuple[str, str], int]] = dict
+        self.quiet: Callable[[], Quiet] = Quiet
 
     def request_done(self, route: str, method: str, status: int, seconds: float) -> None:
         """Count one answered request; called on the loop."""
@@ -221,9 +224,11 @@ class _Collector:
     def collect(self) -> Iterator[Metric]:
         """Yield every family."""
         m = self.metrics
+        quiet = m.quiet()
         yield from self._records(m)
+        yield from self._alerts(m, quiet)
         yield from self._times(m)
-        yield from self._sources(m)
+        yield from self._sources(m, quiet)
         yield from self._model(m)
         for name, value in m.gauges().items():
             yield GaugeMetricFamily(f"oddbranch_{name}", _GAUGE_HELP[name], value=value)
@@ -252,12 +257,23 @@ class _Collector:
             "batch_records", "Items in a body or a piece of a stream.", m.batch_records
         )
         yield _histogram("group_records", "Records stored by one commit.", m.group_records)
+
+    @staticmethod
+    def _alerts(m: Metrics, quiet: Quiet) -> Iterator[Metric]:
         alerts = GaugeMetricFamily(
             "oddbranch_alerts", "Alerts by state and kind.", labels=["state", "kind"]
         )
         for (state, kind), n_alerts in sorted(m.alerts().items()):
             alerts.add_metric([state, kind], n_alerts)
         yield alerts
+        hushed = GaugeMetricFamily(
+            "oddbranch_alerts_quiet",
+            "Raised alerts that call nobody, shelved or damped, by kind.",
+            labels=["kind"],
+        )
+        for kind in KINDS:
+            hushed.add_metric([kind], quiet.alerts[kind])
+        yield hushed
 
     @staticmethod
     def _times(m: Metrics) -> Iterator[Metric]:
@@ -281,7 +297,7 @@ class _Collector:
         yield _counter("model_reloads", "Models picked up or refused.", "outcome", m.reloads)
 
     @staticmethod
-    def _sources(m: Metrics) -> Iterator[Metric]:
+    def _sources(m: Metrics, quiet: Quiet) -> Iterator[Metric]:
         over = CounterMetricFamily(
             "oddbranch_source_records_over_level", "Records over a level.", labels=["source"]
         )
@@ -293,10 +309,17 @@ class _Collector:
         sustained = GaugeMetricFamily(
             "oddbranch_source_sustained_nats", "Sustained excess.", labels=["source"]
         )
+        hushed = GaugeMetricFamily(
+            "oddbranch_source_quiet",
+            "1 while the source is out of service or its alerts of the kind are shelved.",
+            labels=["source", "kind"],
+        )
         tallies = dict(m.sources)
         if m.per_source and len(tallies) <= m.n_sources_max:
             for name, tally in tallies.items():
                 over.add_metric([name], tally.n_over_level)
+                for kind in ASKED_KINDS:
+                    hushed.add_metric([name, kind], float((name, kind) in quiet.sources))
                 if tally.last_ns:
                     last.add_metric([name], tally.last_ns / 1e9)
                     sustained.add_metric([name], tally.sustained)
@@ -306,6 +329,7 @@ class _Collector:
         yield over
         yield last
         yield sustained
+        yield hushed
         yield GaugeMetricFamily("oddbranch_sources", "Sources known.", value=len(tallies))
 
     @staticmethod

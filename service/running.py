@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import asyncio
+import contextlib
 import shutil
 import time
 from collections.abc import Callable, Coroutine
@@ -12,8 +13,9 @@ from typing import Any
 
 import sqlalchemy as sa
 
+from scoring.alerts import KINDS, RAISED
 from service.access import Tokens, is_loopback
-from service.alerting import N_TICKED, Keeper, budget_used, flood_answer
+from service.alerting import N_TICKED, Keeper, Quiet, budget_used, flood_answer
 from service.engine import Engine
 from service.logs import log_event
 from service.metrics import Metrics
@@ -69,6 +71,7 @@ class Service:
             clock_ns=clock_ns,
         )
         self.retention = Retention(self.database, self.writer, settings.store, clock_ns)
+        self._quiet = Quiet()
         self.n_body_bytes = 0
         self._tasks: list[asyncio.Task[None]] = []
 
@@ -95,6 +98,7 @@ class Service:
             tally.last_ns, tally.n_over_level, tally.sustained = last_ns, n_over_level, sustained
         self.metrics.gauges = self._gauges
         self.metrics.alerts = self._count_alerts
+        self.metrics.quiet = self._find_quiet
         self.metrics.engine = lambda: self.models.engine
 
     async def start(self) -> None:
@@ -148,10 +152,19 @@ class Service:
     def _count_alerts(self) -> dict[tuple[str, str], int]:
         try:
             with self.database.read.connect() as connection:
-                return count_alerts(connection)
+                # Shown from the start at zero, so that a rule sees the first one too.
+                return dict.fromkeys(((RAISED, kind) for kind in KINDS), 0) | count_alerts(
+                    connection
+                )
         except sa.exc.DBAPIError:
             # The other numbers are wanted most while the store is away.
             return {}
+
+    def _find_quiet(self) -> Quiet:
+        # While the store is away what was quiet stays so: nobody can have changed it.
+        with contextlib.suppress(sa.exc.DBAPIError):
+            self._quiet = self.keeper.quiet(self.database, self.clock_ns())
+        return self._quiet
 
     def _budget_used(self) -> float | None:
         try:

@@ -80,7 +80,10 @@ def test_the_cases_fail_when_a_rule_is_wrong(tmp_path: Path) -> None:
         "OddbranchPlantChanged": ("> 0.8\n", "> 0.95\n"),
         "OddbranchSuspectComesBack": (">= 3", ">= 9"),
         "OddbranchDown": ("== 0\n", "== 1\n"),
-        "OddbranchSustainedOverLevel": ("0.8 * max", "0.9 * max"),
+        "OddbranchSustainedOverLevel": ('max{kind="scored"} == 1\n', 'max{kind="scored"} == 2\n'),
+        "OddbranchRecordsOverLevel": ("[10m]) == 1\n", "[10m]) == 2\n"),
+        "OddbranchSourceSilent": ('max{kind="silent"} == 1\n', 'max{kind="silent"} == 2\n'),
+        "OddbranchInstrumentsRaised": ("raised{kind!=", "quiet{kind!="),
     }
     text = RULES.read_text(encoding="utf-8")
     for old, new in wrong.values():

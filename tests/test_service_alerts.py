@@ -201,6 +201,40 @@ def test_a_source_out_of_service_raises_nothing_until_it_is_back(
         assert (label.json()["label"], label.json()["state"]) == ("nuisance", "cleared")
 
 
+def test_what_calls_nobody_shows_in_the_numbers(
+    tmp_path: Path, models: Path, clock: Clock, store: dict[str, Any]
+) -> None:
+    """A shelf shows for its kind at its source, a time out of service for all of them."""
+    with serve(tmp_path, models, clock, store=store) as api:
+
+        def quiet() -> dict[str, float | None]:
+            ask = api.service.metrics.registry.get_sample_value
+            found = {
+                f"{source} {kind}": ask("oddbranch_source_quiet", {"source": source, "kind": kind})
+                for source in ("a", "b")
+                for kind in ("scored", "silent")
+            }
+            return found | {"alerts": ask("oddbranch_alerts_quiet", {"kind": "scored"})}
+
+        nothing = dict.fromkeys(("a scored", "a silent", "b scored", "b silent", "alerts"), 0.0)
+        path = f"/alerts/{raise_one(api)['id']}"
+        api.post(sent(0, "b"))
+        assert quiet() == nothing
+        until = format_time(clock.now_ns + 3600 * S)
+        assert act(api, f"{path}/shelve", {"until": until, "reason": "work"}).status_code == 200
+        assert quiet() == nothing | {"a scored": 1.0, "alerts": 1.0}
+        # Seen is seen: it is no longer among those that are raised.
+        act(api, f"{path}/acknowledge")
+        assert quiet() == nothing | {"a scored": 1.0}
+        clock.now_ns += 3601 * S
+        assert quiet() == nothing
+        reason = {"reason": "new pump", "until": format_time(clock.now_ns + 60 * S)}
+        assert act(api, "/sources/b/out-of-service", reason).status_code == 200
+        assert quiet() == nothing | {"b scored": 1.0, "b silent": 1.0}
+        clock.now_ns += 61 * S
+        assert quiet() == nothing
+
+
 def test_alerts_cleared_long_ago_go_with_their_actions_and_it_is_on_record(
     tmp_path: Path, models: Path, clock: Clock, store: dict[str, Any]
 ) -> None:

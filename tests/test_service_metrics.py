@@ -66,6 +66,9 @@ def test_what_can_be_counted_is_shown_from_the_start(api: Api) -> None:
     for channel in ("flow", "power", "pump", "speed"):
         assert value(api, "suspects_total", channel=channel) == 0
         assert value(api, "missing_readings_total", channel=channel) == 0
+    for kind in ("scored", "stuck", "absent", "span", "silent", "clock"):
+        assert value(api, "alerts", state="raised", kind=kind) == 0
+        assert value(api, "alerts_quiet", kind=kind) == 0
     for outcome in ("taken", "refused"):
         assert value(api, "model_reloads_total", outcome=outcome) == 0
 
@@ -117,6 +120,7 @@ def test_many_sources_are_summed(tmp_path: Path) -> None:
         api.post([record(i, f"s{i}", flow=390.0) for i in range(5)])
         assert value(api, "source_records_over_level_total", source="all") == 5
         assert value(api, "source_records_over_level_total", source="s0") is None
+        assert value(api, "source_quiet", source="s0", kind="scored") is None
         assert value(api, "sources") == 5
 
 
@@ -124,6 +128,7 @@ def test_sources_are_no_label_where_that_is_switched_off(tmp_path: Path) -> None
     with running(tmp_path, metrics={"per_source": False}) as api:
         api.post(record(0, "a"))
         assert value(api, "source_sustained_nats", source="a") is None
+        assert value(api, "source_quiet", source="a", kind="scored") is None
 
 
 def test_requests_are_counted_by_route_and_unknown_paths_are_one(api: Api) -> None:
