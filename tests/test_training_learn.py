@@ -10,14 +10,17 @@ import pytest
 from click.testing import CliRunner, Result
 
 from scoring.artefact import read_model
+from scoring.channels import parse_channels
 from scoring.delays import Delays
 from scoring.errors import BadChannelTable, OddbranchError
 from scoring.model import Model
 from tests.plant_files import CHANNELS, HEAD, SOURCES, Plant, lines, plant, records
 from tests.spools import START_NS, gaussian_tree, measurements, spool_of
 from training.history.options import BadHistory
-from training.learn import learn_command, learn_model
+from training.learn import learn_command, learn_model, result_lines
+from training.report.treesections import tree_section
 from training.settings import AlarmBudget, Judging, LearnSettings, Sustained
+from training.treetext import tree_lines
 
 
 @pytest.fixture(scope="module")
@@ -70,6 +73,36 @@ def test_the_command_says_what_a_person_wants_to_know(small: Plant, model: Model
     assert "held-out surprise" in text
     assert f"model {model.name} written to {small.model} in " in text
     assert "\r" not in text
+
+
+@pytest.mark.parametrize(("n_stopped", "word"), [(30, "running"), (90, "stopped")])
+def test_of_a_member_with_regimes_the_commonest_ones_tree_is_shown_and_named(
+    n_stopped: int, word: str
+) -> None:
+    rng = np.random.default_rng(2)
+    stopped = np.arange(1440) % 120 < n_stopped
+    flow = rng.normal(size=1440)
+    power = 0.95 * np.where(stopped, -flow, flow) + 0.3 * rng.normal(size=1440)
+    pump = {"name": "pump", "kind": "state", "words": ["running", "stopped"]}
+    channels = {"step_s": 60.0, "channel": [{"name": "flow"}, {"name": "power"}, pump]}
+    table = parse_channels(channels, "test")
+    few = np.column_stack([flow, power, stopped])[:700]
+    many = np.column_stack([flow, power, stopped])
+    with spool_of({"a": few, "b": many}) as spool:
+        result = learn_model(spool, table, LearnSettings())
+    n = 12 * max(n_stopped, 120 - n_stopped)
+    said = result_lines(result)
+    # The source that the report shows, and the words that it names the tree by.
+    assert said[0] == (
+        f"tree of b while pump = {word}, {n} of its 1440 records and the most of its 2 regimes "
+        "(nats on its edges; --report draws more):"
+    )
+    member = result.model.members["b"]
+    (part,) = [p for p in member.parts if p.key == (("running", "stopped").index(word),)]
+    lines_of = tree_lines(table, part.tree)
+    assert [line.removeprefix("  ") for line in said[1 : 1 + len(lines_of)]] == lines_of
+    drawn = "".join(tree_section(table, result.learned, result.model.fleet).pieces)
+    assert f"Tree of b for pump = {word}:" in drawn
 
 
 def test_the_same_history_gives_the_same_model(small: Plant, tmp_path: Path, model: Model) -> None:

@@ -16,6 +16,7 @@ from training.report.treesections import (
     MOST_TREES,
     bin_section,
     choice_section,
+    commonest_part,
     masses_text,
     shown_source,
     strongest_nodes,
@@ -56,14 +57,14 @@ def test_without_a_member_of_its_own_the_fleets_tree_is_drawn() -> None:
     model = a_regime_model()
     text = text_of(tree_section(model.table, {}, model.members["a"]).pieces)
     assert "No source has a member of its own" in text
-    assert "Tree of the fleet for pump running:" in text
+    assert "Tree of the fleet for pump = running:" in text
     assert text.count("<svg") == len(model.members["a"].parts)
 
 
 def test_a_tree_is_named_by_the_words_that_choose_it() -> None:
     model = a_regime_model()
     names = tree_names(model.table, model.members["a"])
-    assert names == ["pump running", "all records, used for other combinations"]
+    assert names == ["pump = running", "all records, used for other combinations"]
     assert tree_names(model.table, a_model().fleet) == ["all records"]
 
 
@@ -88,13 +89,22 @@ def many_regimes() -> tuple[Member, Learned]:
     return member, replace(one, member=member, density=density)
 
 
+def test_the_commonest_regime_stands_for_a_member_and_never_what_mixes_them() -> None:
+    _, one = many_regimes()
+    assert one.density.plain.n_records > 60
+    assert commonest_part(one) == 0
+    turned = dict(reversed(one.density.regimes.items()))
+    assert commonest_part(replace(one, density=replace(one.density, regimes=turned))) == 5
+    assert commonest_part(learned()["east"]) == 0
+
+
 def test_of_many_trees_those_with_most_records_are_drawn_and_the_rest_counted() -> None:
     member, one = many_regimes()
     text = text_of(tree_section(TABLE, {"east": one}, member).pieces)
     drawn = re.findall(r"<p>Tree of east for ([^<]*):</p>", text)
     assert len(drawn) == MOST_TREES
     assert drawn[0] == "all records, used for other combinations"
-    assert drawn[1:] == ["pump running", "pump stopped", "pump never seen"]
+    assert drawn[1:] == ["pump = running", "pump = stopped", "pump never seen"]
     assert f"Not drawn: {7 - MOST_TREES} trees" in text
     assert len(cells(text)) == 7
 

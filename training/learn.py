@@ -30,6 +30,7 @@ from training.promise import Promise, promise_of
 from training.promise_words import promise_lines
 from training.report.page import write_text
 from training.report.readings import time_text
+from training.report.treesections import commonest_part, fitted_parts, shown_source, tree_names
 from training.rows import DEFAULT_STEP_S, Rows
 from training.season import slow_channels, unseen_nats
 from training.settings import LearnSettings, load_learn_settings
@@ -268,6 +269,18 @@ def _regime_words(result: LearnResult, one: Learned) -> str:
     return f"{len(one.density.regimes)} trees by {by}, "
 
 
+def _when(result: LearnResult, one: Learned, part: int) -> str:
+    """Return when a tree of a member holds, where it has several, and what its numbers are."""
+    if not one.density.regimes:
+        return " (nats on its edges)"
+    name = tree_names(result.model.table, one.member)[part]
+    n, n_all = fitted_parts(one)[part].n_records, one.density.plain.n_records
+    return (
+        f" while {name}, {n} of its {n_all} records and the most of its {len(one.density.regimes)} "
+        "regimes (nats on its edges; --report draws more)"
+    )
+
+
 def left_out_lines(result: LearnResult) -> list[str]:
     """Return which stretches the tables did not use, and both alert rates."""
     stretches = [stretch for one in result.learned.values() for stretch in one.left_out]
@@ -285,11 +298,12 @@ def result_lines(result: LearnResult) -> list[str]:
     """Return what was learned: the tree, held-out figures, levels."""
     model = result.model
     lines = []
-    shown = next(iter(result.learned.values()), None)
-    if shown is not None:
-        name = shown.member.source
-        lines.append(f"tree of {name} (nats on its edges):")
-        lines += ["  " + line for line in tree_lines(model.table, shown.member.parts[0].tree)]
+    if result.learned:
+        # The source that the report shows.
+        shown = result.learned[shown_source(result.learned)]
+        part = commonest_part(shown)
+        lines.append(f"tree of {shown.member.source}{_when(result, shown, part)}:")
+        lines += ["  " + line for line in tree_lines(model.table, shown.member.parts[part].tree)]
         for source, one in result.learned.items():
             choice = one.density.plain.choice
             lines.append(

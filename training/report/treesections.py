@@ -82,6 +82,16 @@ def fitted_parts(one: Learned) -> list[Fitted]:
     return [*one.density.regimes.values(), one.density.plain]
 
 
+def commonest_part(one: Learned) -> int:
+    """Return which part of a member was learned from most records, regimes before the rest.
+
+    The tree of all records mixes the regimes, and holds only where none of theirs does.
+    """
+    n_regimes = len(one.density.regimes)
+    counts = [part.n_records for part in fitted_parts(one)]
+    return max(range(n_regimes), key=lambda k: counts[k]) if n_regimes else 0
+
+
 def tree_names(channels: ChannelTable, member: Member) -> list[str]:
     """Return for each part of a member when it holds, in words."""
     if len(member.parts) == 1:
@@ -94,8 +104,8 @@ def tree_names(channels: ChannelTable, member: Member) -> list[str]:
         words = []
         for node, number in zip(member.regime, part.key, strict=True):
             channel = channels.nodes[node]
-            word = channel.words[number] if number < len(channel.words) else "never seen"
-            words.append(f"{channel.name} {word}")
+            seen = number < len(channel.words)
+            words.append(channel.name + (f" = {channel.words[number]}" if seen else " never seen"))
         names.append(", ".join(words))
     return names
 
