@@ -49,6 +49,14 @@ class KnownToken:
     ends_ns: int | None
 
 
+class NoRight(Problem):
+    """A known token without the role. by: the token's name, for the log."""
+
+    def __init__(self, by: str, detail: str) -> None:
+        super().__init__("no-right", detail)
+        self.by = by
+
+
 class Tokens:
     """The tokens in force, as last read from the store.
 
@@ -87,8 +95,8 @@ class Tokens:
         if found is None:
             raise Problem("no-token", "the token is not known here, or has ended")
         if role not in found.roles:
-            raise Problem(
-                "no-right",
+            raise NoRight(
+                found.name,
                 f"the token has the roles {', '.join(sorted(found.roles))}; this needs {role}",
             )
         return found.name

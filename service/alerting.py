@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
+from functools import partial
 from typing import Any
 
 import orjson
@@ -32,6 +33,8 @@ from service.store.states import SourceState
 _KEPT = ("out_of_service", "back_in_service")
 # Sources whose passed time is stored in one transaction.
 N_TICKED = 500
+# Events of an alert that get a line in the log; what people do is kept as actions.
+_LOGGED = ("raised", "announced", "raised_again", "cleared")
 _FLOOD = ("flood_started", "flood_ended")
 _DAY_NS = 86_400 * 1_000_000_000
 # Kinds that rules ask of each source apart, from numbers of records and not of alerts.
@@ -187,7 +190,8 @@ class Keeper:
         for event in told:
             if event.what in _FLOOD:
                 changes.actions.append(_action_row(event, ""))
-                log_event(event.what, sentence=event.details["sentence"])
+                sentence = event.details["sentence"]
+                group.afterwards.append(partial(log_event, event.what, sentence=sentence))
 
     def _act(
         self, group: Group, state: SourceState, action: Action, now_ns: int, changes: _Changes
@@ -238,6 +242,15 @@ class _Changes:
         """Write all of it through the group's connection."""
         stored.put_alerts(group.connection, [_alert_row(one) for one in self.alerts.values()])
         stored.put_actions(group.connection, self.actions)
+        for event in self.events:
+            if event.what in _LOGGED and event.alert is not None:
+                alert = event.alert
+                group.afterwards.append(
+                    partial(
+                        log_event, f"alert_{event.what}", source=alert.source, kind=alert.kind,
+                        alert=alert.id, quiet=alert.quiet,
+                    )
+                )  # fmt: skip
 
 
 def standing_of(state: SourceState) -> AlertStanding | None:

@@ -75,28 +75,28 @@ def _add_documents(app: FastAPI, service: Service) -> None:
 
 def _add_handlers(app: FastAPI) -> None:
     @app.exception_handler(Problem)
-    async def on_problem(_request: Request, problem: Exception) -> Response:
+    async def on_problem(request: Request, problem: Exception) -> Response:
         assert isinstance(problem, Problem)
-        return _response(problem)
+        return _refusal(request, problem)
 
     @app.exception_handler(Exception)
-    async def on_fault(_request: Request, _error: Exception) -> Response:
+    async def on_fault(request: Request, _error: Exception) -> Response:
         # The framework raises it again after this answer, and the front logs it.
-        return _response(Problem("internal", "the request could not be answered"))
+        return _refusal(request, Problem("internal", "the request could not be answered"))
 
     @app.exception_handler(sa.exc.DBAPIError)
-    async def on_store(_request: Request, error: Exception) -> Response:
+    async def on_store(request: Request, error: Exception) -> Response:
         log_event("store_read_failed", error=type(error).__name__, detail=str(error))
-        return _response(Problem("store-away", "the store does not answer"))
+        return _refusal(request, Problem("store-away", "the store does not answer"))
 
     @app.exception_handler(RequestValidationError)
-    async def on_bad_query(_request: Request, error: Exception) -> Response:
+    async def on_bad_query(request: Request, error: Exception) -> Response:
         assert isinstance(error, RequestValidationError)
         first = error.errors()[0]
         name, words = str(first["loc"][-1]), str(first["msg"])
         if first["type"] == "string_pattern_mismatch" and name in ("id", "alert"):
             words = "an alert's id is 16 digits from 0 to f; GET /alerts lists them"
-        return _response(Problem("bad-query", f"{name}: {words}"))
+        return _refusal(request, Problem("bad-query", f"{name}: {words}"))
 
     @app.exception_handler(HTTPException)
     async def on_http(request: Request, error: Exception) -> Response:
@@ -109,7 +109,7 @@ def _add_handlers(app: FastAPI) -> None:
             if quick:
                 headers["allow"] = ", ".join(["GET", *quick])
         kind = _KIND_OF_STATUS.get(error.status_code, "bad-header")
-        response = _response(Problem(kind, _words_of(error, request.method, path, headers)))
+        response = _refusal(request, Problem(kind, _words_of(error, request.method, path, headers)))
         response.headers.update(headers)
         return response
 
@@ -125,5 +125,7 @@ def _words_of(error: HTTPException, method: str, path: str, headers: Mapping[str
     return str(error.detail)
 
 
-def _response(problem: Problem) -> Response:
+def _refusal(request: Request, problem: Problem) -> Response:
+    # The front writes the log, and sees only the status of this answer.
+    request.scope["state"]["problem"] = problem.kind
     return Response(problem.as_bytes(), status_code=problem.status, headers=problem.headers())

@@ -15,6 +15,7 @@ from collections.abc import Mapping
 
 from starlette.types import ASGIApp, Message, Receive, Scope, Send
 
+from service.access import NoRight
 from service.logs import log_event
 from service.metrics import OTHER_ROUTE
 from service.problems import Problem
@@ -117,11 +118,13 @@ class Front:
             raise Problem("overload", f"{self.n_running_max} requests are being answered already")
         role = ROLE_OF.get(key, "operate" if key[0] not in ("GET", "HEAD") else "read")
         if role is not None and not key[1].startswith(_OPEN_PREFIX):
-            name = self.service.tokens.check(
-                None if authorization is None else authorization.decode("latin-1"), role
-            )
-            # Whoever acts on an alert is kept with the action.
-            scope["state"]["by"] = name or "local"
+            text = None if authorization is None else authorization.decode("latin-1")
+            try:
+                # Whoever acts on an alert is kept with the action.
+                scope["state"]["by"] = self.service.tokens.check(text, role) or "local"
+            except NoRight as refusal:
+                scope["state"]["by"] = refusal.by
+                raise
 
     def _check_host(self, host: bytes | None) -> None:
         # A page that points its own name at this address would else read as if it were local.
@@ -139,14 +142,17 @@ class Front:
         if method not in _METHODS:
             method = OTHER_ROUTE
         self.service.metrics.request_done(route, method, request.status, seconds)
-        if self.log_all or request.status >= 400:
+        # Refusals inside the framework or a stream leave their kind with the request.
+        problem = request.problem or scope["state"].get("problem")
+        if self.log_all or request.status >= 400 or problem:
             log_event(
                 "request",
                 request=request.id,
                 method=method,
                 route=route,
                 status=request.status,
-                problem=request.problem,
+                problem=problem,
+                by=scope["state"].get("by"),
                 seconds=round(seconds, 6),
             )
 

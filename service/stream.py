@@ -57,6 +57,7 @@ async def answer_lines(
         if not spool.n_put:
             sender.cancel()
             raise
+        scope["state"]["problem"] = problem.kind
         spool.put_last(orjson.dumps({"problem": problem.as_dict()}) + b"\n")
         # The sender ends by itself: where the body has come whole, nothing else wakes anyone.
         spool.end()

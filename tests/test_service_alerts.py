@@ -11,6 +11,7 @@ from pathlib import Path
 from typing import Any
 
 import httpx
+import orjson
 import pytest
 import sqlalchemy as sa
 from pydantic import TypeAdapter
@@ -22,6 +23,7 @@ from service.alert_schemas import ActionsPage, AlertItem, AlertsPage, SourceServ
 from service.schemas import ADVICE
 from service.scoring_engine import load_engine
 from service.store.database import Database
+from service.store.group import Group, SqliteGroup
 from service.times import format_time
 from tests.models import a_model
 from tests.service_http import START_S, Api, Clock, Server, running
@@ -233,6 +235,46 @@ def test_what_calls_nobody_shows_in_the_numbers(
         assert quiet() == nothing | {"b scored": 1.0, "b silent": 1.0}
         clock.now_ns += 61 * S
         assert quiet() == nothing
+
+
+def test_the_log_tells_of_each_alert_and_of_no_reading(
+    tmp_path: Path, models: Path, clock: Clock, store: dict[str, Any],
+    capsys: pytest.CaptureFixture[str],
+) -> None:  # fmt: skip
+    def told() -> list[tuple[str, ...]]:
+        lines = [orjson.loads(line) for line in capsys.readouterr().err.splitlines()]
+        assert all("700" not in str(line) for line in lines)
+        return [
+            (line["event"], line["source"], line["kind"], line["alert"], line["quiet"])
+            for line in lines
+            if line["event"].startswith("alert_")
+        ]
+
+    with serve(tmp_path, models, clock, store=store) as api:
+        alert = raise_one(api)
+        assert ("alert_raised", "a", "scored", alert["id"], "") in told()
+        until = format_time(clock.now_ns + 3600 * S)
+        act(api, f"/alerts/{alert['id']}/shelve", {"until": until, "reason": "work"})
+        assert told() == []
+        act(api, "/sources/a/out-of-service", {"reason": "new pump"})
+        assert ("alert_cleared", "a", "scored", alert["id"], "shelved") in told()
+
+
+def test_the_log_tells_of_no_alert_that_was_not_stored(
+    tmp_path: Path, models: Path, clock: Clock, capsys: pytest.CaptureFixture[str],
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:  # fmt: skip
+    def full(_group: Group) -> None:
+        raise sa.exc.OperationalError("COMMIT", {}, Exception("database or disk is full"))
+
+    batch = [sent(i, odd=i >= 4) for i in range(9)]
+    with serve(tmp_path, models, clock) as api:
+        with monkeypatch.context() as broken:
+            broken.setattr(SqliteGroup, "commit", full)
+            assert api.post(batch).status_code == 503
+        assert "alert_raised" not in capsys.readouterr().err
+        assert api.post(batch).status_code == 200
+    assert "alert_raised" in capsys.readouterr().err
 
 
 def test_alerts_cleared_long_ago_go_with_their_actions_and_it_is_on_record(

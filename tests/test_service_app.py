@@ -5,7 +5,7 @@ from __future__ import annotations
 import asyncio
 import gzip
 import json
-from collections.abc import Iterator, Sequence
+from collections.abc import AsyncIterator, Iterator, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -16,11 +16,12 @@ import sqlalchemy as sa
 from pydantic import TypeAdapter
 
 from service import alert_schemas, schemas
+from service.access import add_token
 from service.pipeline import AHEAD_NS, Detail, Run, pack_words, unpack_detail
 from service.problems import KINDS
 from service.store.group import Group
 from tests.service_fakes import FakeEngine
-from tests.service_http import NOW_NS, START_S, Api, record, running
+from tests.service_http import JSON, NDJSON, NOW_NS, START_S, Api, record, running
 from tests.service_postgres import Cluster, cluster
 
 
@@ -540,3 +541,73 @@ def test_logs_hold_ids_and_no_readings(tmp_path: Path, capsys: pytest.CaptureFix
     requests = [event for event in events if event["event"] == "request"]
     assert [event["status"] for event in requests] == [200, 422]
     assert all(event["request"] for event in requests)
+
+
+@pytest.mark.parametrize(
+    ("method", "path", "body", "status", "problem"),
+    [
+        ("GET", "/nothing", None, 404, "not-found"),
+        ("PUT", "/model", None, 405, "bad-method"),
+        ("GET", "/alerts?stat=open", None, 422, "bad-query"),
+        ("GET", "/alerts?state=sleeping", None, 422, "bad-query"),
+        ("POST", "/alerts/0000000000000000/note", {"comment": "x"}, 404, "not-found"),
+        ("POST", "/sources/mill-lane-2/in-service", {}, 409, "impossible-action"),
+        ("POST", "/records", {}, 422, "bad-record"),
+    ],
+)
+def test_the_line_of_a_refusal_names_its_problem_and_who(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str],
+    method: str, path: str, body: Any, status: int, problem: str,
+) -> None:  # fmt: skip
+    with running(tmp_path) as api:
+        api.post(record())
+        content = {} if body is None else {"content": orjson.dumps(body), "headers": JSON}
+        answer = api.request(method, path, **content)
+    assert (answer.status_code, answer.json()["type"]) == (status, f"/problems/{problem}")
+    lines = [orjson.loads(line) for line in capsys.readouterr().err.splitlines()]
+    told = [
+        (line["status"], line["problem"], line["by"])
+        for line in lines
+        if line["event"] == "request"
+    ]
+    assert told == [(status, problem, "local")]
+
+
+def test_a_stream_that_breaks_off_names_its_problem(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    async def lines() -> AsyncIterator[bytes]:
+        for i in range(50):
+            yield b"".join(orjson.dumps(record(i + j / 100)) + b"\n" for j in range(100))
+
+    with running(tmp_path, limits={"stream_mb": 0.5}) as api:
+        answer = api.request("POST", "/records", content=lines(), headers=NDJSON)
+        assert answer.status_code == 200
+        assert orjson.loads(answer.text.splitlines()[-1])["problem"]["status"] == 413
+    lines_ = [orjson.loads(line) for line in capsys.readouterr().err.splitlines()]
+    told = [(line["status"], line["problem"]) for line in lines_ if line["event"] == "request"]
+    assert told == [(200, "too-large")]
+
+
+def test_lines_say_whose_token_it_was_and_never_the_token(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    with running(tmp_path, log={"requests": "all"}) as api:
+        with api.service.database.write.begin() as connection:
+            token = add_token(connection, "forwarder", ("send",), None)
+        with api.service.database.read.connect() as connection:
+            api.service.tokens.read(connection)
+        headers = {"authorization": f"Bearer {token}"}
+        answers = [
+            api.post(record(), headers=headers), api.get("/alerts", headers=headers),
+            api.get("/alerts"), api.get("/health/live"),
+        ]  # fmt: skip
+    assert [answer.status_code for answer in answers] == [200, 403, 401, 200]
+    written = capsys.readouterr().err
+    assert token not in written
+    assert token.partition(".")[2] not in written
+    lines = [orjson.loads(line) for line in written.splitlines()]
+    told = [(line["by"], line["problem"]) for line in lines if line["event"] == "request"]
+    assert told == [
+        ("forwarder", None), ("forwarder", "no-right"), (None, "no-token"), (None, None),
+    ]  # fmt: skip

@@ -7,6 +7,7 @@ row lock; a second replica waits and then sees what the first one left.
 
 from __future__ import annotations
 
+import contextlib
 import json
 from abc import ABC, abstractmethod
 from collections.abc import Callable, Iterable, Sequence
@@ -47,6 +48,8 @@ class Group(ABC):
         self.layout_ids = layout_ids
         self._new_layouts: dict[str, int] = {}
         self._transaction = connection.begin()
+        # Called once everything is on disk: what a log says must have happened.
+        self.afterwards: list[Callable[[], None]] = []
 
     @abstractmethod
     def sources(self, names: Sequence[str]) -> dict[str, SourceState]:
@@ -111,6 +114,14 @@ class Group(ABC):
         """Make everything durable; returns once it is on disk."""
         self._transaction.commit()
         self.layout_ids.update(self._new_layouts)
+        self._committed()
+        for tell in self.afterwards:
+            # Nobody listens; what is stored is stored all the same.
+            with contextlib.suppress(OSError):
+                tell()
+
+    def _committed(self) -> None:  # noqa: B027 - most have nothing more to do
+        """Take over what is on disk now."""
 
     def rollback(self) -> None:
         """Forget everything since the start."""
@@ -174,8 +185,7 @@ class SqliteGroup(Group):
     def _add_layout(self, model: str, channels: str) -> None:
         self.connection.execute(tables.layout.insert().values(model=model, channels=channels))
 
-    def commit(self) -> None:
-        super().commit()
+    def _committed(self) -> None:
         self._states.update(self._changed)
 
 
