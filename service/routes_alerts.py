@@ -11,6 +11,7 @@ import orjson
 import sqlalchemy as sa
 from fastapi import APIRouter, Depends, Path, Query, Request, Response
 from pydantic import BaseModel, ValidationError
+from starlette.exceptions import HTTPException
 
 from scoring.alert_actions import Action
 from scoring.alert_standing import AlertStanding
@@ -40,12 +41,14 @@ from service.routes_read import (
     cursor_of,
     pair_of,
     refuse_unknown,
+    source_item,
     time_of,
 )
 from service.running import Service
-from service.schemas import ADVICE
+from service.schemas import ADVICE, SourceItem
 from service.store import alerts as stored
 from service.store.group import Group
+from service.store.pages import source_row
 from service.times import format_time, parse_time
 
 T = TypeVar("T")
@@ -104,19 +107,49 @@ def alerts_router(service: Service) -> APIRouter:
         _add_on_alert(router, service, path, what, body, summary)
     for path, (what, body, summary) in _ON_SOURCE.items():
         _add_on_source(router, service, path, what, body, summary)
+    # After the actions: what is wrong with a method there is theirs to say.
+    _add_ones(router, service)
     return router
+
+
+async def _in_thread(service: Service, read: Callable[[sa.Connection], T]) -> T:
+    def run() -> T:
+        with service.database.read.connect() as connection:
+            return read(connection)
+
+    return await asyncio.to_thread(run)
+
+
+def _add_ones(router: APIRouter, service: Service) -> None:
+    @router.get(
+        "/alerts/{id}", responses={200: {"model": AlertItem}}, summary="One alert as it is now"
+    )
+    async def one_alert(id_: AlertPath) -> Response:
+        """Answer one alert, open or cleared, as the list has it."""
+        data = await _in_thread(service, lambda c: stored.alert_data(c, id_))
+        if data is None:
+            raise Problem("not-found", f"there is no alert {id_!r}; GET /alerts lists them")
+        return answer(read_alert(data).as_json())
+
+    @router.get(
+        "/sources/{source:path}",
+        responses={200: {"model": SourceItem}},
+        summary="One source and its standing",
+    )
+    async def one_source(source: SourcePath) -> Response:
+        """Answer one source as the list has it."""
+        row = await _in_thread(service, lambda c: source_row(c, source))
+        if row is not None:
+            return answer(source_item(row, service))
+        if source.rpartition("/")[2] in _ON_SOURCE:
+            raise HTTPException(405, headers={"Allow": "POST"})
+        raise Problem("not-found", f"there is no source {source!r}; GET /sources lists them")
 
 
 def _add_pages(router: APIRouter, service: Service) -> None:
     n_page = service.settings.limits.n_page
     limit_query = Query(description="items at most, count", ge=1, le=n_page, examples=[100])
-
-    async def in_thread(read: Callable[[sa.Connection], T]) -> T:
-        def run() -> T:
-            with service.database.read.connect() as connection:
-                return read(connection)
-
-        return await asyncio.to_thread(run)
+    in_thread = partial(_in_thread, service)
 
     @router.get(
         "/alerts", responses={200: {"model": AlertsPage}}, summary="Alerts, latest raised first"

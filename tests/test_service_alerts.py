@@ -20,7 +20,7 @@ from scoring.alert_standing import AlertStanding
 from scoring.artefact import write_model
 from service.access import add_token
 from service.alert_schemas import ActionsPage, AlertItem, AlertsPage, SourceService
-from service.schemas import ADVICE
+from service.schemas import ADVICE, SourceItem
 from service.scoring_engine import load_engine
 from service.store.database import Database
 from service.store.group import Group, SqliteGroup
@@ -140,6 +140,55 @@ def test_pages_choose_by_source_state_and_time_and_go_on(
         assert second["id"] not in {x["id"] for x in alerts(api, to=second["raised"])}
         assert alerts(api, state="cleared") == []
         assert api.get("/alerts", params={"state": "sleeping"}).status_code == 422
+
+
+def test_one_alert_and_one_source_are_answered_as_their_lists_have_them(
+    tmp_path: Path, models: Path, clock: Clock, store: dict[str, Any]
+) -> None:
+    with serve(tmp_path, models, clock, store=store) as api:
+        alert = raise_one(api)
+        api.post(sent(0, "north/b"))
+        one = api.get(f"/alerts/{alert['id']}")
+        TypeAdapter(AlertItem).validate_json(one.content)
+        assert one.json() == alert
+        act(api, "/sources/a/out-of-service", {"reason": "new pump"})
+        assert api.get(f"/alerts/{alert['id']}").json()["state"] == "cleared"
+        listed = api.get("/sources").json()["items"]
+        assert [item["source"] for item in listed] == ["a", "north/b"]
+        for item in listed:
+            one = api.get(f"/sources/{item['source']}")
+            TypeAdapter(SourceItem).validate_json(one.content)
+            assert one.json() == item
+        described = api.get("/openapi.json").json()["paths"]
+        for path in ("/alerts/{id}", "/sources/{source}"):
+            assert {"200", "404"} <= set(described[path]["get"]["responses"])
+        metrics = api.get("/metrics").text
+        assert 'route="/alerts/{id}",status="200"' in metrics
+        assert alert["id"] not in metrics
+
+
+@pytest.mark.parametrize(
+    ("method", "path", "status", "words"),
+    [
+        ("GET", "/alerts/0000000000000000", 404, "there is no alert '0000000000000000'; GET /al"),
+        ("GET", "/alerts/nonsense", 422, "an alert's id is 16 digits"),
+        ("GET", "/alerts/0000000000000000?source=a", 422, "parameter 'source' is not known"),
+        ("GET", "/sources/nowhere", 404, "there is no source 'nowhere'; GET /sources lists them"),
+        ("GET", "/sources/a/in-service", 405, "use POST"),
+        ("PUT", "/sources/a/in-service", 405, "use POST"),
+        ("PUT", "/sources/a", 405, "use GET"),
+        ("GET", "/alerts/0000000000000000/note", 405, "use POST"),
+    ],
+)
+def test_what_is_not_one_is_refused_with_the_way_out(
+    tmp_path: Path, models: Path, clock: Clock,
+    method: str, path: str, status: int, words: str,
+) -> None:  # fmt: skip
+    with serve(tmp_path, models, clock) as api:
+        api.post(sent(0))
+        refused = api.request(method, path)
+    assert refused.status_code == status
+    assert words in refused.json()["detail"]
 
 
 def test_every_action_is_stored_with_who_and_when(

@@ -97,16 +97,25 @@ def _page(
     return found, after
 
 
+def source_row(connection: sa.Connection, name: str) -> dict[str, Any] | None:
+    """Return one source's row without its standings, or None where there is no such source."""
+    row = connection.execute(sa.select(*_shown()).where(_SOURCE.name == name)).first()
+    return None if row is None else dict(row._mapping)
+
+
 def sources_page(
     connection: sa.Connection, *, limit: int, after: str | None
 ) -> tuple[list[dict[str, Any]], str | None]:
     """Return the rows of sources by name, without their standings."""
-    columns = [column for column in _SOURCE if "standing" not in column.name]
-    query = sa.select(*columns).order_by(_SOURCE.name).limit(limit + 1)
+    query = sa.select(*_shown()).order_by(_SOURCE.name).limit(limit + 1)
     if after is not None:
         query = query.where(_SOURCE.name > after)
     rows = [dict(row._mapping) for row in connection.execute(query)]
     return rows[:limit], rows[limit - 1]["name"] if len(rows) > limit else None
+
+
+def _shown() -> list[sa.ColumnElement[Any]]:
+    return [column for column in _SOURCE if "standing" not in column.name]
 
 
 def pruned_page(
