@@ -234,7 +234,9 @@ def _where(data: dict[str, Any], loc: tuple[int | str, ...]) -> str:
 
 def _unknown(loc: tuple[int | str, ...]) -> str:
     """Return what to say of a key that there is not."""
-    kinds = {"channel": Channel, "derived": Derived, "edges": EdgeSay}
+    kinds: dict[str, type[BaseModel]] = {
+        "channel": Channel, "derived": Derived, "edges": EdgeSay
+    }  # fmt: skip
     kind = kinds.get(str(loc[0]), ChannelTable) if len(loc) > 1 else ChannelTable
     names = list(kind.model_fields)
     near = get_close_matches(str(loc[-1]), names, 1)
