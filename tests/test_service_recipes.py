@@ -161,9 +161,73 @@ def test_the_forwarder_waits_as_told_and_says_what_is_refused(tmp_path: Path) ->
     assert n_lines == (5, 5, 5, 0)
     assert times[1] - times[0] >= 2
     assert times[2] - times[1] >= 1
-    assert said.splitlines()[0].startswith("Server error '503")
+    assert json.loads(said.splitlines()[0]) == Problem("overload", "for now").as_dict()
     assert said.splitlines()[-2:] == ["not now", "line of nonsense"]
     assert [p.name for p in tmp_path.iterdir() if p != path] == ["records.place"]
+
+
+def test_the_forwarder_begins_anew_when_its_file_does(tmp_path: Path) -> None:
+    path, place = tmp_path / "records.ndjson", tmp_path / "records.place"
+
+    def lines(start: int, end: int) -> str:
+        return "".join(json.dumps(record(i / 6)) + "\n" for i in range(start, end))
+
+    path.write_text(lines(0, 20), encoding="utf-8")
+    with serving(tmp_path) as server:
+        program = [sys.executable, "-c", recipe("forwarder"), str(path), f"{server.url}/records"]
+        process = subprocess.Popen(program)
+        try:
+            assert reached(server, 20)
+            # Copied away and emptied by whoever rotates logs; the file stays the same.
+            path.write_text(lines(20, 25), encoding="utf-8")
+            assert reached(server, 25)
+        finally:
+            end(process)
+        # The same while it was not running, with the place of a longer file.
+        place.write_text("999999", encoding="utf-8")
+        path.write_text(lines(25, 28), encoding="utf-8")
+        process = subprocess.Popen(program)
+        try:
+            assert reached(server, 28)
+        finally:
+            end(process)
+
+
+def test_the_forwarder_says_what_the_service_says_and_takes_a_token(tmp_path: Path) -> None:
+    path, text = tmp_path / "records.ndjson", recipe("forwarder")
+    path.write_text(json.dumps(record()) + "\n", encoding="utf-8")
+    words = ["token", "add", "all", "--role", "send", "--data", str(tmp_path / "data")]
+    output = CliRunner().invoke(oddbranch.cli, words, catch_exceptions=False).output
+    token = output.splitlines()[-1]
+    found = re.search(r'`("authorization": "Bearer TOKEN")`', README)
+    assert found
+    pair = found.group(1).replace("TOKEN", token)
+    with_token = text.replace('"application/x-ndjson"}', f'"application/x-ndjson", {pair}}}')
+    assert with_token.count(token) == 1
+    with serving(tmp_path) as server:
+        assert first_words(text, path, f"{server.url}/records")["status"] == 401
+        wrong = first_words(with_token, path, f"{server.url}/recrods")
+        assert wrong["detail"] == "the token has the roles send; this needs operate"
+        process = subprocess.Popen(
+            [sys.executable, "-c", with_token, str(path), f"{server.url}/records"]
+        )
+        end_s = time.monotonic() + 30
+        while not (tmp_path / "records.place").exists() and time.monotonic() < end_s:
+            time.sleep(0.05)
+        end(process)
+    assert (tmp_path / "records.place").read_text() == str(path.stat().st_size)
+
+
+def first_words(text: str, path: Path, url: str) -> dict[str, Any]:
+    """Return the problem that a forwarder says first."""
+    program = [sys.executable, "-c", text, str(path), url]
+    process = subprocess.Popen(program, stderr=subprocess.PIPE)
+    assert process.stderr is not None
+    try:
+        said: dict[str, Any] = json.loads(process.stderr.readline())
+    finally:
+        end(process)
+    return said
 
 
 def end(process: subprocess.Popen[bytes]) -> None:
