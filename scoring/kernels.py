@@ -9,20 +9,18 @@ way. tests/test_scoring_kernels.py holds the slow twins.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
-from typing import Any, NamedTuple, TypeVar, cast
+from typing import NamedTuple
 
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
 from scoring.bins import MISSING, BinRows
+from scoring.compiled import uncounted
 from scoring.tree import TreeArrays
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
-F = TypeVar("F", bound=Callable[..., object])
-_UNCOUNTED: dict[str, Any] = {"cache": True, "nogil": True, "_nrt": False}
 
 # A product outside these is done again in logs: beyond them a factor still to come could
 # have lifted what was already flushed to zero.
@@ -31,14 +29,6 @@ LN_LOW = math.log(LOW)
 # Rows that are taken node by node: the tables of one node stay in the nearest caches while
 # those of a whole tree do not, which measured 47 ns a reading row by row and 30 ns so.
 STRIP = 256
-
-
-def _uncounted(function: F) -> F:
-    """Compile without counting references to arrays, which cost more than the sums in them.
-
-    Nothing that makes an array can be compiled so.
-    """
-    return cast(F, njit(**_UNCOUNTED)(function))
 
 
 @njit(cache=True, nogil=True, inline="always")
@@ -71,7 +61,7 @@ def scratch(t: TreeArrays) -> Scratch:
     return Scratch(ints[0], ints[1], marks[0], marks[1], np.empty(t.marginal.shape))
 
 
-@_uncounted
+@uncounted
 def _component(t: TreeArrays, node: int, row: BinRows, s: Scratch) -> int:
     """List the hidden nodes joined to `node` (itself first) that have anything to tell it.
 
@@ -120,7 +110,7 @@ def _dot(p: Floats, p0: np.uint64, f: Floats, a0: np.uint64, w: np.uint64) -> fl
     return total
 
 
-@_uncounted
+@uncounted
 def _plain(t: TreeArrays, row: BinRows, n: int, s: Scratch) -> float:
     """Eliminate towards order[0] in plain numbers.
 
@@ -166,7 +156,7 @@ def _plain(t: TreeArrays, row: BinRows, n: int, s: Scratch) -> float:
     return scale
 
 
-@_uncounted
+@uncounted
 def _logs(t: TreeArrays, row: BinRows, n: int, s: Scratch) -> None:
     """Eliminate towards order[0] in logs; leaves ln of the joint in vec[order[0]]."""
     order, via, vec = s.order, s.via, s.vec
@@ -195,7 +185,7 @@ def _logs(t: TreeArrays, row: BinRows, n: int, s: Scratch) -> None:
             vec[parent, b] += high + math.log(total) if total > 0.0 else -np.inf
 
 
-@_uncounted
+@uncounted
 def believe(t: TreeArrays, node: int, row: BinRows, s: Scratch) -> float:
     """Put p(bins of `node` | observed) into vec[node]; return the component's log sum.
 

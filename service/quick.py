@@ -14,8 +14,9 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from scoring.compiled import uncounted
 from service.layout import Layout
-from service.quick_values import kernel, number, time_ns
+from service.quick_values import number, time_ns
 
 Bytes = NDArray[np.uint8]
 Ints = NDArray[np.int64]
@@ -83,7 +84,7 @@ class QuickParser:
         return sources, times[:n], values[:n]
 
 
-@kernel
+@uncounted
 def _skip(b: Bytes, i: int, form: int) -> int:
     """Return the place of the next byte that is no white space."""
     n = b.shape[0]
@@ -96,7 +97,7 @@ def _skip(b: Bytes, i: int, form: int) -> int:
     return i
 
 
-@kernel
+@uncounted
 def _text_end(b: Bytes, i: int) -> int:
     """Return the place of the quote that ends a text from i on, or -1 if it is not plain.
 
@@ -113,7 +114,7 @@ def _text_end(b: Bytes, i: int) -> int:
     return -1
 
 
-@kernel
+@uncounted
 def _same(b: Bytes, start: int, stop: int, pool: Bytes, first: int, last: int) -> bool:
     if stop - start != last - first:
         return False
@@ -123,7 +124,7 @@ def _same(b: Bytes, start: int, stop: int, pool: Bytes, first: int, last: int) -
     return True
 
 
-@kernel
+@uncounted
 def _find(
     b: Bytes, start: int, stop: int, pool: Bytes, at: Ints, lo: int, hi: int, guess: int
 ) -> int:
@@ -136,7 +137,7 @@ def _find(
     return -1
 
 
-@kernel
+@uncounted
 def _readings(
     b: Bytes,
     i: int,
@@ -203,7 +204,7 @@ def _readings(
     return _GIVE_UP
 
 
-@kernel
+@uncounted
 def _source(b: Bytes, start: int, stop: int, found: Ints, n_sources: int, guess: int) -> int:
     """Return the number of a source among those found, which may be a new one; -1: give up."""
     if stop == start or stop - start > _MAX_SOURCE_BYTES:
@@ -222,7 +223,7 @@ def _source(b: Bytes, start: int, stop: int, found: Ints, n_sources: int, guess:
     return n_sources
 
 
-@kernel
+@uncounted
 def _member(b: Bytes, start: int, stop: int) -> int:
     """Return 0 for source, 1 for time, 2 for readings, else -1."""
     if stop - start == 6 and b[start] == 115 and b[start + 1] == 111 and b[start + 2] == 117:
@@ -236,7 +237,7 @@ def _member(b: Bytes, start: int, stop: int) -> int:
     return 2 if b[start + 6] == 103 and b[start + 7] == 115 else -1
 
 
-@kernel
+@uncounted
 def _record(
     b: Bytes,
     i: int,
@@ -304,7 +305,7 @@ def _record(
     return _GIVE_UP, n_sources
 
 
-@kernel
+@uncounted
 def _parse(
     b: Bytes,
     form: int,

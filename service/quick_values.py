@@ -5,33 +5,18 @@ A number comes out as the nearest float64 or not at all.
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from typing import Any, TypeVar, cast
-
 import numpy as np
-from numba import njit
 from numpy.typing import NDArray
 
+from scoring.compiled import uncounted
+
 Bytes = NDArray[np.uint8]
-
-F = TypeVar("F", bound=Callable[..., object])
-_OPTIONS: dict[str, Any] = {"cache": True, "nogil": True, "_nrt": False}
-
-
-def kernel(function: F) -> F:
-    """Compile a function that only reads arrays and writes into them.
-
-    References to arrays are not counted, which took more time than the parsing. Nothing is
-    lost by it where no array is made or kept, and the compiler refuses what would make one.
-    """
-    return cast(F, njit(**_OPTIONS)(function))
-
 
 _POWERS = np.array([10.0**k for k in range(23)])
 _ZERO, _NINE, _MINUS, _PLUS, _DOT, _COLON = ord("0"), ord("9"), ord("-"), ord("+"), 46, 58
 
 
-@kernel
+@uncounted
 def _digits(b: Bytes, i: int, n_digits: int) -> int:
     """Return the number that some digits are, or -1."""
     value = 0
@@ -43,7 +28,7 @@ def _digits(b: Bytes, i: int, n_digits: int) -> int:
     return value
 
 
-@kernel
+@uncounted
 def _days(year: int, month: int, day: int) -> int:
     """Return the days since 1970-01-01, or -1 if the calendar has no such day."""
     leap = year % 4 == 0 and (year % 100 != 0 or year % 400 == 0)
@@ -60,7 +45,7 @@ def _days(year: int, month: int, day: int) -> int:
     return 365 * y + y // 4 - y // 100 + y // 400 + (153 * m + 2) // 5 + day - 1 - 719468
 
 
-@kernel
+@uncounted
 def time_ns(b: Bytes, i: int, stop: int) -> int:
     """Return the nanoseconds since 1970 of an RFC 3339 time, or -1 if it is not plain."""
     if stop - i < 20 or b[i + 4] != _MINUS or b[i + 7] != _MINUS or b[i + 10] != 84:
@@ -101,7 +86,7 @@ def time_ns(b: Bytes, i: int, stop: int) -> int:
     return seconds * 1_000_000_000 + fraction
 
 
-@kernel
+@uncounted
 def _quotient(m: np.uint64, k: int) -> tuple[float, bool]:
     """Return the float64 nearest to m / 10^k for k up to 22, and whether that is certain.
 
@@ -134,7 +119,7 @@ def _quotient(m: np.uint64, k: int) -> tuple[float, bool]:
     return x, off < half * (1.0 - 1e-9)
 
 
-@kernel
+@uncounted
 def number(b: Bytes, i: int) -> tuple[float, int]:
     """Return a JSON number from i on and the place after it, or place -1 if it needs care."""
     n = b.shape[0]

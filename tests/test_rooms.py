@@ -17,6 +17,7 @@ OWN = {*ROOMS, "oddbranch", "tests"}
 # A file of scoring imports only from files that stand before it here.
 SCORING_ORDER = (
     "errors",
+    "compiled",
     "channels",
     "derived",
     "bins",
