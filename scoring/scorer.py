@@ -191,23 +191,21 @@ class Scorer:
         for k in np.flatnonzero((at < 0) | (out.gaps > 0)).tolist():
             use = slice(start[k], start[k + 1])
             if at[k] < 0:
-                out.surprise[use] = np.nan
+                out.rows[use], out.surprise[use] = members[k].bin_table.rows(nodes[use]), np.nan
             left = start[k] + np.flatnonzero(np.isnan(out.surprise[use]))
             if len(left):
-                self._score_mixed(members[k], nodes, left, out)
+                self._score_mixed(members[k], left, out)
             out.excess[use] = self._scale(members[k]).excess(out.rows[use], out.surprise[use])
             out.excess[use][~judged[use]] = np.nan
         return out
 
-    def _score_mixed(
-        self, member: Member, nodes: Floats, at: NDArray[np.int64], out: Outcome
-    ) -> None:
-        """Fill in, but for excess, what can be said of records at (m,) that the pass left out."""
-        rows = member.bin_table.rows(nodes[at])
-        suspect, own_surprise = np.empty(len(at), np.int16), np.empty(len(at))
+    def _score_mixed(self, member: Member, at: NDArray[np.int64], out: Outcome) -> None:
+        """Fill in, but for bins and excess, what can be said of records at (m,) that the pass left
+        out."""
+        rows, suspect, own_surprise = out.rows[at], np.empty(len(at), np.int16), np.empty(len(at))
         surprise, own = removal_of(member, rows, *self.model.derived_groups)
         fill_suspects(own, member.usual.channel_median, suspect, own_surprise)
-        out.rows[at], out.surprise[at], out.own[at] = rows, surprise, own
+        out.surprise[at], out.own[at] = surprise, own
         out.suspect[at], out.suspect_surprise[at] = suspect, own_surprise
         out.low[at], out.high[at], out.best[at] = self._expected_rows(member, rows, suspect)
 

@@ -54,8 +54,8 @@ class Run:
     """Records of one source in the order of arrival, for an alert sink.
 
     values: (n, n_channels) as scored, bad readings NaN. scored: of these and of others' records;
-    these are its `rows`. heard_ns: when they came, by the server's clock. still: they are late
-    or ahead, and moved no standing; ahead: (n,) which are ahead, None where none is.
+    these are its `rows`. heard_ns: when they came, by the server's clock. ahead: (n,) of records
+    that moved no standing, which are ahead and not late; None of records that moved it.
     """
 
     source: SourceState
@@ -65,8 +65,12 @@ class Run:
     scored: Scored
     rows: slice
     heard_ns: int
-    still: bool = False
     ahead: NDArray[np.bool_] | None = None
+
+    @property
+    def still(self) -> bool:
+        """Whether the records moved no standing."""
+        return self.ahead is not None
 
 
 @dataclass(frozen=True, slots=True)
@@ -255,11 +259,8 @@ class GroupScorer:
                 ahead = times[part] > self.now_ns + AHEAD_NS
                 out.flags[one.rows] += np.where(ahead, FLAG_AHEAD, FLAG_LATE).astype(np.int16)
             self.runs.append(
-                Run(
-                    state, engine, times[part], used[part], scored, part, self.now_ns, one.still,
-                    ahead,
-                )
-            )  # fmt: skip
+                Run(state, engine, times[part], used[part], scored, part, self.now_ns, ahead)
+            )
             state.n_over_level += sum(map(bool, alerts[part]))
             if one.still:
                 continue
