@@ -59,8 +59,6 @@ async def answer_lines(
             raise
         scope["state"]["problem"] = problem.kind
         spool.put_last(orjson.dumps({"problem": problem.as_dict()}) + b"\n")
-        # The sender ends by itself: where the body has come whole, nothing else wakes anyone.
-        spool.end()
         await _drop_rest(receive, sender)
     except BaseException:
         sender.cancel()
@@ -273,9 +271,12 @@ class AnswerSpool:
         self._written += len(piece)
 
     def put_last(self, piece: bytes) -> None:
-        """Add what ends the answer; it waits in memory."""
+        """Add what ends the answer; it waits in memory, and nothing may follow.
+
+        The sender ends by itself then: where the body has come whole nothing else wakes anyone.
+        """
         self._last.append(piece)
-        self._news.set()
+        self.end()
 
     def end(self) -> None:
         """Say that nothing more comes."""
