@@ -56,6 +56,8 @@ def test_an_unknown_zone_names_the_nearest() -> None:
         BadHistory, match="--zone: no zone 'Europe/Lisbonn'; the nearest is 'Europe/Li"
     ):
         options_of("--zone", "Europe/Lisbonn")
+    with pytest.raises(BadHistory, match=r"no zone 'xyz'; there are 'Africa/.* and \d+ more$"):
+        options_of("--zone", "xyz")
 
 
 @pytest.mark.parametrize("sign", [";", "semicolon"])

@@ -50,6 +50,15 @@ def test_no_time_column_at_all_lists_the_columns(tmp_path: Path) -> None:
         read(path)
 
 
+def test_a_source_column_that_was_named_must_be_there(tmp_path: Path) -> None:
+    path = write(tmp_path, "time,station,flow,pump\n" + ROW.replace(",", ",a,", 1))
+    with pytest.raises(BadHistory, match="no source column 'Statoin'; the nearest is 'station'"):
+        read(path, source="Statoin")
+    assert [batch.source_names for batch in read(path, source="station")] == [("a",)]
+    # Unless it was, a history may do without one.
+    assert rows(read(path))[0][3] == [1.0, 0.0]
+
+
 def test_an_absent_channel_names_the_nearest_column(tmp_path: Path) -> None:
     path = write(tmp_path, "time,Flow ,pump\n" + ROW)
     with pytest.raises(BadHistory, match="no column 'flow', which the .*; the nearest is 'Flow'"):

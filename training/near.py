@@ -10,17 +10,21 @@ from typing import Final
 MOST_TOLD: Final = 8
 
 
-def near_words(name: str, names: Sequence[str]) -> str:
-    """Return "; the nearest is ..." or "; there are ...", to end a sentence; "" without names.
+def nearest_words(name: str, names: Sequence[str]) -> str:
+    """Return "; the nearest is ...", to end a sentence; "" where none is near.
 
     Capital and small letters are alike here, as they are to whoever mistypes.
     """
     folded = {known.casefold(): known for known in names}
     near = difflib.get_close_matches(name.casefold(), list(folded), n=1)
-    if near:
-        return f"; the nearest is {folded[near[0]]!r}"
-    if not names:
-        return ""
+    return f"; the nearest is {folded[near[0]]!r}" if near else ""
+
+
+def near_words(name: str, names: Sequence[str]) -> str:
+    """Return the same, or "; there are ..." where none is near; "" without names."""
+    nearest = nearest_words(name, names)
+    if nearest or not names:
+        return nearest
     more = len(names) - MOST_TOLD
     shown = ", ".join(repr(known) for known in names[:MOST_TOLD])
     return f"; there {'is' if len(names) == 1 else 'are'} {shown}" + (

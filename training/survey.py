@@ -29,7 +29,7 @@ from training.history.reading import (
     Advances,
     open_cells,
     refuse_local_times,
-    refuse_missing_time,
+    refuse_missing_columns,
 )
 from training.history.tally import NO_SOURCE, WRONG_CELLS, Tally
 from training.history.times import NO_TIME, NS_PER_S, TimeReader
@@ -108,7 +108,7 @@ def survey_history(
     files = find_files(paths)
     for path in files:
         file = open_cells(path, options)
-        refuse_missing_time(file, options)
+        refuse_missing_columns(file, options)
         if is_long(file, options, None):
             survey.is_long = True
             steps = _survey_long(file, options, survey, tally)

@@ -10,7 +10,7 @@ import click
 
 from training.history.delimited import SEPARATORS
 from training.history.options import BadHistory, HistoryOptions
-from training.history.reading import near_name
+from training.near import near_words
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -130,7 +130,7 @@ def history_options(
 def _zone(name: str) -> ZoneInfo:
     names = available_timezones()
     if name not in names:
-        raise BadHistory("--zone", f"no zone {name!r}{near_name(name, sorted(names))}")
+        raise BadHistory("--zone", f"no zone {name!r}{near_words(name, sorted(names))}")
     return ZoneInfo(name)
 
 

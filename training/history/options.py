@@ -7,6 +7,8 @@ from zoneinfo import ZoneInfo
 
 from scoring.errors import OddbranchError
 
+# Where sources stand unless somebody says otherwise; a history may do without it.
+SOURCE_COLUMN = "source"
 # The one source of a history that names none.
 ONLY_SOURCE = "machine"
 
@@ -38,7 +40,7 @@ class HistoryOptions:
     """
 
     time: str = "time"
-    source: str = "source"
+    source: str = SOURCE_COLUMN
     channel: str = "channel"
     value: str = "value"
     quality: str = "quality"

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import difflib
 import re
 from collections.abc import Iterable, Iterator, Sequence
 from pathlib import Path
@@ -20,9 +19,10 @@ from training.history.long import Aligner
 from training.history.long_cells import is_long
 from training.history.long_numbers import LongNumbers, NumberedReadings
 from training.history.long_order import TimeOrder, TimeStretches
-from training.history.options import BadHistory, HistoryOptions
+from training.history.options import SOURCE_COLUMN, BadHistory, HistoryOptions
 from training.history.tally import NO_OFFSET, Tally
 from training.history.wide import WideReader
+from training.near import nearest_words
 
 # How a name that may hold times looks, for the sentence about a missing time column.
 _TIME_LIKE = re.compile(
@@ -62,7 +62,7 @@ def read_history(
     long_files = []
     for path in find_files(paths):
         file = open_cells(path, options)
-        refuse_missing_time(file, options)
+        refuse_missing_columns(file, options)
         if is_long(file, options, table):
             long_files.append(file)
             continue
@@ -148,8 +148,16 @@ def open_cells(path: Path, options: HistoryOptions) -> CellFile:
     return ColumnarFile(path) if is_parquet(path) else DelimitedFile(path, options)
 
 
-def refuse_missing_time(file: CellFile, options: HistoryOptions) -> None:
-    """Raise BadHistory when the time column is not there, naming what looks like one."""
+def refuse_missing_columns(file: CellFile, options: HistoryOptions) -> None:
+    """Raise BadHistory when the column of times is not there, or one of sources that was named.
+
+    A history without sources is of one alone, unless somebody said where they stand.
+    """
+    if options.source not in (*file.names, SOURCE_COLUMN):
+        raise BadHistory(
+            str(file.path),
+            f"no source column {options.source!r}{near_name(options.source, file.names)}",
+        )
     if options.time in file.names:
         return
     alike = [name for name in file.names if _TIME_LIKE.search(name)]
@@ -175,11 +183,7 @@ def refuse_missing_channels(file: CellFile, wanted: Sequence[str]) -> None:
 
 def near_name(name: str, names: Sequence[str]) -> str:
     """Return the hint at the most alike of some names, with the way out."""
-    folded = {n.casefold(): n for n in names}
-    near = difflib.get_close_matches(name.casefold(), list(folded), n=1)
-    if near:
-        return f"; the nearest is {folded[near[0]]!r}"
-    return f"; the columns are {_listed(names)}"
+    return nearest_words(name, names) or f"; the columns are {_listed(names)}"
 
 
 def refuse_local_times(problem: np.ndarray[tuple[int], np.dtype[np.object_]], place: str) -> None:
