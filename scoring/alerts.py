@@ -206,6 +206,11 @@ def time_text(time_ns: int) -> str:
     return f"{text}.{rest:09d}".rstrip("0") + "Z" if rest else text + "Z"
 
 
+def second_text(time_ns: int) -> str:
+    """Return the same to the second, as sentences say it."""
+    return time_text(time_ns - time_ns % 1_000_000_000)
+
+
 def _with_times(data: Mapping[str, Any]) -> dict[str, Any]:
     """Return the same with every `_ns` number as a time, also inside lists."""
     shown: dict[str, Any] = {}

@@ -14,7 +14,7 @@ from typing import Any
 
 from scoring.alert_settings import AlertSettings
 from scoring.alert_turn import NS_PER_S
-from scoring.alerts import ADVICE, Event, time_text
+from scoring.alerts import ADVICE, Event, second_text
 from scoring.errors import OddbranchError
 
 # Version of the byte form.
@@ -141,7 +141,7 @@ def _message(what: str, flood: Flood, at_ns: int, settings: AlertSettings) -> Ev
         )
     else:
         sentence = (
-            f"the flood since {time_text(flood.started_ns)} is over: {flood.n} alerts, most of "
+            f"the flood since {second_text(flood.started_ns)} is over: {flood.n} alerts, most of "
             f"them at {sources}."
         )
     details: dict[str, Any] = {

@@ -18,7 +18,7 @@ import sqlalchemy as sa
 from scoring.alert_actions import ON_ALERTS, Action, BadAction, act_on_cleared, take_action
 from scoring.alert_settings import AlertSettings
 from scoring.alert_standing import AlertStanding, BadAlertStanding
-from scoring.alerts import CLEARED, RAISED, SCORED, SILENT, Alert, Event, time_text
+from scoring.alerts import CLEARED, RAISED, SCORED, SILENT, Alert, Event, second_text, time_text
 from scoring.flood import BadFlood, Flood, gather
 from service.engine import Engine
 from service.logs import log_event
@@ -284,9 +284,11 @@ def flood_answer(connection: sa.Connection) -> dict[str, Any] | None:
     flood = read_flood(stored.flood_data(connection))
     if flood.started_ns is None:
         return None
-    since = time_text(flood.started_ns)
-    sentence = f"{flood.n} alerts in a flood since {since}; look for what they have in common."
-    return {"since": since, "alerts": flood.n, "sentence": sentence}
+    sentence = (
+        f"{flood.n} alerts in a flood since {second_text(flood.started_ns)}; look for what they "
+        "have in common."
+    )
+    return {"since": time_text(flood.started_ns), "alerts": flood.n, "sentence": sentence}
 
 
 def budget_used(count: Callable[[str, int], int], now_ns: int) -> int:

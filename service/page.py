@@ -57,7 +57,9 @@ def page_router(service: Service) -> APIRouter:
     def read() -> tuple[str, list[dict[str, Any]], list[dict[str, Any]]]:
         with service.database.read.connect() as connection:
             found, _ = alerts_page(connection, state="open", limit=_N_OPEN)
-            opened = "".join(_open_alert(read_alert(data)) for data in found)
+            opened = "".join(_open_alert(read_alert(data)) for data in found) or (
+                "<li class=quiet>No alert is open.</li>"
+            )
             flood = flood_answer(connection)
             if flood is not None:
                 opened = f"<li><strong>{escape(flood['sentence'])}</strong></li>{opened}"
@@ -102,7 +104,6 @@ def _html(
     model: str,
 ) -> str:
     now = format_time(int(time.time()) * 1_000_000_000)
-    open_lines = opened or "<li class=quiet>No alert is open.</li>"
     source_lines = "".join(_source(row, level) for row in sources) or (
         "<li class=quiet>No record has come yet; the README shows how to post one.</li>"
     )
@@ -117,7 +118,7 @@ def _html(
 <p class="quiet">{now}, model {escape(model)}</p>
 <p class="advice">{escape(ADVICE)}</p>
 <h2>Open alerts, latest first</h2>
-<ul>{open_lines}</ul>
+<ul>{opened}</ul>
 <h2>Sources, most sustained first</h2>
 <p class="quiet">Bar: sustained excess in nats; the mark is the level of {level:.2f} nats.</p>
 <ul>{source_lines}</ul>

@@ -17,6 +17,7 @@ from scoring.alerts import (
     Suspect,
     alert_id,
     blank_alert,
+    second_text,
     time_text,
 )
 
@@ -86,3 +87,4 @@ def test_only_scored_alerts_count_against_the_budget() -> None:
 )  # fmt: skip
 def test_times_are_rfc_3339_with_the_decimals_they_have(time_ns: int, text: str) -> None:
     assert time_text(time_ns) == text
+    assert second_text(time_ns) == f"{text[:19]}Z"

@@ -518,6 +518,8 @@ def test_a_flood_is_one_message_and_ends(
         flood = api.get("/alerts").json()["flood"]
         assert flood["alerts"] == 12
         assert flood["sentence"] in api.get("/").text
+        # To the second: a person reads it.
+        assert f"since {flood['since'][:19]}Z; look" in flood["sentence"]
         assert len(alerts(api, state="open")) == 12
     with serve(tmp_path, models, clock, store=store) as api:
         assert api.get("/alerts").json()["flood"] == flood
